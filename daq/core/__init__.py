@@ -1,0 +1,1 @@
+"""Pure: no files, sockets, clock, random numbers, threads, logging or globals."""

@@ -1,0 +1,1 @@
+"""What people look at in a terminal. Reads only."""

@@ -1,0 +1,1 @@
+"""Pluggable instruments: imports serial and Modbus libraries, never daq, never simulator."""

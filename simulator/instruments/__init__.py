@@ -1,0 +1,1 @@
+"""Emulated instruments, with protocol code of their own."""
