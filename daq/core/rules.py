@@ -55,8 +55,10 @@ class Loading(Enum):
 class Conversion:
     """From the instrument's raw number to the channel's own unit.
 
-    In order: thermocouple or Pt100 (raw emf in mV or resistance in ohm to degC), calibration points
-    (raw, value; linear between, ends extended), polynomial (ascending powers), scale and offset.
+    In order: ``raw_scale`` (to mV or ohm, where the instrument speaks V or kohm), thermocouple or Pt100
+    (emf in mV or resistance in ohm to degC), calibration points (raw, value; linear between, ends
+    extended), polynomial (ascending powers), scale and offset. A thermocouple without cold junction is
+    one whose instrument has compensated it already.
     Strain comes out in m/m, extension in mm, temperature in degC, force in N.
     """
 
@@ -68,6 +70,7 @@ class Conversion:
     cold_junction_c: float | None = None
     cold_junction_channel: str = ""
     pt100: bool = False
+    raw_scale: float = 1.0
 
 
 @dataclass(frozen=True, slots=True)
