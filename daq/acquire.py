@@ -25,13 +25,16 @@ from daq.records import TICKS_PER_S, Quality, ScansTaken, Stamp
 from drivers import base
 from drivers.base import Driver, DriverError, IdentityError, LinkError, RawReading
 
-BACKOFF_LEAST_S: Final = 0.2
-BACKOFF_MOST_S: Final = 60.0
+BACKOFF_LEAST_S: Final = 0.1
+BACKOFF_LINK_S: Final = 2.0
+"""Longest pause before a dead link is tried again: a re-plugged adapter is to be back within 3 s."""
+BACKOFF_IDENTITY_S: Final = 60.0
+"""Longest pause before a wrong instrument is asked again: only a person can put that right."""
 POLL_SHARE: Final = 0.9
 """Share of the period that one poll may take; the rest is room for the next instant to begin on time."""
 POLL_MOST_S: Final = 5.0
 LOST_AFTER: Final = 2
-"""Polls in a row without an answer after which a link counts as lost."""
+"""Instants in a row without an answer after which a link counts as lost."""
 
 _QUALITY: Final = {
     base.GOOD: Quality.GOOD,
@@ -155,6 +158,7 @@ class Polling:
     period_ticks: int
     driver: Driver | None = None
     failures: int = 0
+    missed: int = 0
     lost: bool = False
     retry_at: int = 0
 
@@ -212,7 +216,7 @@ class Bus:
 
     def _turn(self, p: Polling, instant: int) -> None:
         if instant < p.retry_at:
-            self._deliver(Polled(p.name, instant, self._clock.stamp(), None))
+            self._missed(p, instant, Quality.BAD_LINK, "not tried again yet")
             return
         before = self._clock.stamp()
         try:
@@ -229,7 +233,153 @@ class Bus:
         if p.lost:
             self._news(p.name, "link_lost", False, "answers again")
             self._news(p.name, "identity_wrong", False, "the configured instrument answers")
-        p.failures, p.lost, p.retry_at = 0, False, 0
+        p.failures, p.missed, p.lost, p.retry_at = 0, 0, False, 0
+        # the reading belongs to the middle of the exchange, to within half its length
+        middle = (after.boot_tick + before.boot_tick) // 2
+        stamp = Stamp(after.utc_tick - (after.boot_tick - middle), middle, after.boot_id)
+        self._deliver(Polled(p.name, instant, stamp, readings))
+
+    def _failed(self, p: Polling, instant: int, error: DriverError) -> None:
+        p.failures += 1
+        wrong = isinstance(error, IdentityError)
+        if wrong or isinstance(error, LinkError) or p.failures >= LOST_AFTER:
+            _close(p)
+        if wrong or p.failures >= LOST_AFTER:
+            most = BACKOFF_IDENTITY_S if wrong else BACKOFF_LINK_S
+            pause = min(most, BACKOFF_LEAST_S * 2.0 ** min(p.failures, 16)) * self._jitter.uniform(0.5, 1.0)
+            p.retry_at = instant + int(pause * TICKS_PER_S * self._clock.speed)
+        if wrong and not p.lost:
+            p.lost = True
+            self._news(p.name, "identity_wrong", True, str(error))
+        self._missed(p, instant, Quality.BAD_IDENTITY if wrong else Quality.BAD_LINK, str(error))
+
+    def _missed(self, p: Polling, instant: int, why: Quality, message: str) -> None:
+        """Say that there is no reading for this instant; the second in a row makes the link lost."""
+        p.missed += 1
+        if p.missed >= LOST_AFTER and not p.lost:
+            p.lost = True
+            self._news(p.name, "link_lost", True, message)
+        self._deliver(Polled(p.name, instant, self._clock.stamp(), None, why))
+
+
+def _close(self, layout: Layout, instant: int) -> None:
+    waiting = self._open[layout.frame]
+    for due in sorted(i for i in waiting if i <= instant):
+        self._emit(_scan(layout, waiting.pop(due)))
+    self._closed[layout.frame] = instant
+
+
+def _scan(layout: Layout, polled: Mapping[str, Polled]) -> ScansTaken:
+    values = np.full((1, len(layout.columns)), np.nan)
+    quality = np.full((1, len(layout.columns)), int(Quality.BAD_LINK), np.uint8)
+    found = {
+        name: {r.name: r for r in p.readings} if p.readings is not None else p.why
+        for name, p in polled.items()
+    }
+    for j, (instrument, reading) in enumerate(layout.sources):
+        given = found.get(instrument)
+        if isinstance(given, dict):
+            r = given.get(reading)
+            quality[0, j] = Quality.BAD_MISSING if r is None else _QUALITY[r.quality]
+            values[0, j] = math.nan if r is None else r.value
+        elif given is not None:
+            quality[0, j] = given
+    answered = [p.stamp for p in polled.values() if p.readings is not None] or [
+        p.stamp for p in polled.values()
+    ]
+    utc = sum(s.utc_tick for s in answered) // len(answered)
+    boot = sum(s.boot_tick for s in answered) // len(answered)
+    return ScansTaken(
+        layout.frame, layout.columns, answered[0].boot_id,
+        np.array([utc], np.int64), np.array([boot], np.int64), values, quality,
+    )  # fmt: skip
+
+
+@dataclass
+class Polling:
+    """One instrument on a bus: how to make its driver, and how often to ask."""
+
+    name: str
+    make: Callable[[], Driver]
+    period_ticks: int
+    driver: Driver | None = None
+    failures: int = 0
+    missed: int = 0
+    lost: bool = False
+    retry_at: int = 0
+
+
+LinkNews = Callable[[str, str, bool, str], None]
+"""(instrument, condition, active, message): link_lost and identity_wrong."""
+
+
+class Bus:
+    """The poll loop of one bus. ``run`` is the body of its thread; ``beat`` counts its turns."""
+
+    def __init__(
+        self,
+        name: str,
+        polled: Sequence[Polling],
+        clock: Clock,
+        deliver: Callable[[Polled], None],
+        news: LinkNews,
+        seed: int = 0,
+    ) -> None:
+        self.name = name
+        self.beat = 0
+        self.worst_late_s = 0.0
+        self._polled = list(polled)
+        self._clock = clock
+        self._deliver = deliver
+        self._news = news
+        self._jitter = random.Random(f"{name}/{seed}")
+
+    @property
+    def longest_turn_s(self) -> float:
+        """Real seconds after which a turn of this loop is overdue beyond doubt."""
+        period = max(p.period_ticks for p in self._polled) / TICKS_PER_S / self._clock.speed
+        return period + len(self._polled) * (POLL_MOST_S + 1.0) + 5.0
+
+    def run(self, stop: threading.Event) -> None:
+        """Poll until ``stop`` is set; drivers are closed on the way out, whatever happens."""
+        try:
+            while not stop.is_set():
+                now = self._clock.stamp().boot_tick
+                instant = min(now - now % p.period_ticks + p.period_ticks for p in self._polled)
+                if self._clock.wait_until(instant, stop):
+                    break
+                self.worst_late_s = max(self.worst_late_s, self._late_s(instant))
+                for p in self._polled:
+                    if instant % p.period_ticks == 0 and not stop.is_set():
+                        self._turn(p, instant)
+                self.beat += 1
+        finally:
+            for p in self._polled:
+                _close(p)
+
+    def _late_s(self, instant: int) -> float:
+        return (self._clock.stamp().boot_tick - instant) / TICKS_PER_S / self._clock.speed
+
+    def _turn(self, p: Polling, instant: int) -> None:
+        if instant < p.retry_at:
+            self._missed(p, instant, Quality.BAD_LINK, "not tried again yet")
+            return
+        before = self._clock.stamp()
+        try:
+            if p.driver is None:
+                p.driver = p.make()
+                p.driver.open()
+                p.driver.identify()
+            real_period = p.period_ticks / TICKS_PER_S / self._clock.speed
+            readings = p.driver.poll(max(0.05, min(POLL_MOST_S, POLL_SHARE * real_period)))
+        except DriverError as error:
+            self._failed(p, instant, error)
+            return
+        after = self._clock.stamp()
+        if p.lost:
+            self._news(p.name, "link_lost", False, "answers again")
+            self._news(p.name, "identity_wrong", False, "the configured instrument answers")
+        p.failures, p.missed, p.lost, p.retry_at = 0, 0, False, 0
         # the reading belongs to the middle of the exchange, to within half its length
         middle = (after.boot_tick + before.boot_tick) // 2
         stamp = Stamp(after.utc_tick - (after.boot_tick - middle), middle, after.boot_id)
