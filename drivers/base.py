@@ -8,16 +8,18 @@ instrument's bus and in this order::
     driver.poll(deadline_s)        # as often as wanted; one RawReading for every name in ``yields``
     driver.close()                 # always, in a ``finally``; may be called twice
 
-Every call returns within its deadline, whatever the wire does. A reading that could not be
+Every call returns in bounded time, whatever the wire does: ``poll`` within ``deadline_s`` seconds
+of the call, the others within a few of the driver's own time-outs. A reading that could not be
 had is a RawReading with ``value`` NaN and a ``quality`` that says why; an exception means
 that the link (LinkError) or the instrument (InstrumentError) needs the remedy its name tells.
-A value is never guessed, carried over from the last poll, or taken from a late reply.
+A value is never guessed, carried over from the last poll, or taken from a late reply. ``poll``
+without a successful ``identify`` since ``open`` is refused with IdentityError.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol, runtime_checkable
 
@@ -27,7 +29,14 @@ class DriverError(Exception):
 
 
 class SetupError(DriverError):
-    """The driver's options are wrong (user: fix the settings)."""
+    """The driver's options are wrong (user: fix the settings).
+
+    ``problems`` holds every mistake as (path inside the options, "got ..., need ...").
+    """
+
+    def __init__(self, problems: str | Sequence[tuple[str, str]]) -> None:
+        self.problems = [("", problems)] if isinstance(problems, str) else list(problems)
+        super().__init__("; ".join(f"{path}: {text}" if path else text for path, text in self.problems))
 
 
 class LinkError(DriverError):
@@ -86,7 +95,11 @@ class Identity:
 
 @runtime_checkable
 class Driver(Protocol):
-    """What every driver is. Construct with ``cls(options)``; bad options raise SetupError."""
+    """What every driver is. Construct with ``cls(options)``; bad options raise SetupError.
+
+    ``check_options`` returns every mistake in the options as (path, message), none if they
+    are fit; it opens nothing, so that settings can be checked on any machine.
+    """
 
     yields: tuple[str, ...]
     """Names of the readings that each poll returns, in this order."""
@@ -94,6 +107,8 @@ class Driver(Protocol):
     """True where the instrument talks by itself and poll takes what it has said since."""
 
     def __init__(self, options: Mapping[str, Any]) -> None: ...
+    @classmethod
+    def check_options(cls, options: Mapping[str, Any]) -> list[tuple[str, str]]: ...
     def open(self) -> None: ...
     def identify(self) -> Identity: ...
     def poll(self, deadline_s: float) -> list[RawReading]: ...

@@ -1,0 +1,277 @@
+"""Ask over one wire and believe the answer to that question and to no other.
+
+Most laboratory protocols number neither questions nor answers. If an answer comes late, or twice,
+every later answer can be off by one and look perfectly sound. So a conversation is either *trusted*
+or *in doubt*:
+
+* Trusted: before each question the input must be empty. Exactly one line must come back, within
+  ``timeout_s``, and it must fit the question. Anything else puts the conversation in doubt.
+* In doubt: nothing is asked until ``longest_reply_s`` after the last question was sent and until the
+  line is silent. What arrives is thrown away. Then a canary question must be answered as it should. If
+  the canary's answer could be mistaken for that of another question, silence for ``longest_reply_s``
+  must follow once more.
+
+``voice`` names what an answer can be told apart by: questions of one voice have answers that could be
+taken for one another, and are sent at least ``guard_s`` apart. With ``guard_s`` = ``longest_reply_s``
+no answer that arrives within ``longest_reply_s`` of its own question, be it the first or a repeated one,
+can be attributed to another question, whatever else is lost or garbled. With less, a repeated answer
+that comes later than ``guard_s`` and between another question and its answer cannot be told from that one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from enum import Enum
+from typing import Final, Generic, TypeVar
+
+from drivers.base import GARBLED, MISSING, InstrumentError, LinkError
+from drivers.lines import Garbled, LineCodec
+from drivers.options import OptionReader
+from drivers.transport import CHUNK, Transport
+
+T = TypeVar("T")
+T_co = TypeVar("T_co", covariant=True)
+GAP_S: Final = 0.05
+"""Silence after the last stray byte before it counts as the end of what was being sent."""
+FAILED_POLLS: Final = 2
+"""Polls in a row without any answer after which the link needs a remedy."""
+_BLANK: Final = b"\r\n \t"
+
+
+class NotTheAnswer(Exception):  # noqa: N818 - a verdict, not a failure of the program
+    """Raised by a question's ``read``: the line does not answer it."""
+
+
+@dataclass(frozen=True, slots=True)
+class Question(Generic[T_co]):
+    """What is sent, and how its answer is read (``read`` raises NotTheAnswer for any other line)."""
+
+    request: bytes
+    read: Callable[[str], T_co]
+    voice: str = ""
+    echoed: str = ""
+    """The line that the instrument sends back before its answer, where it repeats what it was sent."""
+
+
+@dataclass(frozen=True, slots=True)
+class NoAnswer:
+    """Why there is no answer; ``asked`` False if the question was not even sent."""
+
+    quality: str
+    why: str
+    asked: bool = True
+
+
+_OUT_OF_STEP: Final = NoAnswer(MISSING, "waiting for the line to come back into step", asked=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Pace:
+    """The times of a conversation [s]."""
+
+    timeout_s: float
+    longest_reply_s: float
+    guard_s: float
+
+
+def read_pace(options: OptionReader, timeout_s: float, guard_s: float) -> Pace:
+    """Check ``timeout_s``, ``longest_reply_s`` (default: twice the time-out) and ``guard_s``."""
+    timeout_s = options.number("timeout_s", timeout_s, least=0.005, most=60.0)
+    longest_s = options.number("longest_reply_s", 2.0 * timeout_s, least=0.005, most=600.0)
+    if longest_s < timeout_s:
+        options.wrong("longest_reply_s", f"got {longest_s:g}, need at least timeout_s ({timeout_s:g})")
+    guard_s = options.number("guard_s", min(guard_s, longest_s), least=0.0, most=600.0)
+    return Pace(timeout_s, longest_s, guard_s)
+
+
+class _Trust(Enum):
+    YES = "yes"
+    QUIET = "silence, then the canary"
+    SETTLE = "silence, then trusted"
+
+
+class Conversation:
+    """The dialogue over one transport. Not for several threads."""
+
+    def __init__(self, port: Transport, codec: LineCodec, pace: Pace) -> None:
+        self.port = port
+        self.pace = pace
+        self.canaries: Sequence[Question[object]] = ()
+        """Questions fit to show that the dialogue is in step; the next one is tried when one fails."""
+        self.failures = 0
+        """Questions that were not answered as they should, and lines too noisy to ask at all."""
+        self.resyncs = 0
+        """How often the conversation came into doubt."""
+        self._failures_seen = 0
+        self._failed_polls = 0
+        self._codec = codec
+        self._trust = _Trust.SETTLE
+        self._quiet_until_s = 0.0
+        self._sent_s: dict[str, float] = {}
+
+    def begin(self) -> None:
+        """Start anew on a port just opened; an answer to somebody before us may still be on its way."""
+        self._codec.reset()
+        self._trust = _Trust.SETTLE
+        self._quiet_until_s = self.port.clock.now_s() + self.pace.longest_reply_s
+        self._sent_s.clear()
+        self._failed_polls = 0
+
+    def introduce(self, question: Question[T], until_s: float) -> T | NoAnswer:
+        """Ask a question whose answer no other question has: as good as a canary if it is right."""
+        answer = self._exchange(question, until_s)
+        if isinstance(answer, NoAnswer):
+            if self.settle(until_s):
+                answer = self._exchange(question, until_s)
+            if isinstance(answer, NoAnswer):
+                return answer
+        self._trust = _Trust.YES
+        return answer
+
+    def ask(self, question: Question[T], until_s: float) -> T | NoAnswer:
+        """Return the answer, or why there is none, before ``until_s``. LinkError when the wire fails."""
+        answer: T | NoAnswer = _OUT_OF_STEP
+        for _ in range(2):  # a second try only if the first found the line in doubt before it asked
+            if not self._in_step(until_s):
+                return _OUT_OF_STEP
+            answer = self._exchange(question, until_s)
+            if not isinstance(answer, NoAnswer) or answer.asked or self._trust is _Trust.YES:
+                break
+        return answer
+
+    def end_of_poll(self, troubles: Sequence[NoAnswer], questions: int) -> None:
+        """Judge a poll by what went wrong with its questions.
+
+        Raises LinkError (silence) or InstrumentError (garbage) from the second poll in a row on in which
+        something was tried and nothing was answered.
+        """
+        tried, self._failures_seen = self.failures > self._failures_seen, self.failures
+        if len(troubles) < questions:
+            self._failed_polls = 0
+            return
+        self._failed_polls += tried
+        if self._failed_polls >= FAILED_POLLS:
+            text = f"{self.port.name}: {troubles[0].why}"
+            garbled = any(trouble.quality == GARBLED for trouble in troubles)
+            raise InstrumentError(text) if garbled else LinkError(text)
+
+    def tell(self, command: bytes, until_s: float) -> None:
+        """Send what has no answer."""
+        self.port.write(command, until_s)
+
+    def settle(self, until_s: float) -> bool:
+        """Wait for the silence that trust needs, without a canary; False if the time was too short."""
+        if self._trust is _Trust.YES:
+            return True
+        return self._silence(until_s)
+
+    def _in_step(self, until_s: float) -> bool:
+        clock = self.port.clock
+        while self._trust is not _Trust.YES:
+            if not self._silence(until_s):
+                return False
+            if self._trust is _Trust.SETTLE or not self.canaries:
+                self._trust = _Trust.YES
+                return True
+            canary, *others = self.canaries
+            answer = self._exchange(canary, until_s)
+            if isinstance(answer, NoAnswer):
+                if answer.asked:
+                    self.canaries = [*others, canary]
+                return False
+            if canary.voice == IDENTITY_VOICE:
+                self._trust = _Trust.YES
+            else:
+                self._trust = _Trust.SETTLE
+                self._quiet_until_s = clock.now_s() + self.pace.longest_reply_s
+        return True
+
+    def _silence(self, until_s: float) -> bool:
+        """Throw away what arrives until the line has been silent long enough."""
+        clock = self.port.clock
+        noisy = False
+        while True:
+            stray = self._stray(min(self._quiet_until_s, until_s))
+            now_s = clock.now_s()
+            if stray:
+                noisy = True
+                self._trust = _Trust.QUIET
+                self._quiet_until_s = max(self._quiet_until_s, now_s + min(GAP_S, self.pace.longest_reply_s))
+            elif now_s >= self._quiet_until_s:
+                return True
+            if now_s >= until_s:
+                self.failures += noisy  # a babbling line gives no chance to ask
+                return False
+
+    def _stray(self, until_s: float) -> bool:
+        """Take what arrives up to ``until_s``, or is there; True as soon as it is more than blanks."""
+        for _ in range(256):
+            data = self.port.read(CHUNK, until_s)
+            if not data:
+                return False
+            if data.strip(_BLANK):
+                self.port.flush_input()
+                return True
+        return True
+
+    def _doubt(self, sent_s: float) -> None:
+        self.resyncs += self._trust is _Trust.YES
+        self.failures += 1
+        self._trust = _Trust.QUIET
+        self._quiet_until_s = max(sent_s + self.pace.longest_reply_s, self.port.clock.now_s() + GAP_S)
+
+    def _exchange(self, question: Question[T], until_s: float) -> T | NoAnswer:
+        clock, pace = self.port.clock, self.pace
+        free_s = self._sent_s.get(question.voice, -1e300) + pace.guard_s
+        if free_s >= until_s or clock.now_s() >= until_s:
+            return NoAnswer(MISSING, "no time left to ask", asked=False)
+        if self._stray(free_s):
+            self._doubt(max(self._sent_s.values(), default=clock.now_s()))
+            return NoAnswer(GARBLED, "bytes came that nobody asked for", asked=False)
+        self._codec.reset()
+        self.port.write(question.request, min(until_s, clock.now_s() + pace.timeout_s))
+        sent_s = clock.now_s()
+        self._sent_s[question.voice] = sent_s
+        try:
+            answer = question.read(self._one_line(question, min(until_s, sent_s + pace.timeout_s)))
+        except _Silent as silent:
+            self._doubt(sent_s)
+            return NoAnswer(GARBLED if self._codec.midway else MISSING, str(silent))
+        except NotTheAnswer as mismatch:
+            self._doubt(sent_s)
+            return NoAnswer(GARBLED, str(mismatch))
+        return answer
+
+    def _one_line(self, question: Question[T], until_s: float) -> str:
+        echo_due = bool(question.echoed)
+        while True:
+            data = self.port.read(CHUNK, until_s)
+            if not data:
+                raise _Silent(f"no answer to {question.request!r} in time")
+            events = self._codec.feed(data)
+            if events and echo_due:
+                first = events.pop(0)
+                if isinstance(first, Garbled) or first.text.strip() != question.echoed.strip():
+                    raise NotTheAnswer(f"got {_show(first)}, need the echo {question.echoed!r}")
+                echo_due = False
+            if not events:
+                continue
+            if isinstance(events[0], Garbled):
+                raise NotTheAnswer(f"got {_show(events[0])}")
+            if len(events) > 1 or self._codec.midway:
+                raise NotTheAnswer(f"got more than one line in answer to {question.request!r}")
+            return events[0].text
+
+
+IDENTITY_VOICE: Final = "identity"
+"""The voice of a question whose answer cannot be mistaken for a reading."""
+
+
+class _Silent(Exception):  # noqa: N818 - as above
+    pass
+
+
+def _show(event: object) -> str:
+    text = f"{event.raw!r} ({event.why})" if isinstance(event, Garbled) else repr(event)
+    return text if len(text) <= 120 else text[:117] + "..."

@@ -1,0 +1,537 @@
+r"""Instruments that send lines of text: asked, or talking by themselves. Serial or TCP.
+
+A dial gauge that answers ``D`` with ``+01.2345,-00.3210``::
+
+    driver: textline
+    port: /dev/serial/by-id/usb-gauge-port0    # or socket://192.168.1.20:4001
+    baud: 9600
+    frame: 7E1                # data bits, parity, stop bits; default 8N1
+    ask: "D"                  # sent with the terminator behind it
+    terminator: "\r\n"        # ends each line; ask_terminator where the question ends differently
+    timeout_s: 0.5            # how long to wait for an answer
+    longest_reply_s: 1.0      # after this time no late answer can come any more
+    identity: {ask: "*IDN?", reply: "GAUGE 7.*"}     # or {declared: "gauge 1234, cannot say"}
+    yields:
+      left: 1                 # the first number between commas
+      right: 2
+
+Six indicators on one two-wire bus, each asked by its unit number::
+
+    ask: "#{unit}"
+    reply: '>(?P<echo>\d\d)(?P<value>.+)'    # a regular expression for the entire line
+    echo: "{unit}"            # what the group named echo must be: the answer names its channel
+    yields:
+      t1: {unit: "01"}
+      t2: {unit: "02"}
+
+An instrument that talks by itself, fixed columns, decimal comma, checksum::
+
+    listen: true
+    decimal_comma: true
+    checksum: {kind: xor8, mark: "*", skip: 1}
+    silence_s: 10             # nothing heard for so long: the link is lost
+    yields:
+      left:  {columns: [3, 10]}      # from character 3 to character 10, counted from 1
+      break: {columns: [12, 15], states: {OPEN: 1, SHUT: 0}}
+
+Every key of one of the ``yields`` may stand outside as the default of all. Where from: ``group`` (of
+``reply``; without any key the group named ``value``), ``field`` (between ``separator``; default a comma, a
+semicolon with ``decimal_comma``), ``columns``. ``words`` adds to what instruments write instead of a number:
+``words: {"------": overload, "EEEE": open_circuit}``. Readings with the same question share one.
+
+A digit that the wire changed into another digit is seen only by parity (``frame``) or a checksum.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any, Final
+
+from drivers.base import (
+    GARBLED,
+    GOOD,
+    MISSING,
+    QUALITIES,
+    Identity,
+    IdentityError,
+    LinkError,
+    RawReading,
+    no_reading,
+)
+from drivers.conversation import (
+    IDENTITY_VOICE,
+    Conversation,
+    NoAnswer,
+    NotTheAnswer,
+    Pace,
+    Question,
+    read_pace,
+)
+from drivers.lines import CHECKSUMS, MAX_LINE, WORDS, Checksum, Line, LineCodec, parse_number
+from drivers.options import OptionReader, must_be_fit
+from drivers.transport import CHUNK, Clock, Transport, read_port
+
+CONNECT_S: Final = 2.0
+REST_MOST: Final = 8
+"""A unit that stays silent is asked in every eighth poll at least."""
+TTY_BUFFER: Final = 4000
+"""Bytes waiting from which on a serial port's buffer (4096 in Linux) may have overflowed."""
+
+Value = tuple[float, str]
+
+
+# ------------------------------------------------------------------------------ codec, no I/O
+
+
+@dataclass(frozen=True, slots=True)
+class Pick:
+    """Where one reading stands in a line, and how it is read."""
+
+    name: str
+    group: str = ""
+    field: int = 0
+    columns: tuple[int, int] | None = None
+    states: Mapping[str, float] | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Message:
+    """One line and the readings in it; ``ask`` empty where the instrument talks by itself."""
+
+    ask: str
+    reply: re.Pattern[str] | None
+    separator: str
+    echo: str
+    picks: tuple[Pick, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Manner:
+    """How this instrument writes."""
+
+    decimal_comma: bool
+    words: Mapping[str, str]
+    checksum: Checksum | None
+
+
+def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
+    """Return name -> (value, quality) of all readings in the line.
+
+    Raises NotTheAnswer if the line is not as ``message`` says. A field that is no number is
+    GARBLED by itself; the others in the line stand.
+    """
+    if manner.checksum is not None:
+        body = manner.checksum.unseal(text)
+        if body is None:
+            raise NotTheAnswer(f"got {_short(text)}, its checksum is wrong")
+        text = body
+    found = None
+    if message.reply is not None:
+        found = message.reply.fullmatch(text)
+        if found is None:
+            raise NotTheAnswer(f"got {_short(text)}, need a line like {message.reply.pattern!r}")
+        if message.echo and found["echo"] != message.echo:
+            raise NotTheAnswer(f"got {_short(text)}, the answer of {found['echo']!r}, need {message.echo!r}")
+    fields = text.split(message.separator) if any(p.field for p in message.picks) else []
+    values: dict[str, Value] = {}
+    for pick in message.picks:
+        if pick.columns is not None:
+            if len(text) < pick.columns[1]:
+                raise NotTheAnswer(f"got {_short(text)}, need at least {pick.columns[1]} characters")
+            piece: str | None = text[pick.columns[0] - 1 : pick.columns[1]]
+        elif pick.field:
+            if len(fields) < pick.field:
+                raise NotTheAnswer(f"got {_short(text)}, need at least {pick.field} fields")
+            piece = fields[pick.field - 1]
+        else:
+            piece = found[pick.group] if found is not None else text
+        values[pick.name] = (float("nan"), MISSING) if piece is None else _read(piece, pick, manner)
+    return values
+
+
+def _read(piece: str, pick: Pick, manner: Manner) -> Value:
+    if pick.states is not None:
+        state = pick.states.get(piece.strip())
+        return (float("nan"), GARBLED) if state is None else (state, GOOD)
+    value = parse_number(piece, decimal_comma=manner.decimal_comma, words=manner.words)
+    return (float("nan"), GARBLED) if value is None else value
+
+
+# -------------------------------------------------------------------------------- the options
+
+
+@dataclass(frozen=True, slots=True)
+class _Options:
+    make_port: Callable[[Clock | None], Transport]
+    serial: bool
+    yields: tuple[str, ...]
+    messages: tuple[Message, ...]
+    manner: Manner
+    pace: Pace
+    terminator: bytes
+    ask_terminator: str
+    encoding: str
+    seal_requests: bool
+    command_echo: bool
+    identity_ask: str
+    identity_reply: re.Pattern[str] | None
+    declared: str
+    listen: bool
+    silence_s: float
+    connect_timeout_s: float
+
+
+_PICK_KEYS: Final = ("ask", "unit", "reply", "separator", "echo", "group", "field", "columns", "states")
+
+
+def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
+    top = OptionReader(options)
+    make_port = read_port(top)
+    listen = top.flag("listen", False)
+    comma = top.flag("decimal_comma", False)
+    encoding = top.choice("encoding", ("ascii", "latin-1"), "ascii")
+    terminator = top.text("terminator", "\r\n", most=4)
+    ask_terminator = top.text("ask_terminator", terminator, most=4, empty=True)
+    for key in _PICK_KEYS:
+        top.has(key)  # may stand outside as the default of all
+    readings = top.parts("yields", number="field", text="group")
+    messages = _messages(top, readings, listen, ";" if comma else ",")
+    voices = {m.echo or "" for m in messages}
+    guard_s = 0.0 if len(messages) == len(voices) else 0.1
+    pace = read_pace(top, 0.5, guard_s)
+    manner = Manner(comma, _words(top), _checksum(top))
+    ask, reply, declared = _identity(top, listen)
+    read = _Options(
+        make_port, not top.text("port", "/").startswith("socket:"), tuple(readings), messages, manner, pace,
+        terminator.encode("latin-1", "replace"), ask_terminator, encoding,
+        top.flag("request_checksum", False), top.flag("command_echo", False), ask, reply, declared, listen,
+        top.number("silence_s", 10.0, least=0.1, most=1e6),
+        top.number("connect_timeout_s", CONNECT_S, least=0.05, most=60.0),
+    )  # fmt: skip
+    if read.seal_requests and manner.checksum is None:
+        top.wrong("request_checksum", "got true, need a checksum as well")
+    return read, top.found()
+
+
+def _messages(
+    top: OptionReader, readings: Mapping[str, OptionReader], listen: bool, separator: str
+) -> tuple[Message, ...]:
+    grouped: dict[tuple[str, str, str, str], tuple[re.Pattern[str] | None, list[Pick]]] = {}
+    for name, own in readings.items():
+        source = {key: own if own.has(key) else top for key in _PICK_KEYS}
+        unit = source["unit"].text("unit", "", most=20, empty=True)
+        fill = _filler(unit)
+        ask = fill(source["ask"].text("ask", "", empty=True))
+        if bool(ask) == listen:
+            own.wrong(
+                "ask", "must not be there with listen: true" if listen else "is missing, need what to send"
+            )
+        reply = None
+        if source["reply"].has("reply"):
+            reply = source["reply"].pattern("reply", None, _filler(re.escape(unit)))
+        echo = fill(source["echo"].text("echo", "", empty=True))
+        if echo and (reply is None or "echo" not in reply.groupindex):
+            own.wrong("echo", f"got {echo!r}, need a reply with a group (?P<echo>...)")
+            reply = None
+        split = source["separator"].text("separator", separator, most=8)
+        pick = _pick(name, own, source, reply)
+        key = (ask, reply.pattern if reply is not None else "", split, echo)
+        grouped.setdefault(key, (reply, []))[1].append(pick)
+        own.done()
+    return tuple(
+        Message(ask, reply, split, echo if reply is not None else "", tuple(picks))
+        for (ask, _, split, echo), (reply, picks) in grouped.items()
+    )
+
+
+def _filler(unit: str) -> Callable[[str], str]:
+    return lambda text: text.replace("{unit}", unit)
+
+
+def _pick(
+    name: str, own: OptionReader, source: Mapping[str, OptionReader], reply: re.Pattern[str] | None
+) -> Pick:
+    where = [key for key in ("group", "field", "columns") if own.has(key)]
+    if not where:
+        where = [key for key in ("group", "field", "columns") if source[key].has(key)]
+    if len(where) > 1:
+        own.wrong("", f"got {' and '.join(where)}, need one of them")
+    group, number, columns = "", 0, None
+    if where[:1] == ["field"]:
+        number = source["field"].whole("field", None, least=1, most=200)
+    elif where[:1] == ["columns"]:
+        columns = _columns(source["columns"])
+    elif reply is not None:
+        group = source["group"].text("group", "value")
+        if group not in reply.groupindex:
+            have = ", ".join(reply.groupindex) or "none"
+            own.wrong("group", f"got {group!r}, need a group of the reply (it has {have})")
+    elif where:
+        own.wrong("group", "got a group, need a reply with that group")
+    return Pick(name, group, number, columns, _states(source["states"]))
+
+
+def _columns(options: OptionReader) -> tuple[int, int]:
+    got = options.raw("columns")
+    fits = isinstance(got, list) and len(got) == 2 and all(type(x) is int for x in got)
+    if not fits or not 1 <= got[0] <= got[1] <= MAX_LINE:
+        options.wrong("columns", f"got {got!r}, need [first, last], counted from 1")
+        return 1, 1
+    return got[0], got[1]
+
+
+def _states(options: OptionReader) -> dict[str, float] | None:
+    if not options.has("states"):
+        return None
+    inside = options.part("states")
+    assert inside is not None
+    return {word: inside.number(word, None, least=-1e9, most=1e9) for word in inside.keys}
+
+
+def _words(top: OptionReader) -> dict[str, str]:
+    words = dict(WORDS)
+    inside = top.part("words")
+    if inside is not None:
+        for word in inside.keys:
+            words[word.strip().upper()] = inside.choice(word, sorted(QUALITIES - {GOOD}), GARBLED)
+    return words
+
+
+def _checksum(top: OptionReader) -> Checksum | None:
+    inside = top.part("checksum")
+    if inside is None:
+        return None
+    checksum = Checksum(
+        inside.choice("kind", CHECKSUMS), inside.text("mark", "", most=4, empty=True),
+        inside.whole("skip", 0, least=0, most=16),
+    )  # fmt: skip
+    inside.done()
+    return checksum
+
+
+def _identity(top: OptionReader, listen: bool) -> tuple[str, re.Pattern[str] | None, str]:
+    inside = top.part("identity")
+    if inside is None:
+        top.wrong(
+            "identity", 'is missing, need {ask: ..., reply: ...}, or {declared: "..."} where it cannot say'
+        )
+        return "", None, ""
+    if inside.has("declared"):
+        declared = inside.text("declared")
+        inside.done()
+        return "", None, declared
+    ask = "" if listen else inside.text("ask")
+    reply = inside.pattern("reply")
+    inside.done()
+    return ask, reply, ""
+
+
+# --------------------------------------------------------------------------------- the driver
+
+
+class TextLine:
+    """A driver for instruments that send lines of text; options as at the head of this module."""
+
+    def __init__(
+        self, options: Mapping[str, Any], *, port: Transport | None = None, clock: Clock | None = None
+    ) -> None:
+        self._options, problems = _read_options(options)
+        must_be_fit(problems)
+        o = self._options
+        self.yields: tuple[str, ...] = o.yields
+        self.listens: bool = o.listen
+        self._port = o.make_port(clock) if port is None else port
+        self._codec = LineCodec(o.terminator, encoding=o.encoding)
+        self._talk = Conversation(self._port, self._codec, o.pace)
+        self._questions = [(m, self._question(m)) for m in o.messages]
+        self._silent: dict[int, int] = {}
+        self._rest: dict[int, int] = {}
+        self._identified = False
+        self._heard_s = 0.0
+
+    @classmethod
+    def check_options(cls, options: Mapping[str, Any]) -> list[tuple[str, str]]:
+        return _read_options(options)[1]
+
+    def open(self) -> None:
+        self._identified = False
+        self._port.open(self._port.clock.now_s() + self._options.connect_timeout_s)
+        self._talk.begin()
+        self._silent.clear()
+        self._rest.clear()
+        self._codec.reset(synced=not self.listens)
+        self._heard_s = self._port.clock.now_s()
+
+    def close(self) -> None:
+        self._identified = False
+        self._port.close()
+
+    def identify(self) -> Identity:
+        o, clock = self._options, self._port.clock
+        if o.declared:
+            if not self.listens:
+                self._talk.settle(clock.now_s() + 2.0 * o.pace.longest_reply_s)
+                self._talk.canaries = [question for _, question in self._questions]
+            self._identified = True
+            return Identity(o.declared, declared=True)
+        assert o.identity_reply is not None
+        heard: list[str] = []
+        if self.listens:
+            text = self._overhear(o.identity_reply, heard)
+        else:
+            text = self._introduction(o.identity_reply, heard)
+        if text is None:
+            if heard:
+                raise IdentityError(
+                    f"{self._port.name}: got {_short(heard[-1])}, "
+                    f"need an identity like {o.identity_reply.pattern!r}"
+                )
+            raise LinkError(f"{self._port.name}: the instrument does not say who it is")
+        self._identified = True
+        return Identity(text)
+
+    def _introduction(self, wanted: re.Pattern[str], heard: list[str]) -> str | None:
+        def read(line: str) -> str:
+            text = self._unsealed(line).strip()
+            heard.append(text)
+            if not wanted.fullmatch(text):
+                raise NotTheAnswer(f"got {_short(text)}, need {wanted.pattern!r}")
+            return text
+
+        pace = self._options.pace
+        question = Question(
+            self._request(self._options.identity_ask),
+            read,
+            IDENTITY_VOICE,
+            self._echoed(self._options.identity_ask),
+        )
+        self._talk.canaries = [question]
+        patience_s = 2.0 * (pace.timeout_s + pace.longest_reply_s)
+        answer = self._talk.introduce(question, self._port.clock.now_s() + patience_s)
+        return None if isinstance(answer, NoAnswer) else answer
+
+    def _overhear(self, wanted: re.Pattern[str], heard: list[str]) -> str | None:
+        until_s = self._port.clock.now_s() + min(self._options.silence_s, 5.0)
+        while True:
+            data = self._port.read(CHUNK, until_s)
+            if not data:
+                return None
+            for event in self._codec.feed(data):
+                if isinstance(event, Line):
+                    heard.append(event.text)
+                    if wanted.fullmatch(event.text.strip()):
+                        return event.text.strip()
+
+    def poll(self, deadline_s: float) -> list[RawReading]:
+        if not self._identified:
+            raise IdentityError(f"{self._port.name}: got a poll, need identify() after open() first")
+        until_s = self._port.clock.now_s() + deadline_s
+        values = self._listen(until_s) if self.listens else self._ask_all(until_s)
+        return [
+            no_reading(name, quality) if quality != GOOD else RawReading(name, value)
+            for name, (value, quality) in ((name, values[name]) for name in self.yields)
+        ]
+
+    def _ask_all(self, until_s: float) -> dict[str, Value]:
+        values: dict[str, Value] = {}
+        troubles: list[NoAnswer] = []
+        # units that were silent last time come last, so that they take nobody else's time
+        for i in sorted(range(len(self._questions)), key=lambda i: i in self._silent):
+            message, question = self._questions[i]
+            if self._rest.get(i, 0) > 0:
+                self._rest[i] -= 1
+                answer: dict[str, Value] | NoAnswer = NoAnswer(
+                    MISSING, "not asked: silent for several polls", False
+                )
+            else:
+                answer = self._talk.ask(question, until_s)
+            if isinstance(answer, NoAnswer):
+                self._note_silence(i, answer)
+                troubles.append(answer)
+                values |= {pick.name: (float("nan"), answer.quality) for pick in message.picks}
+            else:
+                self._silent.pop(i, None)
+                values |= answer
+        self._talk.end_of_poll(troubles, len(self._questions))
+        return values
+
+    def _note_silence(self, i: int, answer: NoAnswer) -> None:
+        if answer.asked and answer.quality == MISSING:
+            self._silent[i] = self._silent.get(i, 0) + 1
+            if len(self._questions) > 1 and self._silent[i] >= 2:
+                self._rest[i] = min(REST_MOST, 2 ** (self._silent[i] - 1)) - 1
+
+    def _listen(self, until_s: float) -> dict[str, Value]:
+        """Take the last line of each kind that was heard since the last poll, or wait for one."""
+        clock = self._port.clock
+        values: dict[str, Value] = {}
+        garbled = False
+        waiting = 0
+        while True:
+            data = self._port.read(CHUNK, -1.0)
+            if not data:
+                if len(values) == len(self.yields):
+                    break
+                data = self._port.read(CHUNK, until_s)
+                if not data:
+                    break
+                waiting = -1
+            elif waiting >= 0:
+                waiting += len(data)
+                if self._options.serial and waiting >= TTY_BUFFER:
+                    self._start_afresh(until_s)
+                    values.clear()
+                    waiting = -1
+                    continue
+            for event in self._codec.feed(data):
+                heard = self._understand(event.text) if isinstance(event, Line) else None
+                garbled |= heard is None
+                values |= heard or {}
+            if clock.now_s() >= until_s:
+                break
+        if values:
+            self._heard_s = clock.now_s()
+        elif clock.now_s() - self._heard_s >= self._options.silence_s:
+            silent_s = clock.now_s() - self._heard_s
+            raise LinkError(f"{self._port.name}: no line as configured was heard for {silent_s:.1f} s")
+        gone = (float("nan"), GARBLED if garbled else MISSING)
+        return {name: values.get(name, gone) for name in self.yields}
+
+    def _start_afresh(self, until_s: float) -> None:
+        """The port's buffer was full: what is in it is old and may have a hole in a line's middle."""
+        end_s = min(until_s, self._port.clock.now_s() + 0.1)
+        while self._port.read(CHUNK, end_s):
+            pass
+        self._codec.reset(synced=False)
+
+    def _understand(self, text: str) -> dict[str, Value] | None:
+        for message in self._options.messages:
+            try:
+                return read_line(text, message, self._options.manner)
+            except NotTheAnswer:
+                continue
+        return None
+
+    def _question(self, message: Message) -> Question[dict[str, Value]]:
+        def read(line: str) -> dict[str, Value]:
+            return read_line(line, message, self._options.manner)
+
+        return Question(self._request(message.ask), read, message.echo, self._echoed(message.ask))
+
+    def _request(self, ask: str) -> bytes:
+        o = self._options
+        sealed = o.manner.checksum.seal(ask) if o.seal_requests and o.manner.checksum else ask
+        return (sealed + o.ask_terminator).encode("latin-1", "replace")
+
+    def _echoed(self, ask: str) -> str:
+        return self._request(ask).decode("latin-1").strip() if self._options.command_echo else ""
+
+    def _unsealed(self, line: str) -> str:
+        checksum = self._options.manner.checksum
+        return line if checksum is None else checksum.unseal(line) or line
+
+
+def _short(text: str) -> str:
+    return repr(text if len(text) <= 80 else text[:77] + "...")
