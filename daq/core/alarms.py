@@ -115,7 +115,6 @@ class OpenAlarm:
         seen: The condition as the last cue gave it; ``active`` after the delays.
         change_tick: Deadline at which ``active`` becomes ``seen``, or None.
         escalate_tick: Deadline of the next rise of priority, or None.
-        latched: Raised and not yet reset (latching kinds only).
         initials: Who acknowledged, or put it away, last; empty if nobody.
     """
 
@@ -131,7 +130,6 @@ class OpenAlarm:
     initials: str = ""
     seen: bool = False
     active: bool = False
-    latched: bool = False
     change_tick: int | None = None
     escalate_tick: int | None = None
 
@@ -391,12 +389,10 @@ class _Desk:
         kind = self._kind(a.alarm)
         a = replace(a, active=a.seen, change_tick=None)
         if not a.active:
-            event = Event.CLEAR_LATCHING if a.latched else Event.CLEAR
+            event = Event.CLEAR_LATCHING if kind.latching else Event.CLEAR
             self._move(a, event, tick, scan, a.initials)
             return
-        a = replace(
-            a, occurrence=a.occurrence + 1, priority=kind.priority, initials="", latched=kind.latching
-        )
+        a = replace(a, occurrence=a.occurrence + 1, priority=kind.priority, initials="")
         hold = self._hold_on(a)
         event = Event[hold.event] if hold else Event.NOTE if kind.notice else Event.RAISE
         self._move(a, event, tick, scan, hold.initials if hold else "")
@@ -458,11 +454,11 @@ class _Desk:
                 if a.state is not State.NORMAL and a.state is not HELD[Event[hold.event]]:
                     self._move(a, Event[hold.event], tick, scan, hold.initials)
             elif held:
-                notice = self._kind(a.alarm).notice
+                kind = self._kind(a.alarm)
                 if a.active:
-                    event = Event.RELEASE_NOTED if notice else Event.RELEASE_RAISED
+                    event = Event.RELEASE_NOTED if kind.notice else Event.RELEASE_RAISED
                 else:
-                    event = Event.RELEASE_LATCHED if a.latched else Event.RELEASE
+                    event = Event.RELEASE_LATCHED if kind.latching else Event.RELEASE
                 self._move(a, event, tick, scan, initials)
 
     # --- the one place where a state changes -------------------------------------------------
@@ -472,8 +468,6 @@ class _Desk:
         target = TABLE.get((a.state, event))
         if target is not None:
             a = replace(a, state=target, initials=initials, escalate_tick=self._escalation(a, target, tick))
-            if target is State.NORMAL:
-                a = replace(a, latched=False)
             self._conclude(a, tick, scan)
         self._alarms[a.alarm, a.subject] = a
 

@@ -195,8 +195,9 @@ def test_a_shelf_outlives_a_restart_and_ends_by_itself() -> None:
 
 def test_a_shelf_without_an_end_gets_one() -> None:
     """A shelf is for hours or days; for good is out of service."""
-    state, _ = run(cue(0, "plain", True), entry(5, Action.SHELVE, "plain"))
-    assert alarms.due(state) == 5 + alarms.SHELVE_MOST_S * TICKS_PER_S
+    for until in (None, 10**15):
+        state, _ = run(cue(0, "plain", True), entry(5, Action.SHELVE, "plain", until_tick=until))
+        assert alarms.due(state) == 5 + alarms.SHELVE_MOST_S * TICKS_PER_S
 
 
 def test_an_alarm_raised_while_suppressed_is_told_when_the_suppression_ends() -> None:
@@ -333,15 +334,13 @@ class Model:
     place: str = "normal"
     level: int = 0
     unanswered: int | None = None
-    latched: bool = False
-    log: list[tuple[int, str]] = field(default_factory=list)
+    count: int = 0
+    log: list[tuple[int, str, int]] = field(default_factory=list)
 
     def go(self, t: int, place: str) -> None:
         self.place = place
         self.unanswered = t if place == "unacknowledged" else None
-        if place == "normal":
-            self.latched = False
-        self.log.append((t, place))
+        self.log.append((t, place, self.count))
 
     def before(self, t: int, held: str | None) -> None:
         delay = self.kind.on_delay_s if self.seen else self.kind.off_delay_s
@@ -357,15 +356,15 @@ class Model:
     def settle(self, t: int, held: str | None) -> None:
         self.pending, self.on = None, self.seen
         if self.on:
-            self.latched = self.kind.latching
+            self.count += 1
             self.level = {"notice": 0, "low": 1, "high": 3}[self.kind.priority.value]
             if self.place in ("shelved", "suppressed", "out_of_service"):
                 return
             self.go(t, held or ("noted" if self.kind.notice else "unacknowledged"))
         elif self.place == "unacknowledged":
-            self.go(t, "latched_unacknowledged" if self.latched else "returned_unacknowledged")
+            self.go(t, "latched_unacknowledged" if self.kind.latching else "returned_unacknowledged")
         elif self.place == "acknowledged":
-            self.go(t, "latched_acknowledged" if self.latched else "normal")
+            self.go(t, "latched_acknowledged" if self.kind.latching else "normal")
         elif self.place == "noted":
             self.go(t, "normal")
 
@@ -385,10 +384,10 @@ class Model:
             if self.on:
                 self.go(t, "noted" if self.kind.notice else "unacknowledged")
             else:
-                self.go(t, "latched_unacknowledged" if self.latched else "normal")
+                self.go(t, "latched_unacknowledged" if self.kind.latching else "normal")
 
 
-def model_log(events: list[Cue | AlarmEntry], end: int) -> dict[str, list[tuple[int, str]]]:
+def model_log(events: list[Cue | AlarmEntry], end: int) -> dict[str, list[tuple[int, str, int]]]:
     """Walk every tick from 0 to ``end`` and write down each alarm's moves."""
     models = [
         Model(KINDS[a], s)
@@ -459,9 +458,9 @@ def model_log(events: list[Cue | AlarmEntry], end: int) -> dict[str, list[tuple[
 def test_the_machine_agrees_with_a_model_that_walks_every_tick(events: list[Cue | AlarmEntry]) -> None:
     """Two programs of different make, one by deadlines and a table, one by counters and rules."""
     _, out = run(*events, until=120)
-    got: dict[str, list[tuple[int, str]]] = {name: [] for name in model_log([], 0)}
+    got: dict[str, list[tuple[int, str, int]]] = {name: [] for name in model_log([], 0)}
     for c in out:
-        got[c.key.rpartition("#")[0]].append((c.tick, c.fields["state"]))
+        got[c.key.rpartition("#")[0]].append((c.tick, c.fields["state"], c.fields["occurrence"]))
     assert got == model_log(events, 120)
 
 
