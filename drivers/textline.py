@@ -36,10 +36,12 @@ An instrument that talks by itself, fixed columns, decimal comma, checksum::
 
 Every key of one of the ``yields`` may stand outside as the default of all. Where from: ``group`` (of
 ``reply``; without any key the group named ``value``), ``field`` (between ``separator``; default a comma, a
-semicolon with ``decimal_comma``), ``columns``. ``words`` adds to what instruments write instead of a number:
+semicolon with ``decimal_comma``; ``fields`` says how many a line has if that is more than are used),
+``columns``. ``words`` adds to what instruments write instead of a number:
 ``words: {"------": overload, "EEEE": open_circuit}``. Readings with the same question share one.
 
-A digit that the wire changed into another digit is seen only by parity (``frame``) or a checksum.
+A digit that the wire changed into another digit is seen only by parity (``frame``) or a checksum. Where the
+answers do not name their channel, questions are sent ``guard_s`` apart (see conversation.py).
 """
 
 from __future__ import annotations
@@ -98,11 +100,15 @@ class Pick:
 
 @dataclass(frozen=True, slots=True)
 class Message:
-    """One line and the readings in it; ``ask`` empty where the instrument talks by itself."""
+    """One line and the readings in it; ``ask`` empty where the instrument talks by itself.
+
+    ``fields`` is the number of fields that the line must have; 0 where nobody counts them.
+    """
 
     ask: str
     reply: re.Pattern[str] | None
     separator: str
+    fields: int
     echo: str
     picks: tuple[Pick, ...]
 
@@ -119,8 +125,8 @@ class Manner:
 def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
     """Return name -> (value, quality) of all readings in the line.
 
-    Raises NotTheAnswer if the line is not as ``message`` says. A field that is no number is
-    GARBLED by itself; the others in the line stand.
+    Raises NotTheAnswer if the line is not as ``message`` says in every part. One unreadable field
+    condemns the line: where a separator was lost, the fields behind it belong to other channels.
     """
     if manner.checksum is not None:
         body = manner.checksum.unseal(text)
@@ -134,7 +140,9 @@ def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
             raise NotTheAnswer(f"got {_short(text)}, need a line like {message.reply.pattern!r}")
         if message.echo and found["echo"] != message.echo:
             raise NotTheAnswer(f"got {_short(text)}, the answer of {found['echo']!r}, need {message.echo!r}")
-    fields = text.split(message.separator) if any(p.field for p in message.picks) else []
+    fields = text.split(message.separator)
+    if message.fields and len(fields) != message.fields:
+        raise NotTheAnswer(f"got {len(fields)} fields ({_short(text)}), need {message.fields}")
     values: dict[str, Value] = {}
     for pick in message.picks:
         if pick.columns is not None:
@@ -142,8 +150,6 @@ def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
                 raise NotTheAnswer(f"got {_short(text)}, need at least {pick.columns[1]} characters")
             piece: str | None = text[pick.columns[0] - 1 : pick.columns[1]]
         elif pick.field:
-            if len(fields) < pick.field:
-                raise NotTheAnswer(f"got {_short(text)}, need at least {pick.field} fields")
             piece = fields[pick.field - 1]
         else:
             piece = found[pick.group] if found is not None else text
@@ -154,9 +160,13 @@ def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
 def _read(piece: str, pick: Pick, manner: Manner) -> Value:
     if pick.states is not None:
         state = pick.states.get(piece.strip())
-        return (float("nan"), GARBLED) if state is None else (state, GOOD)
+        if state is None:
+            raise NotTheAnswer(f"got {_short(piece)} for {pick.name}, need one of {', '.join(pick.states)}")
+        return state, GOOD
     value = parse_number(piece, decimal_comma=manner.decimal_comma, words=manner.words)
-    return (float("nan"), GARBLED) if value is None else value
+    if value is None:
+        raise NotTheAnswer(f"got {_short(piece)} for {pick.name}, need a number or one of the words")
+    return value
 
 
 # -------------------------------------------------------------------------------- the options
@@ -183,7 +193,9 @@ class _Options:
     connect_timeout_s: float
 
 
-_PICK_KEYS: Final = ("ask", "unit", "reply", "separator", "echo", "group", "field", "columns", "states")
+_PICK_KEYS: Final = (
+    "ask", "unit", "reply", "separator", "fields", "echo", "group", "field", "columns", "states"
+)  # fmt: skip
 
 
 def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
@@ -218,7 +230,7 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
 def _messages(
     top: OptionReader, readings: Mapping[str, OptionReader], listen: bool, separator: str
 ) -> tuple[Message, ...]:
-    grouped: dict[tuple[str, str, str, str], tuple[re.Pattern[str] | None, list[Pick]]] = {}
+    grouped: dict[tuple[str, str, str, int, str], tuple[re.Pattern[str] | None, list[Pick]]] = {}
     for name, own in readings.items():
         source = {key: own if own.has(key) else top for key in _PICK_KEYS}
         unit = source["unit"].text("unit", "", most=20, empty=True)
@@ -236,14 +248,22 @@ def _messages(
             own.wrong("echo", f"got {echo!r}, need a reply with a group (?P<echo>...)")
             reply = None
         split = source["separator"].text("separator", separator, most=8)
+        count = source["fields"].whole("fields", 0, least=1, most=200)
         pick = _pick(name, own, source, reply)
-        key = (ask, reply.pattern if reply is not None else "", split, echo)
+        key = (ask, reply.pattern if reply is not None else "", split, count, echo)
         grouped.setdefault(key, (reply, []))[1].append(pick)
         own.done()
     return tuple(
-        Message(ask, reply, split, echo if reply is not None else "", tuple(picks))
-        for (ask, _, split, echo), (reply, picks) in grouped.items()
-    )
+        Message(
+            ask,
+            reply,
+            split,
+            count or max(p.field for p in picks),
+            echo if reply is not None else "",
+            tuple(picks),
+        )
+        for (ask, _, split, count, echo), (reply, picks) in grouped.items()
+    )  # fmt: skip    )
 
 
 def _filler(unit: str) -> Callable[[str], str]:
