@@ -30,7 +30,7 @@ class JournalReader(JournalReading):
         inode = self._host.stat().st_ino
         if self._db is None or inode != self._inode:
             self._drop()
-            self._db, self._inode = _open_to_read(self._host), inode
+            self._db, self._inode = open_host_to_read(self._host), inode
         return self._db
 
     def _drop(self) -> None:
@@ -54,7 +54,8 @@ class JournalReader(JournalReading):
         self.close()
 
 
-def _open_to_read(path: Path) -> sqlite3.Connection:
+def open_host_to_read(path: Path) -> sqlite3.Connection:
+    """Return a read-only connection to a host file, also on a disk that cannot be written."""
     try:
         connection = connect(path, "ro")
         connection.execute("SELECT last_seq FROM head")

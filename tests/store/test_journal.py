@@ -6,35 +6,14 @@ import os
 import stat
 from pathlib import Path
 
-import numpy as np
 import pytest
+from store_cases import as_bytes, entry, finding, scans, started
 
 from daq.codec import encode_fact
-from daq.records import EngineStarted, EntryMade, Fact, Finding, ScansTaken, Stamp
+from daq.records import Finding
 from daq.store.errors import JournalBusy, JournalError
 from daq.store.journal import Journal, JournalReader
 from daq.store.rows import Batch, EncodedFact, OutboxNew, Snapshot, encoded
-
-CHANNELS = ("left", "right", "mid")
-
-
-def scans(frame: str, first: int, n: int = 1) -> ScansTaken:
-    """Return ``n`` scans whose every number tells which scan it is."""
-    tick = np.arange(first, first + n, dtype=np.int64) * 10_000
-    values = np.arange(first, first + n)[:, None] + np.array([0.0, 0.25, 0.5])
-    return ScansTaken(frame, CHANNELS, "boot-1", tick, tick + 7, values, np.zeros((n, 3), np.uint8))
-
-
-def entry(frame: str, k: int) -> EntryMade:
-    return EntryMade(Stamp(k, k, "boot-1"), frame, "loaded", "ab", {"k": k})
-
-
-def finding(k: int, test: str = "H1", kind: str = "stage") -> Finding:
-    return Finding(f"{test}|S-1|{kind}|{k}|1", k, float(k), test, kind, {"k": k})
-
-
-def as_bytes(facts: list[tuple[int, Fact]]) -> list[tuple[int, bytes]]:
-    return [(seq, encode_fact(f)) for seq, f in facts]
 
 
 @pytest.fixture
@@ -48,7 +27,7 @@ def test_facts_come_back_in_the_order_of_their_commit(journal: Journal) -> None:
         scans("H1", 0),
         entry("H1", 1),
         scans("H2", 1),
-        EngineStarted(Stamp(2, 2), "0.1.0"),
+        started(2),
         scans("H1", 2),
     ]
     assert list(journal.commit(Batch(facts=tuple(facts[:2])))) == [1, 2]
