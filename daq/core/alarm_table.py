@@ -6,7 +6,7 @@ acknowledgement. The machine that uses the table is ``core.alarms``.
 
 from __future__ import annotations
 
-from enum import Enum
+from enum import Enum, StrEnum
 from types import MappingProxyType
 from typing import Final
 
@@ -14,7 +14,7 @@ from daq.codec import state
 
 
 @state
-class State(Enum):
+class State(StrEnum):
     """Where an alarm is. Letters are those of the standards' state diagram."""
 
     NORMAL = "normal"  # A

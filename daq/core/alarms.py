@@ -359,7 +359,7 @@ class _Desk:
             )
         if kind.momentary:
             if cue.active:
-                self._speak_once(replace(a, occurrence=a.occurrence + 1, since_tick=tick), tick, cue.scan)
+                self._happen(replace(a, since_tick=tick), kind, tick, cue.scan)
             return
         if cue.active == a.seen:
             if key in self._alarms:
@@ -377,8 +377,13 @@ class _Desk:
         if a.change_tick is not None and a.change_tick <= tick:
             self._settle(a, tick, cue.scan)
 
-    def _speak_once(self, a: OpenAlarm, tick: int, scan: int) -> None:
-        """Conclude a momentary notice. It is over at once; only its count stays."""
+    def _happen(self, a: OpenAlarm, kind: AlarmKind, tick: int, scan: int) -> None:
+        """Something happened and is over: a notice is told, an alarm raised and left to acknowledge."""
+        if not kind.notice:
+            self._settle(replace(a, seen=True), tick, scan)
+            self._settle(replace(self._alarms[a.alarm, a.subject], seen=False), tick, scan)
+            return
+        a = replace(a, occurrence=a.occurrence + 1)
         hold = self._hold_on(a)
         state = State.NOTED if hold is None else HELD[Event[hold.event]]
         self._conclude(replace(a, state=state), tick, scan)

@@ -13,7 +13,7 @@ alarm returns to normal, so a value that plays around its limit raises one alarm
 from __future__ import annotations
 
 from dataclasses import dataclass
-from enum import Enum
+from enum import StrEnum
 from types import MappingProxyType
 from typing import Final
 
@@ -21,7 +21,7 @@ from daq.codec import state
 
 
 @state
-class Priority(Enum):
+class Priority(StrEnum):
     """How much harm waiting does. ``NOTICE`` is not an alarm."""
 
     NOTICE = "notice"
@@ -46,7 +46,8 @@ class AlarmKind:
         on_delay_s: The condition must hold this long before the alarm is raised [s].
         off_delay_s: It must be gone this long before the alarm returns to normal [s].
         latching: Stays until a person resets it, also when the condition is gone.
-        momentary: A notice of an event: every cue speaks, nothing stays.
+        momentary: Something that happened and is over: every cue speaks. A notice leaves nothing behind,
+            an alarm stays to be acknowledged.
         escalate_s: Unacknowledged this long, the priority rises by one step [s]; 0 is never.
     """
 
@@ -185,8 +186,12 @@ _TABLE: Final = (
         escalate_s=1 * _HOUR,
     ),
     AlarmKind(
-        "restart_unexpected", _L, "the record was interrupted and has resumed",
-        "Look at the gap; check that no load or temperature change happened in it.",
+        "outage", _L, "the record was interrupted and has resumed",
+        "Look at the gap; check that no load or temperature change happened in it.", momentary=True,
+    ),
+    AlarmKind(
+        "entry_refused", _L, "an operator entry was refused",
+        "Read why, and enter it again.", momentary=True,
     ),
     AlarmKind(
         "flood", _M, "many alarms at once: suspect one cause",

@@ -28,6 +28,7 @@ KINDS = {
         AlarmKind("climb", Priority.LOW, "c", "do", on_delay_s=1 * TICK_S, escalate_s=4 * TICK_S),
         AlarmKind("note", Priority.NOTICE, "n", "do", on_delay_s=2 * TICK_S),
         AlarmKind("blink", Priority.NOTICE, "b", "do", momentary=True),
+        AlarmKind("bang", Priority.LOW, "!", "do", momentary=True),
     )
 }
 
@@ -240,6 +241,17 @@ def test_notices_need_no_acknowledgement_and_momentary_ones_repeat() -> None:
     assert alarms.open_alarms(state) == ()
 
 
+def test_an_alarm_of_something_that_is_over_waits_to_be_acknowledged() -> None:
+    """An outage has no end to wait for: raised and returned at once, each one with its number."""
+    state, out = run(cue(0, "bang", True), cue(4, "bang", True), cue(5, "bang", False))
+    assert told(out) == [
+        (0, "bang#1", "unacknowledged"), (0, "bang#1", "returned_unacknowledged"),
+        (4, "bang#2", "unacknowledged"), (4, "bang#2", "returned_unacknowledged"),
+    ]  # fmt: skip
+    state, late = alarms.react(state, [entry(9, Action.ACKNOWLEDGE)], catalogue=KINDS)
+    assert told(list(late)) == [(9, "bang#2", "normal")]
+
+
 def test_the_most_urgent_stands_first() -> None:
     """Asking for a person first, then the worst, then the least time left."""
     state, _ = alarms.react(
@@ -270,15 +282,15 @@ def test_the_catalogue_names_all_that_a_laboratory_needs_told() -> None:
         "temperature_low "
         "temperature_nearing_high temperature_nearing_low gradient sensor_broken sensor_stuck sides_disagree "
         "travel_nearly_used load_off link_lost identity_wrong disk_full journal_trouble publisher_down "
-        "publish_denied quarantined restart_unexpected clock_stepped stage_secondary correction "
-        "calibration_due"
+        "publish_denied quarantined outage entry_refused sensor_suspected clock_stepped stage_secondary "
+        "correction calibration_due"
     )
     assert set(promised.split()) <= set(CATALOGUE)
     for kind in CATALOGUE.values():
         assert kind.text
         assert kind.to_do.endswith(".")
-        assert not (kind.momentary and not kind.notice)
         assert not (kind.notice and (kind.latching or kind.escalate_s))
+        assert not (kind.momentary and (kind.latching or kind.on_delay_s or kind.off_delay_s))
 
 
 def test_high_priority_stays_rare_in_the_catalogue() -> None:
