@@ -105,6 +105,7 @@ class Conversation:
         """How often the conversation came into doubt."""
         self._failures_seen = 0
         self._failed_polls = 0
+        self._trouble = NoAnswer(MISSING, "nothing was asked", asked=False)
         self._codec = codec
         self._trust = _Trust.SETTLE
         self._quiet_until_s = 0.0
@@ -140,21 +141,20 @@ class Conversation:
                 break
         return answer
 
-    def end_of_poll(self, troubles: Sequence[NoAnswer], questions: int) -> None:
-        """Judge a poll by what went wrong with its questions.
+    def end_of_poll(self, answered: bool) -> None:
+        """Close a poll; ``answered`` says whether any of its questions was.
 
-        Raises LinkError (silence) or InstrumentError (garbage) from the second poll in a row on in which
-        something was tried and nothing was answered.
+        Raises LinkError (silence) or InstrumentError (garbage) from the second poll in a row on in
+        which something was tried and nothing was answered.
         """
         tried, self._failures_seen = self.failures > self._failures_seen, self.failures
-        if len(troubles) < questions:
+        if answered:
             self._failed_polls = 0
             return
         self._failed_polls += tried
         if self._failed_polls >= FAILED_POLLS:
-            text = f"{self.port.name}: {troubles[0].why}"
-            garbled = any(trouble.quality == GARBLED for trouble in troubles)
-            raise InstrumentError(text) if garbled else LinkError(text)
+            text = f"{self.port.name}: {self._trouble.why}"
+            raise InstrumentError(text) if self._trouble.quality == GARBLED else LinkError(text)
 
     def tell(self, command: bytes, until_s: float) -> None:
         """Send what has no answer."""
@@ -201,7 +201,9 @@ class Conversation:
             elif now_s >= self._quiet_until_s:
                 return True
             if now_s >= until_s:
-                self.failures += noisy  # a babbling line gives no chance to ask
+                if noisy:
+                    self.failures += 1
+                    self._trouble = NoAnswer(GARBLED, "bytes without end; no chance to ask")
                 return False
 
     def _stray(self, until_s: float) -> bool:
@@ -215,11 +217,13 @@ class Conversation:
                 return True
         return True
 
-    def _doubt(self, sent_s: float) -> None:
+    def _doubt(self, sent_s: float, trouble: NoAnswer) -> NoAnswer:
+        self._trouble = trouble
         self.resyncs += self._trust is _Trust.YES
         self.failures += 1
         self._trust = _Trust.QUIET
         self._quiet_until_s = max(sent_s + self.pace.longest_reply_s, self.port.clock.now_s() + GAP_S)
+        return trouble
 
     def _exchange(self, question: Question[T], until_s: float) -> T | NoAnswer:
         clock, pace = self.port.clock, self.pace
@@ -227,8 +231,8 @@ class Conversation:
         if free_s >= until_s or clock.now_s() >= until_s:
             return NoAnswer(MISSING, "no time left to ask", asked=False)
         if self._stray(free_s):
-            self._doubt(max(self._sent_s.values(), default=clock.now_s()))
-            return NoAnswer(GARBLED, "bytes came that nobody asked for", asked=False)
+            last_s = max(self._sent_s.values(), default=clock.now_s())
+            return self._doubt(last_s, NoAnswer(GARBLED, "bytes came that nobody asked for", asked=False))
         self._codec.reset()
         self.port.write(question.request, min(until_s, clock.now_s() + pace.timeout_s))
         sent_s = clock.now_s()
@@ -236,11 +240,9 @@ class Conversation:
         try:
             answer = question.read(self._one_line(question, min(until_s, sent_s + pace.timeout_s)))
         except _Silent as silent:
-            self._doubt(sent_s)
-            return NoAnswer(GARBLED if self._codec.midway else MISSING, str(silent))
+            return self._doubt(sent_s, NoAnswer(GARBLED if self._codec.midway else MISSING, str(silent)))
         except NotTheAnswer as mismatch:
-            self._doubt(sent_s)
-            return NoAnswer(GARBLED, str(mismatch))
+            return self._doubt(sent_s, NoAnswer(GARBLED, str(mismatch)))
         return answer
 
     def _one_line(self, question: Question[T], until_s: float) -> str:

@@ -12,13 +12,15 @@ import difflib
 import math
 import re
 from collections.abc import Callable, Iterable, Mapping
-from typing import Any, TypeVar
+from typing import Any, Final, TypeVar
 
 from drivers.base import SetupError
 
 T = TypeVar("T")
 NAME = re.compile(r"[A-Za-z_][A-Za-z0-9_-]*")
-"""What a reading or message may be called: no dots, so that paths stay readable."""
+"""What a reading may be called: no dots, so that paths stay readable."""
+NEVER: Final = "(?!)"
+"""Stands in for a regular expression that could not be compiled."""
 
 
 class OptionReader:
@@ -29,6 +31,7 @@ class OptionReader:
         self.path = path
         self._known: list[str] = []
         self._given: Mapping[str, Any] = {}
+        self._unusable = not isinstance(given, Mapping)
         if not isinstance(given, Mapping):
             self.wrong("", f"got {_show(given)}, need a mapping of keys to values")
         else:
@@ -62,10 +65,9 @@ class OptionReader:
 
     def _take(self, key: str, default: T | None, need: str, accept: Callable[[Any], T | None], idle: T) -> T:
         if not self.has(key):
-            if default is None:
+            if default is None and not self._unusable:
                 self.wrong(key, f"is missing, need {need}")
-                return idle
-            return default
+            return idle if default is None else default
         value = accept(self._given[key])
         if value is None:
             self.wrong(key, f"got {_show(self._given[key])}, need {need}")
@@ -128,7 +130,7 @@ class OptionReader:
             return re.compile(fill(source), re.ASCII)
         except re.error as error:
             self.wrong(key, f"got {_show(source)}, need a regular expression ({error})")
-            return re.compile("(?!)")
+            return re.compile(NEVER)
 
     def texts(self, key: str) -> list[str]:
         """A list of texts; absent means empty."""

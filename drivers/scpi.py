@@ -209,7 +209,8 @@ class Scpi:
             raise IdentityError(f"{self._port.name}: got a poll, need identify() after open() first")
         until_s = clock.now_s() + deadline_s
         answer = self._talk.ask(self._scan, until_s)
-        if self._in_doubt or clock.now_s() - self._checked_s >= o.error_check_s:
+        failed = isinstance(answer, NoAnswer)
+        if failed or self._in_doubt or clock.now_s() - self._checked_s >= o.error_check_s:
             errors = self._errors(until_s)
             if errors:
                 raise InstrumentError(f"{self._port.name}: the instrument reports {_list(errors)}")
@@ -219,9 +220,9 @@ class Scpi:
                 answer = NoAnswer(GARBLED, f"{o.error_query} was not answered")
         self._in_doubt = isinstance(answer, NoAnswer)
         if isinstance(answer, NoAnswer):
-            self._talk.end_of_poll([answer], 1)
+            self._talk.end_of_poll(False)
             return [no_reading(name, answer.quality) for name in self.yields]
-        self._talk.end_of_poll([], 1)
+        self._talk.end_of_poll(True)
         return [
             RawReading(name, value) if quality == GOOD else no_reading(name, quality)
             for name, (value, quality) in answer.items()

@@ -72,7 +72,7 @@ from drivers.conversation import (
     read_pace,
 )
 from drivers.lines import CHECKSUMS, MAX_LINE, WORDS, Checksum, Line, LineCodec, parse_number
-from drivers.options import OptionReader, must_be_fit
+from drivers.options import NEVER, OptionReader, must_be_fit
 from drivers.transport import CHUNK, Clock, Transport, read_port
 
 CONNECT_S: Final = 2.0
@@ -235,11 +235,11 @@ def _messages(
         source = {key: own if own.has(key) else top for key in _PICK_KEYS}
         unit = source["unit"].text("unit", "", most=20, empty=True)
         fill = _filler(unit)
-        ask = fill(source["ask"].text("ask", "", empty=True))
-        if bool(ask) == listen:
-            own.wrong(
-                "ask", "must not be there with listen: true" if listen else "is missing, need what to send"
-            )
+        ask = fill(source["ask"].text("ask") if source["ask"].has("ask") else "")
+        if listen and ask:
+            own.wrong("ask", "must not be there with listen: true")
+        elif not listen and not source["ask"].has("ask"):
+            own.wrong("ask", "is missing, need what to send")
         reply = None
         if source["reply"].has("reply"):
             reply = source["reply"].pattern("reply", None, _filler(re.escape(unit)))
@@ -285,7 +285,7 @@ def _pick(
         columns = _columns(source["columns"])
     elif reply is not None:
         group = source["group"].text("group", "value")
-        if group not in reply.groupindex:
+        if group not in reply.groupindex and reply.pattern != NEVER:
             have = ", ".join(reply.groupindex) or "none"
             own.wrong("group", f"got {group!r}, need a group of the reply (it has {have})")
     elif where:
@@ -456,7 +456,7 @@ class TextLine:
 
     def _ask_all(self, until_s: float) -> dict[str, Value]:
         values: dict[str, Value] = {}
-        troubles: list[NoAnswer] = []
+        answered = False
         # units that were silent last time come last, so that they take nobody else's time
         for i in sorted(range(len(self._questions)), key=lambda i: i in self._silent):
             message, question = self._questions[i]
@@ -469,12 +469,12 @@ class TextLine:
                 answer = self._talk.ask(question, until_s)
             if isinstance(answer, NoAnswer):
                 self._note_silence(i, answer)
-                troubles.append(answer)
                 values |= {pick.name: (float("nan"), answer.quality) for pick in message.picks}
             else:
                 self._silent.pop(i, None)
+                answered = True
                 values |= answer
-        self._talk.end_of_poll(troubles, len(self._questions))
+        self._talk.end_of_poll(answered)
         return values
 
     def _note_silence(self, i: int, answer: NoAnswer) -> None:
