@@ -7,7 +7,6 @@ so that a command finds the same journal from wherever it is called.
 
 from __future__ import annotations
 
-import stat
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any, Final
@@ -18,13 +17,13 @@ from daq.records import UpturnError
 from daq.settings import model, say
 from daq.settings.build import NOT_OPTIONS, build
 from daq.settings.checks import EMULATED, check, mapping, near
-from daq.settings.lab import Bench, BrokerSettings, Frame, Instrument, Lab
+from daq.settings.lab import Bench, Frame, Instrument, Lab
 from daq.yamlmarks import Document, Problem, read, resolve
 from daq.yamlmarks import Path as Place
 from drivers import registry
 
 __all__ = [
-    "Bench", "BrokerSettings", "Frame", "Instrument", "Lab", "Problem", "SettingsError",
+    "Bench", "Frame", "Instrument", "Lab", "Problem", "SettingsError",
     "load", "loads", "must_be_ready", "ready_to_run",
 ]  # fmt: skip
 
@@ -86,9 +85,10 @@ def ready_to_run(lab: Lab) -> list[Problem]:
                 place = ("frames", frame.name, *inside, "channels", channel, "source")
                 document.problem(place, "got nothing, wanted INSTRUMENT.READING to run")
     if lab.broker is not None:
-        for key, file in (("password_file", lab.broker.password_file), ("ca_file", lab.broker.ca_file)):
-            if file is not None and (trouble := _file_trouble(file, secret=key == "password_file")):
-                document.problem(("broker", key), f"got {file}, {trouble}")
+        for key in ("password_file", "ca_file", "cert_file", "key_file"):
+            file: Path | None = getattr(lab.broker, key)
+            if file is not None and (trouble := _file_trouble(key, file)):
+                document.problem(("broker", key), trouble)
     return sorted(document.problems)
 
 
@@ -99,14 +99,20 @@ def must_be_ready(lab: Lab) -> None:
         raise SettingsError(lab.path, problems)
 
 
-def _file_trouble(file: Path, *, secret: bool) -> str:
+def _file_trouble(key: str, file: Path) -> str:
+    from daq.publish.access import PublishError, check_private, read_secret
+
     try:
-        with file.open("rb"):
-            mode = file.stat().st_mode
+        if key == "password_file":
+            read_secret(file)
+        elif key == "key_file":
+            check_private(file)
+        else:
+            file.read_bytes()
+    except PublishError as error:
+        return str(error)
     except OSError as error:
-        return f"which cannot be read ({error.strerror})"
-    if secret and mode & (stat.S_IRWXG | stat.S_IRWXO):
-        return f"which others may read (mode {stat.S_IMODE(mode):04o}), wanted 0600"
+        return f"{file}: got {error.strerror}, wanted a readable file"
     return ""
 
 

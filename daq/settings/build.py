@@ -4,15 +4,17 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any, Final, TypeVar
-from urllib.parse import urlsplit
+from typing import TYPE_CHECKING, Any, Final, TypeVar
 
 from daq.core.rules import ChannelRules, Conversion, Limits, Loading, Role, Specimen, TestRules
 from daq.settings import model
 from daq.settings.checks import EMULATED
-from daq.settings.lab import Bench, BrokerSettings, Frame, Instrument, Lab
+from daq.settings.lab import Bench, Frame, Instrument, Lab
 from daq.settings.units import RAW, UNITS
 from daq.yamlmarks import resolve
+
+if TYPE_CHECKING:
+    from daq.publish.access import BrokerSettings
 
 STANDARD_GRAVITY: Final = 9.80665
 """m/s2, CGPM 1901."""
@@ -23,7 +25,6 @@ ASTM_E139_BANDS: Final = ((1000.0, 2.0), (float("inf"), 3.0))
 """ASTM E139, the same (from memory)."""
 SIGN: Final = {"tension": 1.0, "compression": -1.0}
 FALSE_SHARE: Final = 1.0 / 200.0
-PORTS: Final = {"mqtt": 1883, "mqtts": 8883}
 NOT_OPTIONS: Final = ("driver", "poll_s")
 
 T = TypeVar("T")
@@ -58,17 +59,23 @@ def build(file: model.LabFile, tree: Mapping[str, Any], path: Path, text: str) -
 
 
 def _broker(b: model.Broker, home: Path) -> BrokerSettings:
-    parts = urlsplit(b.url)
+    from daq.publish.access import BrokerSettings, parse_url
+
+    def file(path: str | None) -> Path | None:
+        return None if path is None else home / Path(path).expanduser()
+
+    host, port, tls = parse_url(b.url)
     return BrokerSettings(
-        url=b.url,
-        host=parts.hostname or "",
-        port=parts.port or PORTS[parts.scheme],
-        tls=parts.scheme == "mqtts",
-        user=b.user or "",
-        password_file=None if b.password_file is None else home / Path(b.password_file).expanduser(),
-        ca_file=None if b.ca_file is None else home / Path(b.ca_file).expanduser(),
+        host=host,
+        port=port,
+        tls=tls,
         protocol=b.protocol,
-        client_id=b.client_id or "",
+        user=b.user,
+        password_file=file(b.password_file),
+        ca_file=file(b.ca_file),
+        cert_file=file(b.cert_file),
+        key_file=file(b.key_file),
+        client_id=b.client_id,
         embedded=b.embedded,
     )
 

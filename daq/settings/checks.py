@@ -10,6 +10,7 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
+from ipaddress import ip_address
 from typing import Any, Final
 from urllib.parse import urlsplit
 
@@ -24,8 +25,8 @@ ROLES: Final = tuple(role.value for role in Role)
 STRAIN_ROLES: Final = ("strain", "extension")
 TEMPERATURE_ROLES: Final = ("specimen_temperature", "room_temperature", "cold_junction", "set_point")
 LOAD_KEYS: Final = ("stress_mpa", "mass_kg", "lever_ratio")
+TLS_KEYS: Final = ("ca_file", "cert_file", "key_file")
 SECTION_KEYS: Final = ("diameter_mm", "area_mm2", "width_mm", "thickness_mm")
-LOOPBACK: Final = ("localhost", "::1")
 
 
 @dataclass(frozen=True, slots=True)
@@ -300,20 +301,26 @@ def _broker(document: Document, broker: Mapping[str, Any]) -> None:
             document.problem(
                 ("broker", "url"), f"got {url} for the embedded broker, wanted mqtt://127.0.0.1:PORT"
             )
-        for key in ("user", "password_file", "ca_file"):
+        for key in ("user", "password_file", *TLS_KEYS):
             if key in broker:
                 document.problem(
                     ("broker", key), "got it with embedded, wanted a broker of its own", at_key=True
                 )
     elif "password_file" in broker and "user" not in broker:
         document.problem(("broker", "password_file"), "got no user, wanted one beside it", at_key=True)
-    if plain and "ca_file" in broker:
-        document.problem(("broker", "ca_file"), "got it with mqtt://, wanted mqtts://", at_key=True)
+    for key in TLS_KEYS:
+        if plain and key in broker:
+            document.problem(("broker", key), "got it with mqtt://, wanted mqtts://", at_key=True)
+    if "key_file" in broker and "cert_file" not in broker:
+        document.problem(("broker", "key_file"), "got no cert_file, wanted one beside it", at_key=True)
 
 
 def is_loopback(host: str) -> bool:
     """Whether ``host`` is this machine."""
-    return host in LOOPBACK or host.startswith("127.")
+    try:
+        return ip_address(host).is_loopback
+    except ValueError:
+        return host == "localhost"
 
 
 def _bench(document: Document, tree: Mapping[str, Any]) -> None:

@@ -5,29 +5,12 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from daq.core.rules import TestRules
 
-
-@dataclass(frozen=True, slots=True)
-class BrokerSettings:
-    """Where alarms go. ``tls`` is True for mqtts://; ``protocol`` is ``5`` or ``3.1.1``.
-
-    Empty ``user`` and ``client_id``: none, and one that the publisher makes up.
-    ``embedded``: the program starts this broker itself, for a demonstration, on the loopback interface.
-    """
-
-    url: str
-    host: str
-    port: int
-    tls: bool
-    user: str = ""
-    password_file: Path | None = None
-    ca_file: Path | None = None
-    protocol: str = "5"
-    client_id: str = ""
-    embedded: bool = False
+if TYPE_CHECKING:  # its package loads the MQTT library, which a host without broker need not
+    from daq.publish.access import BrokerSettings
 
 
 @dataclass(frozen=True, slots=True)

@@ -303,6 +303,8 @@ class Broker(Section):
     user: Text | None = None
     password_file: Text | None = Field(default=None, description="File with the password, mode 0600.")
     ca_file: Text | None = Field(default=None, description="Certificates to trust instead of the system's.")
+    cert_file: Text | None = Field(default=None, description="The program's own certificate, if asked for.")
+    key_file: Text | None = Field(default=None, description="Its key, mode 0600.")
     protocol: Annotated[Literal["5", "3.1.1"], WithJsonSchema({"enum": [5, "5", "3.1.1"]})] = "5"
     client_id: Name | None = None
 
