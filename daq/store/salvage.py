@@ -23,7 +23,16 @@ from daq.store.lock import Mark
 from daq.store.reading import HOST, tail_fact
 from daq.store.rows import checksum
 from daq.store.schema import HOST_FILE, connect
-from daq.store.segments import FOLDER, about_of, chain_of, load, open_to_read, own_seqs, part_of
+from daq.store.segments import (
+    FOLDER,
+    UnfinishedError,
+    about_of,
+    chain_of,
+    load,
+    open_to_read,
+    own_seqs,
+    part_of,
+)
 
 UNKNOWN_JUMP: Final = 1 << 32
 """Numbers left out where nothing tells how far the damaged file had come."""
@@ -268,6 +277,8 @@ def _pieces(folder: Path, journal: str | None, carried: Carried) -> list[_Piece]
                         chain,
                     )
                     found.append((about["journal"], piece))
+        except UnfinishedError:
+            continue
         except (JournalError, sqlite3.Error) as error:
             carried.remarks.append(f"{path.name} could not be read ({error})")
     counts = Counter(name for name, _ in found)

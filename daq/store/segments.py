@@ -192,26 +192,35 @@ class SealedReader:
             self.forget(file)
 
 
+class UnfinishedError(JournalDamaged):
+    """A sealed file whose making was interrupted: it never held anything."""
+
+
 def open_to_read(path: Path) -> sqlite3.Connection:
     """Return a read-only connection to a sealed file, also on a disk that cannot be written.
 
     Raises:
+        UnfinishedError: the file was begun and never held a chunk.
         JournalDamaged: there is no such file, or it is no sealed file.
     """
     if not path.exists():
         raise JournalDamaged(f"{path}: got no such file, wanted a sealed file")
-    try:
-        connection = connect(path, "ro")
-        connection.execute("SELECT 1 FROM chunk LIMIT 1")
-        return connection
-    except sqlite3.OperationalError as error:
-        if path.with_name(path.name + "-wal").exists():
-            raise explain(error, str(path)) from error
     with guarded(path):
-        # at rest and on a disk where no index of a write-ahead file can be made
-        connection = connect(path, "ro", immutable=True)
-        connection.execute("SELECT 1 FROM chunk LIMIT 1")
-        return connection
+        try:
+            connection = connect(path, "ro")
+            version = version_of(connection)
+        except sqlite3.OperationalError:
+            if path.with_name(path.name + "-wal").exists():
+                raise
+            # at rest and on a disk where no index of a write-ahead file can be made
+            connection = connect(path, "ro", immutable=True)
+            version = version_of(connection)
+        if version == 0:
+            (tables,) = connection.execute("SELECT count(*) FROM sqlite_schema").fetchone()
+            connection.close()
+            kind = JournalDamaged if tables else UnfinishedError
+            raise kind(f"{path}: got format 0 with {tables} tables, wanted a sealed file")
+    return connection
 
 
 def tidy(folder: Path) -> None:

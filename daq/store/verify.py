@@ -26,7 +26,7 @@ from daq.store.reading import tail_fact
 from daq.store.recovery import QUARANTINE
 from daq.store.rows import checksum
 from daq.store.schema import APPLICATION_ID, HOST_FILE, MIGRATIONS, transaction, version_of
-from daq.store.segments import FOLDER, about_of, genesis_of, load, open_to_read
+from daq.store.segments import FOLDER, UnfinishedError, about_of, genesis_of, load, open_to_read
 
 DAMAGE: Final = "damage"
 GAP: Final = "gap"
@@ -206,7 +206,11 @@ def _verify_sealed(path: Path, seen: _Seen) -> Iterator[Trouble]:
         facts = sum(n.facts for n in named.values())
         yield Trouble(DAMAGE, str(path), "no such file", f"{len(named)} chunks with {facts} facts")
         return
-    yield from _walk_file(path, named, seen, alone=False)
+    try:
+        yield from _walk_file(path, named, seen, alone=False)
+    except UnfinishedError:
+        kind, wanted = (DAMAGE, f"{len(named)} chunks") if named else (NOTE, "nothing; it can stay")
+        yield Trouble(kind, str(path), "a file that was begun and holds nothing", wanted)
 
 
 def _walk_file(path: Path, named: dict[int, _Named], seen: _Seen, *, alone: bool) -> Iterator[Trouble]:

@@ -62,7 +62,8 @@ def test_scans_are_joined_only_where_nothing_lies_between(folder: Path, small_ch
     with open_journal(folder) as journal:
         put(
             journal, started(0), scans("H1", 0), scans("H2", 0), scans("H1", 1), entry("H2", 1),
-            scans("H1", 2), entry("H1", 2), scans("H1", 3), started(4), scans("H1", 4), scans("H1", 5, boot="boot-2"), other,
+            scans("H1", 2), entry("H1", 2), scans("H1", 3), started(4), scans("H1", 4),
+            scans("H1", 5, boot="boot-2"), other,
         )  # fmt: skip
         before = one_by_one(journal.facts(frame="H1"))
         journal.seal("H1", whole=False)
