@@ -156,10 +156,10 @@ def _drivers(document: Document, tree: Mapping[str, Any]) -> dict[str, list[str]
         if options.get("port") == EMULATED:
             options["port"] = A_PORT
         place: Place = ("instruments", name)
-        if driver not in registry.names():
-            hint = near(driver, registry.names())
-            wanted = ", ".join(registry.names())
-            document.problem((*place, "driver"), f"got {driver!r}, wanted one of {wanted}{hint}")
+        # ours first: the names of others are looked for in every installed package
+        if driver not in registry.FAMILIES and driver not in (drivers := registry.names()):
+            wanted = f"one of {', '.join(drivers)}{near(driver, drivers)}"
+            document.problem((*place, "driver"), f"got {driver!r}, wanted {wanted}")
             continue
         try:
             found = registry.check_options(driver, options)
