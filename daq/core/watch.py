@@ -1,0 +1,230 @@
+"""What is watched scan by scan: temperature, milestones and limits, rupture, sensors, load.
+
+One pass over a block of scans, of any number: live one, in a replay thousands. The watchers work
+on whole arrays and go step by step only where something changes; what a quiet scan costs is a few
+comparisons. They share leaves of sixteen scans (``core.leaves``) for noise, rate and references.
+
+Suspect readings: those marked as spike or as coming from a suspected sensor are passed over by the
+temperature watch; all others, and all suspect strains, count, because each watcher asks for more than
+one reading before it speaks.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+from typing import Any, Final
+
+import numpy as np
+
+from daq.codec import state
+from daq.core import band, leaves, milestones, rupture, sensors
+from daq.core.band import BandState
+from daq.core.block import Block, Conclusion, Cue
+from daq.core.leaves import LEAF, Cadence, Closed, Leaves
+from daq.core.milestones import MeanState, MilestoneState
+from daq.core.rules import Role, TestRules
+from daq.core.rupture import STILL, Context, Motion, RuptureState
+from daq.core.sensors import SensorState
+from daq.records import TICKS_PER_S, FloatArray, IntArray
+
+LEAST_POINTS: Final = 14
+"""Second differences of a whole leaf: the noise of a leaf with holes is not taken."""
+RATE_CLEAR: Final = 0.9
+ENDED: Final = frozenset({"ruptured", "ended"})
+
+
+@state
+@dataclass(frozen=True, slots=True)
+class WatchState:
+    """State of all watchers. ``rate_armed``: the rate was below its limit once (early primary does not
+    count); ``standing``: cues that stand, (alarm, subject), for the end of the test."""
+
+    leaves: Leaves
+    cadence: Cadence
+    mean: MeanState
+    motion: Motion
+    band: BandState
+    milestones: MilestoneState
+    rupture: RuptureState
+    sensors: SensorState
+    rate_armed: bool = False
+    rate_high: bool = False
+    over: bool = False
+    standing: tuple[tuple[str, str], ...] = ()
+
+
+Item = Conclusion | Cue
+
+
+def begin(rules: TestRules) -> WatchState:
+    """Return the state before the first scan."""
+    temperature = band.begin(rules)
+    columns = len(temperature.signals) + 1 + 4  # output; sides, mean strain, force
+    return WatchState(
+        leaves.begin(columns), Cadence(), MeanState(), STILL, temperature, milestones.begin(rules),
+        RuptureState(), sensors.begin(rules),
+    )  # fmt: skip
+
+
+def watch(
+    s: WatchState,
+    rules: TestRules,
+    block: Block,
+    *,
+    stage: str = "",
+    step_correction: FloatArray | None = None,
+) -> tuple[WatchState, tuple[Item, ...]]:
+    """Take n scans of one test; return findings and cues in the order of scans.
+
+    Args:
+        stage: Stage of the test during the whole block; in ``ruptured`` or ``ended`` nothing is watched.
+        step_correction: What slips have added to the mean strain of each scan [m/m], to be taken off for
+            milestones and the strain limit; (n,).
+    """
+    if s.over or stage in ENDED or not len(block):
+        return s, ()
+    cadence, paced = leaves.pace(s.cadence, block.tick, rules.scan_every_s)
+    mean_state, mean = milestones.mean_strain(s.mean, block.strain_a, block.strain_b)
+    signals = band.signals(rules, block)
+    columns = np.concatenate(
+        (signals, block.strain_a[:, None], block.strain_b[:, None], mean[:, None], _force(rules, block)),
+        axis=1,
+    )
+    open_leaf, closed = leaves.take(s.leaves, block.tick, columns)
+    motions, ends = _motions(s.motion, closed, signals.shape[1] + 2)
+    linked = (block.values == block.values).any(axis=1)
+
+    temperature, items = band.watch_band(
+        s.band, rules, block, signals, paced, _only(closed, signals.shape[1])
+    )
+    passed = mean if step_correction is None else mean - step_correction
+    ahead = s.milestones
+    if ahead.ahead:
+        ahead, said = milestones.watch_milestones(ahead, block, passed, _noise(motions, ends, len(block)))
+        items.extend(said)
+    context = Context(motions, ends, linked, paced.interval >= paced.gap, stage)
+    broken, torn = rupture.watch_rupture(s.rupture, rules, block, context)
+    believed, doubts = sensors.watch_sensors(s.sensors, rules, block, paced, linked)
+    noise = np.array([m.noise for m in motions[1:]])
+    believed, apart = sensors.watch_sides(
+        believed, block, closed, signals.shape[1], signals.shape[1] + 1, noise
+    )
+    items += [*torn, *doubts, *apart]
+    items.sort(key=lambda item: item.scan)
+    after = WatchState(
+        open_leaf, cadence, mean_state, motions[-1], temperature, ahead, broken, believed, s.rate_armed,
+        s.rate_high, False, _stand(s.standing, items),
+    )  # fmt: skip
+    return after, tuple(items)
+
+
+def watch_rate(
+    s: WatchState, rules: TestRules, scan: int, tick: int, rate_per_h: float, low_per_h: float
+) -> tuple[WatchState, tuple[Cue, ...]]:
+    """Hold a new rate against ``limits.rate_per_h``: over when its lower bound is, back nine tenths down.
+
+    The high rates just after loading do not count: the rate must have been below the limit once.
+    """
+    limit = rules.limits.rate_per_h
+    if limit is None or s.over or not math.isfinite(rate_per_h):
+        return s, ()
+    s = replace(s, rate_armed=s.rate_armed or rate_per_h < limit)
+    if not s.rate_high and s.rate_armed and low_per_h > limit:
+        message = f"strain rate {100.0 * rate_per_h:.3g} %/h, limit {100.0 * limit:.3g} %/h"
+        figures = {"rate_per_h": rate_per_h, "low_per_h": low_per_h, "limit_per_h": limit}
+        cues = (Cue(scan, tick, "rate_limit", "", True, message, None, figures),)
+        return replace(s, rate_high=True, standing=_stand(s.standing, cues)), cues
+    if s.rate_high and rate_per_h < RATE_CLEAR * limit:
+        cues = (Cue(scan, tick, "rate_limit", "", False),)
+        return replace(s, rate_high=False, standing=_stand(s.standing, cues)), cues
+    return s, ()
+
+
+KEPT: Final = frozenset({"rupture", "milestone_reached", "strain_limit"})
+"""Cues that the end of a test does not take back: they stay true."""
+
+
+def end(
+    s: WatchState, rules: TestRules, tick: int, t_s: float, scan: int
+) -> tuple[WatchState, tuple[Item, ...]]:
+    """End the watch: excursions that are open are told, conditions let go; nothing is watched after."""
+    if s.over:
+        return s, ()
+    temperature, items = band.end(s.band, rules, tick, scan)
+    let_go = {(c.alarm, c.subject) for c in items if isinstance(c, Cue)}
+    items += [
+        Cue(scan, tick, alarm, subject, False)
+        for alarm, subject in s.standing
+        if alarm not in KEPT and (alarm, subject) not in let_go
+    ]
+    return replace(s, band=temperature, over=True, standing=()), tuple(items)
+
+
+def status(s: WatchState) -> dict[str, Any]:
+    """Return plain values for screens: strain now, next milestone, conditions that stand."""
+    ahead = [p.level for p in s.milestones.ahead if p.milestone]
+    strain = s.mean.last
+    return {
+        "strain": strain if strain == strain else None,
+        "next_milestone": ahead[0] if ahead else None,
+        "conditions": [{"alarm": alarm, "subject": subject} for alarm, subject in s.standing],
+    }
+
+
+# --- shared -----------------------------------------------------------------------------
+
+
+def _stand(standing: tuple[tuple[str, str], ...], items: Any) -> tuple[tuple[str, str], ...]:
+    for item in items:
+        if isinstance(item, Cue):
+            key = (item.alarm, item.subject)
+            if item.active and key not in standing:
+                standing = (*standing, key)
+            elif not item.active:
+                standing = tuple(k for k in standing if k != key)
+    return standing
+
+
+def _force(rules: TestRules, block: Block) -> FloatArray:
+    for i, channel in enumerate(rules.channels):
+        if channel.role is Role.FORCE:
+            return np.where(block.t_s[:, None] >= 0.0, np.abs(block.values[:, i : i + 1]), np.nan)
+    return np.full((len(block), 1), np.nan)
+
+
+def _only(closed: Closed | None, columns: int) -> Closed | None:
+    return None if closed is None else replace(closed, mean=closed.mean[:, :columns])
+
+
+def _motions(motion: Motion, closed: Closed | None, column: int) -> tuple[tuple[Motion, ...], IntArray]:
+    """Return the motion as known before the block and after each leaf, and where the leaves end."""
+    if closed is None:
+        return (motion,), np.empty(0, np.int64)
+    x = closed.columns[:, :, column]
+    bend = np.sort(np.abs(x[:, 1:-1] - 0.5 * (x[:, :-2] + x[:, 2:])), axis=1)
+    noise = (1.4826 / math.sqrt(1.5)) * 0.5 * (bend[:, 6] + bend[:, 7])
+    step = np.abs(np.diff(x, axis=1)).max(axis=1)
+    middle = 0.5 * (closed.tick[:, LEAF // 2 - 1] + closed.tick[:, LEAF // 2])
+    mean, force = closed.mean[:, column], closed.mean[:, column + 1]
+    whole = np.isfinite(x).all(axis=1)
+    out = [motion]
+    for k, complete in enumerate(np.asarray(whole).tolist()):
+        m = out[-1]
+        f = float(force[k])
+        held = m.force if f != f or f < 0.5 * m.force else f
+        if not complete:
+            out.append(replace(m, force=held))
+            continue
+        seconds = (float(middle[k]) - m.tick) / TICKS_PER_S
+        rate = (float(mean[k]) - m.mean) / seconds if seconds > 0.0 else math.nan
+        out.append(Motion(rate, float(step[k]), float(noise[k]), float(middle[k]), float(mean[k]), held))
+    return tuple(out), closed.end
+
+
+def _noise(motions: tuple[Motion, ...], ends: IntArray, n: int) -> FloatArray:
+    """Return the noise of a scan as known before each of n scans."""
+    if not ends.size:
+        return np.full(n, motions[0].noise)
+    known = np.array([m.noise for m in motions])
+    return known[np.searchsorted(ends, np.arange(n), "right")]
