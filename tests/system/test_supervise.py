@@ -1,0 +1,71 @@
+"""Readiness and watchdog as the service manager sees them, on a real socket."""
+
+from __future__ import annotations
+
+import os
+import socket
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+
+from daq.supervise import Supervisor, notify
+
+
+@pytest.fixture
+def manager(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[socket.socket]:
+    """The service manager's end of the notification socket."""
+    with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as s:
+        s.bind(str(tmp_path / "n"))
+        s.settimeout(0.2)
+        monkeypatch.setenv("NOTIFY_SOCKET", str(tmp_path / "n"))
+        yield s
+
+
+def _heard(s: socket.socket) -> bytes:
+    try:
+        return s.recv(200)
+    except TimeoutError:
+        return b""
+
+
+def test_a_message_arrives_as_it_was_sent(manager: socket.socket) -> None:
+    """The protocol is one datagram of KEY=VALUE lines."""
+    assert notify("READY=1")
+    assert _heard(manager) == b"READY=1"
+
+
+def test_a_socket_of_the_abstract_name_space_works_too(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Service managers use both kinds."""
+    name = f"upturn-test-{os.getpid()}"
+    with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as s:
+        s.bind("\0" + name)
+        s.settimeout(0.2)
+        monkeypatch.setenv("NOTIFY_SOCKET", "@" + name)
+        assert notify("READY=1")
+        assert _heard(s) == b"READY=1"
+
+
+def test_without_a_manager_nothing_is_sent_and_nothing_fails(monkeypatch: pytest.MonkeyPatch) -> None:
+    """A run at a desk has no service manager."""
+    monkeypatch.delenv("NOTIFY_SOCKET", raising=False)
+    assert not notify("READY=1")
+
+
+def test_the_watchdog_is_fed_only_while_every_loop_moves(manager: socket.socket) -> None:
+    """A ping that one loop sends proves only that loop."""
+    now, beats = [0.0], {"a": 0, "b": 0}
+    supervisor = Supervisor(lambda: now[0])
+    for name in beats:
+        supervisor.watch(name, lambda name=name: beats[name], 10.0)  # type: ignore[misc]
+    assert supervisor.look() == []
+    assert _heard(manager) == b"WATCHDOG=1"
+    beats["a"] += 1
+    now[0] = 11.0
+    assert supervisor.look() == [("b", True)]
+    assert _heard(manager) == b""
+    beats["b"] += 1
+    beats["a"] += 1
+    now[0] = 12.0
+    assert supervisor.look() == [("b", False)]
+    assert _heard(manager) == b"WATCHDOG=1"
