@@ -1,0 +1,120 @@
+"""The emulated bench: a child process that plays the instruments, so that the rest is real.
+
+The daemon talks to it as to any laboratory: through drivers, on pseudo-terminals and sockets. Time may
+run faster than real time here, and only here, because every instrument is emulated; a lab file
+that mixes emulated and real instruments is refused when it also asks for speed.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+import threading
+from dataclasses import replace
+from pathlib import Path
+from typing import Any, Final
+
+from daq.clock import BenchClock, Clock, Origin, RealClock
+from daq.records import UpturnError
+from daq.settings import Instrument, Lab
+
+START_S: Final = 20.0
+
+
+class BenchError(UpturnError):
+    """The emulated instruments could not be started."""
+
+
+class Bench:
+    """The emulators of one lab file. ``instruments`` are the lab's with their real ports filled in."""
+
+    def __init__(self, lab: Lab) -> None:
+        self._lab = lab
+        self._process: subprocess.Popen[str] | None = None
+        self.instruments: tuple[Instrument, ...] = lab.instruments
+        self.clock: Clock = RealClock()
+
+    def start(self) -> None:
+        """Start the child and learn the ports.
+
+        Raises:
+            BenchError: it did not come up in time; the message carries what it said.
+        """
+        bench = self._lab.bench
+        if bench is None or not any(i.emulated for i in self._lab.instruments):
+            return
+        origin = Origin.keep(self._lab.journal / "bench.json", bench.speed)
+        if bench.speed != 1.0:
+            self.clock = BenchClock(origin)
+        spec = bench.spec | {
+            "origin_unix_s": origin.utc_ns / 1e9,
+            "origin_boot_ns": origin.boot_ns,
+            "speed": bench.speed,
+        }
+        path = self._lab.journal / "bench-spec.json"
+        path.write_text(json.dumps(spec), encoding="utf-8")
+        self._process = subprocess.Popen(
+            [sys.executable, "-m", "simulator.serve", str(path)],
+            stdin=subprocess.PIPE, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+            # a Ctrl-C at the terminal is for the daemon, which then closes our stdin
+            start_new_session=True,
+        )  # fmt: skip
+        ports = self._first_line(self._process)
+        self.instruments = tuple(
+            replace(i, port=ports[i.name], options={**i.options, "port": ports[i.name]}) if i.emulated else i
+            for i in self._lab.instruments
+        )
+
+    def _first_line(self, process: subprocess.Popen[str]) -> dict[str, Any]:
+        assert process.stdout is not None
+        assert process.stderr is not None
+        timer = threading.Timer(START_S, process.kill)
+        timer.start()
+        line = process.stdout.readline()
+        timer.cancel()
+        try:
+            ports: dict[str, Any] = json.loads(line)
+        except ValueError:
+            process.kill()
+            said = process.stderr.read()[-2000:]
+            raise BenchError(
+                f"emulated instruments: got {line!r}, wanted one line of ports; {said}"
+            ) from None
+        missing = [i.name for i in self._lab.instruments if i.emulated and i.name not in ports]
+        if missing:
+            raise BenchError(f"emulated instruments: no port for {', '.join(missing)}")
+        # what it says later is for the log of whoever looks; it must never fill the pipe
+        threading.Thread(target=_drain, args=(process,), daemon=True, name="bench-stderr").start()
+        return ports
+
+    def stop(self) -> None:
+        """Close the child's stdin, on which it ends; end it by force after two seconds."""
+        if self._process is None:
+            return
+        assert self._process.stdin is not None
+        self._process.stdin.close()
+        try:
+            self._process.wait(2.0)
+        except subprocess.TimeoutExpired:
+            self._process.kill()
+            self._process.wait(2.0)
+        for pipe in (self._process.stdout, self._process.stderr):
+            if pipe is not None:
+                pipe.close()
+        self._process = None
+
+
+def _drain(process: subprocess.Popen[str]) -> None:
+    try:
+        for line in process.stderr or ():
+            sys.stderr.write(f"emulated instruments: {line}")
+    except (OSError, ValueError):
+        return
+
+
+def fresh_folder(path: Path) -> None:
+    """Make the journal folder of a bench, private to this user."""
+    path.mkdir(parents=True, exist_ok=True)
+    os.chmod(path, 0o700)
