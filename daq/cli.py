@@ -1,0 +1,164 @@
+"""Arguments in, one call, exit code out."""
+
+from __future__ import annotations
+
+import argparse
+import os
+import signal
+import sys
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Final
+
+from daq import __version__
+from daq.records import UpturnError
+
+OK: Final = 0
+TROUBLE: Final = 1
+USAGE: Final = 2
+INPUT: Final = 3
+BUSY: Final = 4
+BROKEN: Final = 74
+
+EPILOG: Final = f"""\
+exit codes:
+  {OK}   done
+  {TROUBLE}   done, but something needs a look (a quarantined test, an alarm source that failed)
+  {USAGE}   wrong arguments or settings; every mistake is on stderr as file:line:col: path: message
+  {INPUT}   an input cannot be read; the message names file, line and column
+  {BUSY}   the journal is held by another running daemon, which the message names
+  {BROKEN}  disk or file system error: nothing more was acknowledged; the service manager restarts
+
+Upturn advises. Never wire it as the only protection of people, furnaces or specimens.
+"""
+
+
+def parser() -> argparse.ArgumentParser:
+    """Return the parser of all commands."""
+    try:
+        from rich_argparse import RawDescriptionRichHelpFormatter as Formatter
+    except ImportError:
+        Formatter = argparse.RawDescriptionHelpFormatter  # type: ignore[misc,assignment]  # noqa: N806
+    top = argparse.ArgumentParser(
+        prog="upturn",
+        description="Watches creep tests for weeks to years: strain rate, stages, rupture forecast, alarms.",
+        epilog=EPILOG,
+        formatter_class=Formatter,
+    )
+    top.add_argument("--version", action="version", version=f"upturn {__version__}")
+    commands = top.add_subparsers(dest="command", metavar="COMMAND", required=True)
+
+    def add(name: str, text: str, more: str = "") -> argparse.ArgumentParser:
+        return commands.add_parser(
+            name,
+            help=text,
+            description=f"{text[0].upper()}{text[1:]}.",
+            epilog=more,
+            formatter_class=Formatter,
+        )
+
+    p = add("run", "watch the frames of a lab file until told to stop (Ctrl-C or SIGTERM)")
+    p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the settings of this host")
+    p.add_argument("--plain", action="store_true", help="log lines even on a terminal, instead of the view")
+    p.add_argument(
+        "--for", dest="seconds", type=float, metavar="SECONDS", help="stop by itself after this time"
+    )
+
+    p = add("watch", "look at a running daemon, or at the record it left (read-only)")
+    p.add_argument(
+        "journal", type=Path, metavar="JOURNAL", help="the journal folder, or the lab file that names it"
+    )
+
+    p = add(
+        "tell",
+        "make an entry: what a person did or saw",
+        "examples:\n  upturn tell --lab hall-a.yaml H1 loaded --initials MK\n"
+        "  upturn tell --lab hall-a.yaml H1 acknowledge tertiary_detected --initials MK\n"
+        "  upturn tell --lab hall-a.yaml H1 shelve temperature_low --hours 4 --initials MK\n",
+    )
+    from daq.entries import ENTRIES
+
+    p.add_argument(
+        "--lab", type=Path, required=True, metavar="LAB.yaml", help="the lab file, or its journal folder"
+    )
+    p.add_argument(
+        "frame", metavar="FRAME", help="frame or FRAME/POSITION; 'host' for the installation itself"
+    )
+    p.add_argument(
+        "entry",
+        choices=sorted(ENTRIES),
+        metavar="ENTRY",
+        help="; ".join(f"{k}: {v}" for k, v in ENTRIES.items()),
+    )
+    p.add_argument("alarm", nargs="?", default="", metavar="ALARM", help="one alarm (else all of the frame)")
+    p.add_argument("--initials", required=True, help="who you are")
+    p.add_argument("--subject", default="", help="what the alarm concerns, where it names something")
+    p.add_argument("--hours", type=float, help="for shelve: how long")
+    p.add_argument(
+        "--minutes-ago", type=float, default=0.0, help="for loaded: how long ago the full load was on"
+    )
+    p.add_argument("--note", default="", help="a remark for the record")
+
+    p = add(
+        "replay",
+        "run a recording or a journal through the same engine, at full speed",
+        "examples:\n  upturn replay --rules LAB.yaml --frame H1 H1.csv --findings out.jsonl\n"
+        "  upturn replay var/hall-a --findings out.jsonl\n",
+    )
+    p.add_argument("source", type=Path, metavar="FILE.csv|JOURNAL", help="a recording, or a journal folder")
+    p.add_argument("--rules", type=Path, metavar="LAB.yaml", help="the lab file (for a recording)")
+    p.add_argument(
+        "--frame", help="the frame (for a recording: which one it is of; for a journal: only this one)"
+    )
+    p.add_argument(
+        "--findings", type=Path, metavar="OUT.jsonl", help="write one JSON line a finding ('-' for stdout)"
+    )
+    p.add_argument(
+        "--cut", type=int, metavar="SEED", help="cut the input into blocks at random: nothing may change"
+    )
+
+    p = add("export", "write the raw record of a frame, or its findings, as plain files")
+    p.add_argument(
+        "journal", type=Path, metavar="JOURNAL", help="the journal folder, or the lab file that names it"
+    )
+    p.add_argument("--frame", help="the frame to write (needed for --csv)")
+    p.add_argument(
+        "--csv", type=Path, metavar="OUT.csv", help="raw readings as a recording that replay accepts"
+    )
+    p.add_argument(
+        "--findings", type=Path, metavar="OUT.jsonl", help="the findings as concluded live ('-' for stdout)"
+    )
+
+    p = add(
+        "listen", "print the alarms that arrive at a broker, with their ids (a subscriber to try things with)"
+    )
+    p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the lab file that names the broker")
+    p.add_argument("--topic", default="", help="another topic filter than all of this site")
+    p.add_argument("--count", type=int, help="stop after so many messages")
+    p.add_argument("--for", dest="seconds", type=float, metavar="SECONDS", help="stop after this time")
+    return top
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run one command; return its exit code. Errors go to stderr, one line each."""
+    # the matrices here are small: threads of the linear algebra library would only fight over the cores,
+    # and one thread keeps its sums in one order whatever the machine
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    os.environ.setdefault("OMP_NUM_THREADS", "1")
+    args = parser().parse_args(argv)
+    from daq import commands  # late, so that --help costs nothing
+
+    try:
+        return commands.RUN[args.command](args)
+    except UpturnError as error:
+        print(f"upturn {args.command}: {error}", file=sys.stderr)
+        return commands.exit_code(error)
+    except KeyboardInterrupt:
+        return 128 + signal.SIGINT
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return OK
+
+
+if __name__ == "__main__":
+    sys.exit(main())

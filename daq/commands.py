@@ -1,0 +1,235 @@
+"""One function a command: from parsed arguments to an exit code."""
+
+from __future__ import annotations
+
+import sys
+import time
+from argparse import Namespace
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Final, TypeVar
+
+from daq.cli import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
+from daq.records import Finding, UpturnError
+
+T = TypeVar("T")
+
+
+class CommandError(UpturnError):
+    """The arguments do not fit together, or name something that is not there."""
+
+
+def run(args: Namespace) -> int:
+    """Watch the frames of a lab file until told to stop."""
+    from daq import daemon, settings
+
+    lab = settings.load(args.lab)
+    settings.must_be_ready(lab)
+    view = sys.stdout.isatty() and sys.stdin.isatty() and not args.plain
+    return daemon.run(lab, seconds=args.seconds, view=view)
+
+
+def watch(args: Namespace) -> int:
+    """Look at a journal, live or at rest."""
+    from daq.entries import write_entry
+    from daq.view.source import JournalSource
+    from daq.view.watch import watch as look
+
+    folder = journal_of(args.journal)
+
+    def enter(frame: str, entry: str, initials: str, values: dict[str, object], note: str = "") -> None:
+        write_entry(folder, frame, entry, initials, values, note)
+
+    return look(JournalSource(folder), enter=enter)
+
+
+def tell(args: Namespace) -> int:
+    """Make an operator entry through the spool folder."""
+    from daq.entries import write_entry
+    from daq.store.journal import JournalReader
+
+    folder = journal_of(args.lab)
+    frame, _, position = args.frame.partition("/")
+    with JournalReader(folder) as reader:
+        known = reader.frames()
+    if frame == "host":
+        frame = ""
+    elif frame not in known:
+        raise CommandError(f"frame: got {frame!r}, wanted one of {', '.join(known)}, or host")
+    values: dict[str, object] = {}
+    if position:
+        values["position"] = position
+    if args.alarm:
+        values |= {"alarm": args.alarm} | ({"subject": args.subject} if args.subject else {})
+    if args.hours is not None:
+        values["hours"] = args.hours
+    if args.minutes_ago:
+        values["minutes_ago"] = args.minutes_ago
+    path = write_entry(folder, frame, args.entry, args.initials, values, args.note)
+    for _ in range(20):  # say whether the daemon took it, when it is running
+        if not path.exists():
+            print(f"{args.frame}: {args.entry} entered by {args.initials}")
+            return OK
+        time.sleep(0.1)
+    print(f"{args.frame}: {args.entry} waits in {path} for the daemon, which does not seem to be running")
+    return TROUBLE
+
+
+def replay(args: Namespace) -> int:
+    """Run a recording or a journal through the engine."""
+    from daq import export, replay
+    from daq.engine import Engine
+    from daq.lines import iso_utc, json_line, plain_line
+
+    tally, engine = replay.Tally(), Engine()
+    if args.source.is_dir():
+        if not args.source.joinpath("journal.sqlite").exists():
+            raise CommandError(
+                f"{args.source}: got a folder without a journal, wanted a journal folder or a CSV file"
+            )
+        facts, how_at, whole = replay.journal_facts(args.source, args.frame), iso_utc, True
+        total: Callable[[], float] | None = None
+    else:
+        if args.rules is None or args.frame is None:
+            raise CommandError("replay of a recording: wanted --rules LAB.yaml and --frame NAME")
+        from daq import settings
+        from daq.recording import Recording
+
+        frame = _frame(settings.load(args.rules), args.frame)
+        recording = Recording(args.source, frame.name, frame.columns)
+        for note in recording.notes:
+            print(f"upturn replay: {note}", file=sys.stderr)
+        facts, how_at, whole = replay.recording_facts(recording, frame), recording.how_at, False  # type: ignore[assignment]
+        total = lambda: recording.done / max(recording.size, 1)  # noqa: E731
+    if args.cut is not None:
+        facts = replay.cut_at_random(facts, args.cut)
+    found = replay.run(facts, tally, engine)
+    shown = _with_progress(found, total)
+    if args.findings is None:
+        for finding in shown:
+            print(plain_line(finding))
+    else:
+        with export.open_out(args.findings) as out:
+            if whole:  # a journal: by time, as ``export --findings`` writes them; the tables last
+                everything = list(shown)
+                export.write_findings((f for f in everything if f.kind != "summary"), out)
+                export.write_findings((f for f in everything if f.kind == "summary"), out)
+            else:
+                out.writelines(json_line(finding, how_at) + "\n" for finding in shown)
+    print(f"upturn replay: {tally.say()}", file=sys.stderr)
+    for test, why in engine.quarantined.items():
+        print(f"upturn replay: {test}: quarantined: {why}", file=sys.stderr)
+    return TROUBLE if engine.quarantined else OK
+
+
+def export_(args: Namespace) -> int:
+    """Write raw readings or findings as plain files."""
+    from daq import export
+    from daq.store.journal import JournalReader
+
+    if args.csv is None and args.findings is None:
+        raise CommandError("export: wanted --csv OUT.csv or --findings OUT.jsonl")
+    if args.csv is not None and args.frame is None:
+        raise CommandError("export --csv: wanted --frame NAME, a recording is of one frame")
+    with JournalReader(journal_of(args.journal)) as reader:
+        if args.csv is not None:
+            with export.open_out(args.csv) as out:
+                scans = export.write_recording(reader, args.frame, out)
+            print(f"upturn export: {scans} scans of {args.frame} to {args.csv}", file=sys.stderr)
+        if args.findings is not None:
+            mine = (
+                f for _, f in reader.findings() if args.frame is None or f.frame.split("/")[0] == args.frame
+            )
+            with export.open_out(args.findings) as out:
+                count = export.write_findings(mine, out)
+            print(f"upturn export: {count} findings to {args.findings}", file=sys.stderr)
+    return OK
+
+
+def listen(args: Namespace) -> int:
+    """Print what arrives at the broker."""
+    from daq import settings
+    from daq.publish import listen
+
+    lab = settings.load(args.lab)
+    if lab.broker is None:
+        raise CommandError(f"{args.lab}: got no broker, wanted one to listen to")
+    return listen(lab.broker, site=lab.site, topic=args.topic, count=args.count, seconds=args.seconds)
+
+
+# --- shared -----------------------------------------------------------------------------
+
+
+def journal_of(path: Path) -> Path:
+    """Return the journal folder that ``path`` is, or that the lab file ``path`` names."""
+    if path.is_dir():
+        return path
+    if path.suffix in (".yaml", ".yml"):
+        from daq import settings
+
+        return settings.load(path).journal
+    raise CommandError(f"{path}: got no such folder, wanted a journal folder or a lab file")
+
+
+def _frame(lab: object, name: str):  # type: ignore[no-untyped-def]
+    from daq.settings import Lab
+
+    assert isinstance(lab, Lab)
+    for frame in lab.frames:
+        if frame.name == name:
+            return frame
+    raise CommandError(f"--frame: got {name!r}, wanted one of {', '.join(f.name for f in lab.frames)}")
+
+
+def _with_progress(items: Iterator[T], share: Callable[[], float] | None) -> Iterator[T]:
+    """Pass items through; on a terminal a bar on stderr shows how much of the source is done."""
+    if not sys.stderr.isatty():
+        yield from items
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeElapsedColumn
+
+    columns = (
+        TextColumn("replay"),
+        BarColumn(),
+        TaskProgressColumn(),
+        TimeElapsedColumn(),
+        TextColumn("{task.fields[at]}"),
+    )
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("replay", total=1.0 if share else None, at="")
+        for item in items:
+            if share:
+                bar.update(task, completed=share())
+            if isinstance(item, Finding) and item.test_h is not None:
+                bar.update(task, at=f"{item.frame} {item.test_h:.1f} h")
+            yield item
+
+
+def exit_code(error: UpturnError) -> int:
+    """Return the exit code that an error stands for."""
+    from daq.export import ExportError
+    from daq.recording import RecordingError
+    from daq.settings import SettingsError
+    from daq.store.errors import JournalBroken, JournalBusy, JournalError
+
+    table: tuple[tuple[type[UpturnError], int], ...] = (
+        (SettingsError, USAGE),
+        (CommandError, USAGE),
+        (JournalBusy, BUSY),
+        (JournalBroken, BROKEN),
+        (RecordingError, INPUT),
+        (ExportError, INPUT),
+        (JournalError, INPUT),
+    )
+    return next((code for kind, code in table if isinstance(error, kind)), USAGE)
+
+
+RUN: Final[dict[str, Callable[[Namespace], int]]] = {
+    "run": run,
+    "watch": watch,
+    "tell": tell,
+    "replay": replay,
+    "export": export_,
+    "listen": listen,
+}
