@@ -16,16 +16,19 @@ taken for one another, and are sent at least ``guard_s`` apart. With ``guard_s``
 no answer that arrives within ``longest_reply_s`` of its own question, be it the first or a repeated one,
 can be attributed to another question, whatever else is lost or garbled. With less, a repeated answer
 that comes later than ``guard_s`` and between another question and its answer cannot be told from that one.
+An answer later than ``longest_reply_s`` is still found out where answers keep the order of their questions
+and the canary asks for the identity: whatever came before the canary's answer is the past.
 """
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from enum import Enum
 from typing import Final, Generic, TypeVar
 
-from drivers.base import GARBLED, MISSING, InstrumentError, LinkError
+from drivers.base import GARBLED, MISSING, DriverError, IdentityError, InstrumentError, LinkError
 from drivers.lines import Garbled, LineCodec
 from drivers.options import OptionReader
 from drivers.transport import CHUNK, Transport
@@ -34,6 +37,8 @@ T = TypeVar("T")
 T_co = TypeVar("T_co", covariant=True)
 GAP_S: Final = 0.05
 """Silence after the last stray byte before it counts as the end of what was being sent."""
+WARM_UP_S: Final = 5.0
+"""Time for coming into step with several units of which the first may be dead."""
 FAILED_POLLS: Final = 2
 """Polls in a row without any answer after which the link needs a remedy."""
 _BLANK: Final = b"\r\n \t"
@@ -107,34 +112,67 @@ class Conversation:
         self._failed_polls = 0
         self._trouble = NoAnswer(MISSING, "nothing was asked", asked=False)
         self._codec = codec
-        self._trust = _Trust.SETTLE
+        self._trust = _Trust.QUIET
         self._quiet_until_s = 0.0
         self._sent_s: dict[str, float] = {}
 
     def begin(self) -> None:
         """Start anew on a port just opened; an answer to somebody before us may still be on its way."""
         self._codec.reset()
-        self._trust = _Trust.SETTLE
+        self._trust = _Trust.QUIET
         self._quiet_until_s = self.port.clock.now_s() + self.pace.longest_reply_s
         self._sent_s.clear()
         self._failed_polls = 0
 
-    def introduce(self, question: Question[T], until_s: float) -> T | NoAnswer:
-        """Ask a question whose answer no other question has: as good as a canary if it is right."""
+    def introduce(
+        self, request: bytes, wanted: re.Pattern[str], clean: Callable[[str], str] = str, echoed: str = ""
+    ) -> str:
+        """Ask who is there and return what it says; its answer is as good as a canary's.
+
+        Asked a second time, after silence, where the first answer does not fit: that may have been meant
+        for somebody before us. Raises IdentityError if both answers are the same and wrong,
+        InstrumentError if they are garbage, LinkError if there are none. Takes at most twice
+        ``timeout_s`` + ``longest_reply_s``.
+        """
+        heard: list[str] = []
+
+        def read(line: str) -> str:
+            text = clean(line).strip()
+            if not wanted.fullmatch(text):
+                heard.append(text)
+                raise NotTheAnswer(f"got {text[:80]!r}, need an identity like {wanted.pattern!r}")
+            return text
+
+        question = Question(request, read, IDENTITY_VOICE, echoed)
+        self.canaries = [question]
+        until_s = self.port.clock.now_s() + 2.0 * (self.pace.timeout_s + self.pace.longest_reply_s)
         answer = self._exchange(question, until_s)
-        if isinstance(answer, NoAnswer):
-            if self.settle(until_s):
-                answer = self._exchange(question, until_s)
-            if isinstance(answer, NoAnswer):
-                return answer
-        self._trust = _Trust.YES
-        return answer
+        if isinstance(answer, NoAnswer) and self._silence(until_s):
+            answer = self._exchange(question, until_s)
+        if not isinstance(answer, NoAnswer):
+            self._trust = _Trust.YES
+            return answer
+        if len(heard) == 2 and heard[0] == heard[1]:
+            raise IdentityError(f"{self.port.name}: {answer.why}")
+        raise self._complaint()
+
+    def warm_up(self) -> None:
+        """Come into step with an instrument that cannot say who it is; each canary is tried once.
+
+        Raises LinkError if it stays silent, InstrumentError if it answers with garbage.
+        """
+        now_s, pace = self.port.clock.now_s(), self.pace
+        until_s = now_s + max(2.0 * (pace.timeout_s + pace.longest_reply_s), WARM_UP_S)
+        for _ in self.canaries:
+            if self.in_step(until_s):
+                return
+        raise self._complaint()
 
     def ask(self, question: Question[T], until_s: float) -> T | NoAnswer:
         """Return the answer, or why there is none, before ``until_s``. LinkError when the wire fails."""
         answer: T | NoAnswer = _OUT_OF_STEP
         for _ in range(2):  # a second try only if the first found the line in doubt before it asked
-            if not self._in_step(until_s):
+            if not self.in_step(until_s):
                 return _OUT_OF_STEP
             answer = self._exchange(question, until_s)
             if not isinstance(answer, NoAnswer) or answer.asked or self._trust is _Trust.YES:
@@ -153,20 +191,14 @@ class Conversation:
             return
         self._failed_polls += tried
         if self._failed_polls >= FAILED_POLLS:
-            text = f"{self.port.name}: {self._trouble.why}"
-            raise InstrumentError(text) if self._trouble.quality == GARBLED else LinkError(text)
+            raise self._complaint()
 
     def tell(self, command: bytes, until_s: float) -> None:
         """Send what has no answer."""
         self.port.write(command, until_s)
 
-    def settle(self, until_s: float) -> bool:
-        """Wait for the silence that trust needs, without a canary; False if the time was too short."""
-        if self._trust is _Trust.YES:
-            return True
-        return self._silence(until_s)
-
-    def _in_step(self, until_s: float) -> bool:
+    def in_step(self, until_s: float) -> bool:
+        """Bring the conversation back into step if it is in doubt; False if time was too short."""
         clock = self.port.clock
         while self._trust is not _Trust.YES:
             if not self._silence(until_s):
@@ -186,6 +218,10 @@ class Conversation:
                 self._trust = _Trust.SETTLE
                 self._quiet_until_s = clock.now_s() + self.pace.longest_reply_s
         return True
+
+    def _complaint(self) -> DriverError:
+        text = f"{self.port.name}: {self._trouble.why}"
+        return InstrumentError(text) if self._trouble.quality == GARBLED else LinkError(text)
 
     def _silence(self, until_s: float) -> bool:
         """Throw away what arrives until the line has been silent long enough."""

@@ -34,12 +34,10 @@ from drivers.base import (
     Identity,
     IdentityError,
     InstrumentError,
-    LinkError,
     RawReading,
     no_reading,
 )
 from drivers.conversation import (
-    IDENTITY_VOICE,
     Conversation,
     NoAnswer,
     NotTheAnswer,
@@ -152,7 +150,6 @@ class Scpi:
         self._scan = Question(self._line(o.scan), lambda line: read_scan(line, o.yields), "scan")
         self._error = Question(self._line(o.error_query), read_error, "error")
         self._identified = False
-        self._heard = ""
         self._checked_s = 0.0
         self._in_doubt = False
 
@@ -171,18 +168,7 @@ class Scpi:
 
     def identify(self) -> Identity:
         o, clock = self._options, self._port.clock
-        self._heard = ""
-        question = Question(self._line("*IDN?"), self._read_identity, IDENTITY_VOICE)
-        self._talk.canaries = [question]
-        until_s = clock.now_s() + 2.0 * (o.pace.timeout_s + o.pace.longest_reply_s)
-        answer = self._talk.introduce(question, until_s)
-        if isinstance(answer, NoAnswer):
-            if self._heard:
-                raise IdentityError(
-                    f"{self._port.name}: got {_short(self._heard)}, "
-                    f"need an identity like {o.identity.pattern!r}"
-                )
-            raise LinkError(f"{self._port.name}: *IDN? was not answered ({answer.why})")
+        answer = self._talk.introduce(self._line("*IDN?"), o.identity)
         patience_s = o.pace.timeout_s + o.pace.longest_reply_s
         self._errors(clock.now_s() + patience_s)  # what happened before is of no concern
         for command in o.setup:
@@ -196,12 +182,6 @@ class Scpi:
         self._in_doubt = False
         self._identified = True
         return Identity(answer)
-
-    def _read_identity(self, line: str) -> str:
-        self._heard = line.strip()
-        if not self._options.identity.fullmatch(self._heard):
-            raise NotTheAnswer(f"got {_short(line)}, need {self._options.identity.pattern!r}")
-        return self._heard
 
     def poll(self, deadline_s: float) -> list[RawReading]:
         o, clock = self._options, self._port.clock

@@ -63,7 +63,6 @@ from drivers.base import (
     no_reading,
 )
 from drivers.conversation import (
-    IDENTITY_VOICE,
     Conversation,
     NoAnswer,
     NotTheAnswer,
@@ -76,6 +75,8 @@ from drivers.options import NEVER, OptionReader, must_be_fit
 from drivers.transport import CHUNK, Clock, Transport, read_port
 
 CONNECT_S: Final = 2.0
+OVERHEAR_S: Final = 5.0
+"""How long to wait for a talker that names itself."""
 REST_MOST: Final = 8
 """A unit that stays silent is asked in every eighth poll at least."""
 TTY_BUFFER: Final = 4000
@@ -389,60 +390,36 @@ class TextLine:
         self._port.close()
 
     def identify(self) -> Identity:
-        o, clock = self._options, self._port.clock
+        o = self._options
         if o.declared:
             if not self.listens:
-                self._talk.settle(clock.now_s() + 2.0 * o.pace.longest_reply_s)
                 self._talk.canaries = [question for _, question in self._questions]
+                self._talk.warm_up()
             self._identified = True
             return Identity(o.declared, declared=True)
         assert o.identity_reply is not None
-        heard: list[str] = []
         if self.listens:
-            text = self._overhear(o.identity_reply, heard)
+            text = self._overhear(o.identity_reply)
         else:
-            text = self._introduction(o.identity_reply, heard)
-        if text is None:
-            if heard:
-                raise IdentityError(
-                    f"{self._port.name}: got {_short(heard[-1])}, "
-                    f"need an identity like {o.identity_reply.pattern!r}"
-                )
-            raise LinkError(f"{self._port.name}: the instrument does not say who it is")
+            request, echo = self._request(o.identity_ask), self._echoed(o.identity_ask)
+            text = self._talk.introduce(request, o.identity_reply, self._unsealed, echo)
         self._identified = True
         return Identity(text)
 
-    def _introduction(self, wanted: re.Pattern[str], heard: list[str]) -> str | None:
-        def read(line: str) -> str:
-            text = self._unsealed(line).strip()
-            heard.append(text)
-            if not wanted.fullmatch(text):
-                raise NotTheAnswer(f"got {_short(text)}, need {wanted.pattern!r}")
-            return text
-
-        pace = self._options.pace
-        question = Question(
-            self._request(self._options.identity_ask),
-            read,
-            IDENTITY_VOICE,
-            self._echoed(self._options.identity_ask),
-        )
-        self._talk.canaries = [question]
-        patience_s = 2.0 * (pace.timeout_s + pace.longest_reply_s)
-        answer = self._talk.introduce(question, self._port.clock.now_s() + patience_s)
-        return None if isinstance(answer, NoAnswer) else answer
-
-    def _overhear(self, wanted: re.Pattern[str], heard: list[str]) -> str | None:
-        until_s = self._port.clock.now_s() + min(self._options.silence_s, 5.0)
-        while True:
-            data = self._port.read(CHUNK, until_s)
-            if not data:
-                return None
+    def _overhear(self, wanted: re.Pattern[str]) -> str:
+        until_s = self._port.clock.now_s() + min(self._options.silence_s, OVERHEAR_S)
+        heard = ""
+        while data := self._port.read(CHUNK, until_s):
             for event in self._codec.feed(data):
                 if isinstance(event, Line):
-                    heard.append(event.text)
-                    if wanted.fullmatch(event.text.strip()):
-                        return event.text.strip()
+                    heard = event.text.strip()
+                    if wanted.fullmatch(heard):
+                        return heard
+        if heard:
+            raise IdentityError(
+                f"{self._port.name}: got {_short(heard)}, need an identity like {wanted.pattern!r}"
+            )
+        raise LinkError(f"{self._port.name}: nothing was heard")
 
     def poll(self, deadline_s: float) -> list[RawReading]:
         if not self._identified:

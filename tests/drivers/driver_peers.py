@@ -30,6 +30,7 @@ class FaultyPeer:
     end = b"\r\n"
     sealed = False
     """Whether answers carry a checksum, so that any damage is visible."""
+    listens = False
 
     def __init__(
         self, seed: int = 0, *, reply_s: float = 0.004, timeout_s: float = 0.08, longest_s: float = 0.16
@@ -39,6 +40,10 @@ class FaultyPeer:
         self.second_copy_s = (0.0, 0.0)
         """When the second of two equal answers comes, after the first."""
         self.how = "well"
+        self.mood: Callable[[], str] | None = None
+        """Chooses the behaviour anew for each request."""
+        self.faults: list[str] = []
+        """What the mood chose."""
         self.asked = 0
         self._n = 0
         self._owed: dict[str, list[float]] = defaultdict(list)
@@ -46,6 +51,7 @@ class FaultyPeer:
         self._pending = b""
         self.gone: Callable[[bool], None] = lambda gone: None
         self.say: Callable[[float, bytes], None] = lambda delay_s, data: None
+        self.now_s: Callable[[], float] = time.monotonic
 
     # -- what check_driver asks of it
     def behave(self, how: str) -> None:
@@ -74,6 +80,9 @@ class FaultyPeer:
         answers: Answers = []
         for request in requests:
             self.asked += 1
+            if self.mood is not None:
+                self.how = self.mood()
+                self.faults.append(self.how)
             answers += self._misbehave(request.decode("latin-1"))
         return answers
 
@@ -97,7 +106,10 @@ class FaultyPeer:
             if not held:
                 self._held = answer
                 return []
-            return [(soon, held + answer if rng.random() < 0.5 else answer + held)]
+            kind = rng.randrange(3)
+            if kind == 0:  # in order, the second after a while
+                return [(soon, held), (soon + rng.uniform(0.0, 0.9 * self.longest_s), answer)]
+            return [(soon, held + answer if kind == 1 else answer + held)]
         if how == "babbling":
             kind = rng.choice(
                 [bytes(rng.randrange(256) for _ in range(64)), b"\xff" * 64, b"U" * 64, b"??\r\n"]
@@ -223,22 +235,29 @@ class TalkerPeer(FaultyPeer):
     """Talks by itself: ``$L +00001.015 R +00002.025*5A`` with fixed columns."""
 
     sealed = True
+    listens = True
     can = frozenset(BEHAVIOURS) - {"stranger", "late", "reordered", "drip"}
 
     def __init__(self, seed: int = 0, **times: float) -> None:
         super().__init__(seed, **times)
-        self._said: list[dict[str, list[float]]] = []
+        self._said: list[tuple[float, dict[str, list[float]]]] = []
+        self._began_s = [0.0, 0.0]
 
     def begin_poll(self) -> None:
-        """Say four lines within 15 ms; what was said for the last two polls may still be heard."""
-        self._owed = defaultdict(list)
-        self._said = [*self._said[-2:], self._owed]
-        for i in range(4):
-            for delay_s, data in self._misbehave("") if self.how != "gone" else []:
+        """Say four lines within 15 ms."""
+        now_s = self.now_s()
+        self._began_s = [self._began_s[1], now_s]
+        for i in range(4 if self.how != "gone" else 0):
+            self._owed = defaultdict(list)
+            arrives_s = 0.0
+            for delay_s, data in self._misbehave(""):
                 self.say(i * 0.004 + delay_s, data)
+                arrives_s = max(arrives_s, i * 0.004 + delay_s)
+            self._said.append((now_s + arrives_s, self._owed))
 
     def owed(self, name: str) -> Collection[float]:
-        return [number for said in self._said for number in said[name]]
+        """What arrived since the poll before the last one began."""
+        return [number for when_s, said in self._said if when_s >= self._began_s[0] for number in said[name]]
 
     def receive(self, data: bytes) -> Answers:
         return []
@@ -272,7 +291,7 @@ def scripted(peer: FaultyPeer) -> ScriptedPort:
     def gone(gone: bool) -> None:
         port.plugged = not gone
 
-    peer.gone, peer.say = gone, port.say
+    peer.gone, peer.say, peer.now_s = gone, port.say, port.clock.now_s
     return port
 
 

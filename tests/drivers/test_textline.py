@@ -17,12 +17,21 @@ from drivers.scripted import ScriptedPort
 from drivers.textline import TextLine
 
 BASE = {"port": "/dev/none", "identity": {"declared": "a gauge that cannot say"}, "timeout_s": 0.1}
+NAMED = {**BASE, "identity": {"ask": "ID", "reply": "GAUGE"}}
+
+
+def far_end(line: str, end: str = "\r\n") -> ScriptedPort:
+    """An instrument that says its name, and this line to everything else."""
+
+    def answer(data: bytes) -> list[tuple[float, bytes]]:
+        return [(0.01, ("GAUGE" if data.startswith(b"ID") else line).encode("latin-1") + end.encode())]
+
+    return ScriptedPort(answer)
 
 
 def read(line: str, **options: Any) -> dict[str, tuple[float, str]]:
     """Ask once; return what came of that line."""
-    port = ScriptedPort(lambda _: [(0.01, line.encode("latin-1") + b"\r\n")])
-    driver = TextLine({**BASE, "ask": "?", **options}, port=port)
+    driver = TextLine({**NAMED, "ask": "?", **options}, port=far_end(line))
     driver.open()
     try:
         driver.identify()
@@ -90,7 +99,7 @@ def test_requests_carry_unit_number_checksum_and_terminator() -> None:
     """To the last byte, as a manual's example would print it."""
     sent: list[bytes] = []
 
-    def far_end(data: bytes) -> list[tuple[float, bytes]]:
+    def answer(data: bytes) -> list[tuple[float, bytes]]:
         sent.append(data)
         return [(0.01, Checksum("sum8").seal("+1.5").encode() + b"\r")]
 
@@ -98,9 +107,10 @@ def test_requests_carry_unit_number_checksum_and_terminator() -> None:
         "ask": "#{unit}A", "terminator": "\r", "checksum": {"kind": "sum8"}, "request_checksum": True,
         "yields": {"a": {"unit": "01"}, "b": {"unit": "FF"}},
     }  # fmt: skip
-    driver = TextLine({**BASE, **options}, port=ScriptedPort(far_end))
+    driver = TextLine({**BASE, **options}, port=ScriptedPort(answer))
     driver.open()
     driver.identify()
+    del sent[:]
     assert [r.quality for r in driver.poll(2.0)] == ["good", "good"]
     # 0x23 + 0x30 + 0x31 + 0x41 = 0xC5; 0x23 + 0x46 + 0x46 + 0x41 = 0xF0
     assert sent == [b"#01AC5\r", b"#FFAF0\r"]
@@ -109,8 +119,12 @@ def test_requests_carry_unit_number_checksum_and_terminator() -> None:
 def test_an_instrument_that_repeats_the_command_is_understood() -> None:
     """The echo is checked, not just skipped: it shows that the question arrived undamaged."""
     for echo, wanted in (("D1", "good"), ("D2", "garbled")):
-        port = ScriptedPort(lambda _, e=echo: [(0.01, f"{e}\r\n+1.5\r\n".encode())])
-        driver = TextLine({**BASE, "ask": "D1", "command_echo": True, "yields": {"a": {}}}, port=port)
+        port = ScriptedPort(
+            lambda data, e=echo: [
+                (0.01, b"ID\r\nGAUGE\r\n" if data == b"ID\r\n" else f"{e}\r\n+1.5\r\n".encode())
+            ]
+        )
+        driver = TextLine({**NAMED, "ask": "D1", "command_echo": True, "yields": {"a": {}}}, port=port)
         driver.open()
         driver.identify()
         assert driver.poll(1.0)[0].quality == wanted
@@ -136,7 +150,7 @@ def test_readings_with_the_same_question_share_one() -> None:
         (b"GAUGE 8\r\n", IdentityError),
         (b"+1.2345\r\n", IdentityError),
         (b"", LinkError),
-        (b"\xff\r\n", LinkError),
+        (b"\xff\r\n", InstrumentError),
     ],
 )
 def test_a_wrong_or_missing_identity_is_refused(answer: bytes, error: type[Exception]) -> None:
@@ -204,8 +218,7 @@ def test_a_dead_bus_is_a_link_error_in_the_second_poll() -> None:
 
 def test_an_answer_that_never_fits_is_an_instrument_error() -> None:
     """The message shows what came, so that the pattern can be mended."""
-    port = ScriptedPort(lambda data: [(0.01, b"1.5 kN\r\n")])
-    driver = TextLine({**BASE, "ask": "D", "yields": {"a": {}}}, port=port)
+    driver = TextLine({**NAMED, "ask": "D", "yields": {"a": {}}}, port=far_end("1.5 kN"))
     driver.open()
     driver.identify()
     assert driver.poll(0.9)[0].quality == "garbled"
@@ -215,15 +228,15 @@ def test_an_answer_that_never_fits_is_an_instrument_error() -> None:
 
 def test_a_late_answer_is_never_taken_for_a_later_one() -> None:
     """The measured trap: with one slow answer every later one is off by one, and looks sound."""
-    delays = iter([0.01, 0.15, 0.01, 0.01, 0.01, 0.01, 0.01, 0.01])
+    delays = iter([0.01, 0.01, 0.15, 0.01, 0.01, 0.01, 0.01, 0.01, 0.01])
     said = iter(range(1, 100))
     owed: list[float] = []
 
-    def far_end(data: bytes) -> list[tuple[float, bytes]]:
+    def answer(data: bytes) -> list[tuple[float, bytes]]:
         owed.append(float(next(said)))
         return [(next(delays), f"{owed[-1]:g}\r\n".encode())]
 
-    driver = TextLine({**BASE, "ask": "D", "yields": {"a": {}}}, port=ScriptedPort(far_end))
+    driver = TextLine({**BASE, "ask": "D", "yields": {"a": {}}}, port=ScriptedPort(answer))
     driver.open()
     driver.identify()
     polls = []
@@ -231,7 +244,17 @@ def test_a_late_answer_is_never_taken_for_a_later_one() -> None:
         (reading,) = driver.poll(0.9)
         polls.append(reading.value if reading.quality == "good" else reading.quality)
         assert reading.quality != "good" or reading.value == owed[-1]
-    assert polls == [1.0, "missing", 4.0, 5.0, 6.0]  # 3 answered the canary
+    assert polls == [2.0, "missing", 5.0, 6.0, 7.0]  # 1 and 4 answered canaries
+
+
+def test_an_instrument_that_cannot_say_who_it_is_must_at_least_answer() -> None:
+    """A declared identity says nothing about whether anybody is there."""
+    options = {**BASE, "ask": "D", "yields": {"a": {}}}
+    for port, error in ((ScriptedPort(lambda _: []), LinkError), (far_end("1.5 kN"), InstrumentError)):
+        driver = TextLine(options, port=port)
+        driver.open()
+        with pytest.raises(error):
+            driver.identify()
 
 
 # ------------------------------------------------------------------------------------- listening
