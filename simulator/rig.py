@@ -52,7 +52,8 @@ class Truth:
     time: a furnace wander is never an onset. ``rises``: the rate rises again after its least value, by 1 % or
     more, inside the record. ``turns_tertiary``: by 5 % or more. A tertiary detection is false where
     ``rises`` is not so or it comes before ``first_rise_h`` (see ``onset.CurveEvents``); ``minimum_h`` is the
-    later one of the two on the rare curves with several minima.
+    later one of the two on the rare curves with several minima. Before ``incubation_h`` (zero but for inverse
+    primary) a rising rate is incubation; the best possible delay is worked out on what comes after.
 
     ``t_h``, ``equivalent_h``, ``strain``, ``rate_per_h``, ``specimen_c``: the true courses up to the end, on
     one grid. ``strain`` is as bent by the furnace; at the set point: ``spec.creep.strain(equivalent_h)``.
@@ -63,6 +64,7 @@ class Truth:
     rupture_h: float | None
     rises: bool
     turns_tertiary: bool
+    incubation_h: float
     minimum_h: float
     minimum_rate_per_h: float
     first_rise_h: float | None
@@ -262,6 +264,7 @@ def _truth(spec: RigSpec, world: World, end_h: float, rupture_h: float | None) -
         rupture_h=rupture_h,
         rises=rises,
         turns_tertiary=found.rise_5_percent_h is not None,
+        incubation_h=dated(spec.creep.incubation_h) or 0.0,
         minimum_h=minimum_h,
         minimum_rate_per_h=found.minimum_rate_per_h,
         first_rise_h=dated(first) if rises else None,
