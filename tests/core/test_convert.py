@@ -225,6 +225,17 @@ def test_a_temperature_is_worth_no_more_than_its_cold_junction(quality: Quality)
     assert np.isnan(b.values[0, 0]) == (quality >= BAD)
 
 
+def test_a_temperature_beside_a_good_junction_is_judged_like_any_other() -> None:
+    """Beyond the curve, or beyond the channel's own limits."""
+    v = Conversion(thermocouple="K", cold_junction_channel="cj")
+    hot = ChannelRules("hot", Role.SPECIMEN_TEMPERATURE, conversion=v, high=1000.0)
+    b = converted(
+        rules(hot, ChannelRules("cj", Role.COLD_JUNCTION)), [[80.0, 25.0], [45.0, 25.0], [4.096, 25.0]]
+    )
+    assert b.quality[:, 0].tolist() == [Quality.BAD_RANGE, Quality.BAD_RANGE, Quality.GOOD]
+    assert np.isnan(b.specimen_c).tolist() == [True, True, False]
+
+
 def test_strain_of_extension_refers_to_the_extensometers_length() -> None:
     """0.05 mm on 25 mm is 0.2 %; the channel itself stays in mm."""
     r = rules(ChannelRules("l", Role.EXTENSION, "A"), ChannelRules("r", Role.EXTENSION, "B"))
@@ -251,7 +262,7 @@ def test_the_best_source_by_rank_is_used_and_the_next_where_it_has_no_number() -
     """A fine transducer ends at its limit, the beam goes on."""
     fine = ChannelRules("fine", Role.EXTENSION, "A", rank=0, high=2.0)
     beam = ChannelRules("beam", Role.STRAIN, "A", rank=1)
-    b = converted(rules(beam, fine), [[0.01, 0.25], [0.09, 2.5], [0.1, np.nan]], [[0, 0], [0, 0], [0, 66]])
+    b = converted(rules(beam, fine), [[0.02, 0.25], [0.09, 2.5], [0.1, np.nan]], [[0, 0], [0, 0], [0, 66]])
     assert b.strain_a == pytest.approx([0.01, 0.09, 0.1])
     assert b.quality[:, 1].tolist() == [Quality.GOOD, Quality.BAD_RANGE, Quality.BAD_GARBLED]
 

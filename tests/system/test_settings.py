@@ -152,6 +152,16 @@ def test_positions_share_what_the_frame_says_and_may_say_otherwise() -> None:
     assert (upper.below_k, upper.tolerance) == (3.0, "stated")
 
 
+def test_a_position_that_says_otherwise_is_believed() -> None:
+    """The nearer word holds, load, band and limits alike."""
+    own = "{id: S-2, diameter_mm: 4}, stress_mpa: 90, temperature_c: 700, limits: {gradient_k: 2}"
+    position = f"a: {{specimen: {own}, channels: {{x: {{role: strain}}}}}}"
+    text = frame(f"limits: {{strain_percent: 1}}\npositions:\n  {position}")
+    rules = rules_of(text.replace("    specimen: {id: S-1}\n", "", 1))
+    assert (rules.stress_pa, rules.set_point_c, rules.above_k) == (90e6, 700.0, 4.0)
+    assert (rules.limits.gradient_k, rules.limits.strain) == (2.0, None), "a section is taken as a whole"
+
+
 def test_units_are_folded_into_the_conversion(tmp_path: Path) -> None:
     """A recording in percent and degF comes out in m/m and degC, limits included."""
     text = frame("""
@@ -202,6 +212,9 @@ def test_scans_come_as_often_as_the_slowest_instrument_unless_said() -> None:
     """A column would be empty half the time otherwise."""
     body = "channels: {a: {role: strain, source: gauge.left}}"
     assert loads(frame(body, GAUGE), "lab.yaml").frames[0].scan_every_s == 1.0
+    slow = GAUGE + GAUGE.replace("instruments:\n", "").replace("gauge:", "slow:\n    poll_s: 5")
+    two = "channels: {a: {role: strain, source: slow.left}, b: {role: other, source: gauge.left}}"
+    assert loads(frame(two, slow), "lab.yaml").frames[0].scan_every_s == 5.0
     said = loads(frame(f"sampling: {{scan_every_s: 30}}\n{body}", GAUGE), "lab.yaml").frames[0]
     assert said.scan_every_s == 30.0
     assert said.tests[0].scan_every_s == 30.0

@@ -242,6 +242,13 @@ def test_a_mistake_in_a_conversion_is_named(conversion: str, complaint: str) -> 
     assert any(complaint in line for line in found), "\n".join(found)
 
 
+def test_one_mistake_is_named_once() -> None:
+    """An empty value is no mapping either; the second complaint would only follow from the first."""
+    assert complaints(frame("channels:\n  a: {role: strain}\n  b:")) == [
+        "lab.yaml:11:7: frames.H1.channels.b: got nothing, wanted a value (or leave the key out)"
+    ]
+
+
 def test_a_thermocouple_measures_no_strain() -> None:
     """An emf in a strain channel is a slip of the pen."""
     body = "channels: {a: {role: strain, conversion: {thermocouple: K, cold_junction: by_instrument}}}"
