@@ -1,0 +1,122 @@
+"""Spikes, slips, re-zeros and sides that come and go: what is set right before scans become leaves.
+
+Works on a few raw scans beside the ones just before them, one side at a time. A scan that differs from its
+predecessor by more than noise and creep explain is *suspected*: it and what follows wait in the
+buffer until five scans have been seen from there on. If the level stays, it was a step; if it
+comes back, a spike. A step is taken out of what follows by an offset, never out of the record,
+and the ladder begins a new segment, whose level the estimator may fit anew: so the neutralisation can be undone.
+
+Thresholds are in units of the noise of single scans, measured on the scans themselves as the median of second
+differences (insensitive to creep, drift and steps), never below the resolution seen. Six standard deviations: one
+Gaussian scan in 5e8 is wrongly suspected, and wrong suspicion only costs a wait of four scans.
+"""
+
+from __future__ import annotations
+
+from typing import Final, NamedTuple
+
+import numpy as np
+
+from daq.records import FloatArray
+
+SUSPECT_SDS: Final = 6.0
+CONFIRM: Final = 5
+"""Scans needed from a suspected one on: a median of five outvotes two further spikes."""
+CONTEXT: Final = 24
+"""Clean scans kept before the buffer."""
+TEAR: Final = 0.01
+"""A jump of all sides in the direction of creep by more than this strain is a specimen tearing, not a slip:
+an extensometer slips by far less before its travel or its alarm notices (common practice, no source)."""
+
+
+class Judged(NamedTuple):
+    """What became of one side's rows.
+
+    ``spikes`` (n,) mask. ``step_at`` row before which a step of ``size`` lies, else None.
+    ``hold_at`` first row that must wait, else None. ``noise`` s.d. of single scans.
+    """
+
+    spikes: np.ndarray
+    step_at: int | None
+    size: float
+    hold_at: int | None
+    noise: float
+
+
+def scan_noise(v: FloatArray) -> float:
+    """Return the s.d. of single scans from second differences (n,), at least the resolution's; NaN if n < 5."""
+    v = v[np.isfinite(v)]
+    if v.size < 5:
+        return float("nan")
+    second = np.abs(v[1:-1] - 0.5 * (v[2:] + v[:-2]))
+    first = np.abs(np.diff(v))
+    seen = first[first > 1e-12]
+    resolution = float(seen.min()) if seen.size else 0.0
+    return max(1.4826 * float(np.median(second)) / np.sqrt(1.5), 0.3 * resolution)
+
+
+def judge(t_h: FloatArray, v: FloatArray, context: int, noise_before: float, final: bool) -> Judged:
+    """Judge the rows from ``context`` on of one side.
+
+    Args:
+        t_h: Stamps [h], context rows first; (c + n,).
+        v: Strain of one side, earlier steps taken out; NaN where there is none.
+        context: How many leading rows are context, already judged.
+        noise_before: Long-run noise of single scans; NaN in the beginning.
+        final: No more rows will come: decide with what is there.
+    """
+    n = v.shape[0] - context
+    spikes = np.zeros(n, dtype=bool)
+    good = np.flatnonzero(np.isfinite(v))
+    now = scan_noise(v)
+    noise = float(np.nanmax([now, 0.7 * noise_before])) if np.isfinite(now) else noise_before
+    if good.size < 6 or not np.isfinite(noise):
+        return Judged(spikes, None, 0.0, None, now)
+    for _ in range(12):
+        tg, vg = t_h[good], v[good]
+        slope = _slope(tg, vg)
+        dt = np.abs(np.diff(tg))
+        limit = SUSPECT_SDS * np.sqrt(2.0) * noise + 0.7 * abs(slope) * dt
+        odd = np.flatnonzero((np.abs(np.diff(vg) - slope * np.diff(tg)) > limit) & (good[1:] >= context))
+        if odd.size == 0:
+            break
+        j = int(odd[0]) + 1
+        after = slice(j, min(j + CONFIRM + 3, good.size))
+        if good.size - j < CONFIRM and not final:
+            return Judged(spikes, None, 0.0, int(good[j]) - context, now)
+        before = slice(max(0, j - 8), j)
+        level0 = float(np.median(vg[before] - slope * (tg[before] - tg[j])))
+        level1 = float(np.median(vg[after] - slope * (tg[after] - tg[j])))
+        jump = level1 - level0
+        room = 0.7 * abs(slope) * float(np.max(np.diff(tg[before.start : after.stop])))
+        k0, k1 = before.stop - before.start, after.stop - after.start
+        if k1 >= CONFIRM and abs(jump) > SUSPECT_SDS * noise * np.sqrt(1.57 * (1 / k0 + 1 / k1)) + room:
+            if abs(vg[j] - level1) <= abs(vg[j] - level0):
+                return Judged(spikes, int(good[j]) - context, jump, None, now)
+        if abs(vg[j] - level0) > SUSPECT_SDS * noise:
+            spikes[good[j] - context] = True
+            good = np.delete(good, j)
+        else:
+            break
+    return Judged(spikes, None, 0.0, None, now)
+
+
+def _slope(t: FloatArray, v: FloatArray) -> float:
+    """Return a median slope of pairs half the record apart: one step or spike does not move it much."""
+    h = t.size // 2
+    dt = t[h:] - t[: t.size - h]
+    ok = dt > 0
+    if not ok.any():
+        return 0.0
+    return float(np.median((v[h:] - v[: v.size - h])[ok] / dt[ok]))
+
+
+def cause_of(sides: tuple[str, ...], sizes: tuple[float, ...], both_there: bool) -> str:
+    """Say in words what a step may have been."""
+    if not both_there:
+        return "jump of the only side: slip, re-zero or a shock"
+    if len(sides) == 1:
+        return f"side {sides[0]} alone jumped: slip or re-zero"
+    if min(sizes) < 0 < max(sizes):
+        return "both sides jumped in opposite directions: knock on the extensometer"
+    return "both sides jumped together: re-zero, shock or change of load"

@@ -1,0 +1,353 @@
+"""Evidence that the creep rate, having fallen or stood still, now rises.
+
+Two families of curves are compared on the block means of the ladder, in temperature-equivalent time:
+
+* *the rate never rises*: any concave curve, as non-negative least squares on concave hinges and
+  saturating exponentials (whatever primary and secondary creep look like, they are in it);
+* *and then it rises*: the same plus one convex departure (t - onset)^2 for an onset on a grid.
+
+What else bends a curve takes part in both: apparent strain of specimen and room temperature (lagged), an
+error of the activation energy, sizes of slips, the day wave where no room temperature is logged. The noise is
+integrated over a grid (``core.noise``) in both. The evidence is the log of the ratio of the two integrated likelihoods
+(restricted likelihood, scale profiled), the onset averaged over its grid, so that it behaves as a likelihood
+ratio does: at most a share alpha of tests without a rise ever see it above log(1/alpha) (Ville 1939) where the model
+is right, and what the threshold must add because the model is fitted was found on simulated rigs.
+A step that nobody saw is a third explanation: evidence is counted only as far as a step at any one time would not do as well.
+"""
+
+from __future__ import annotations
+
+from typing import Final, NamedTuple
+
+import numpy as np
+
+from daq.core import ladder, noise
+from daq.records import FloatArray
+
+FLOOR: Final = 0.2e-6
+"""Systematic error of a block mean [strain] that no extensometer can be trusted beyond: 5 nm on 25 mm."""
+SINCE: Final = (0.03, 0.05, 0.08, 0.12, 0.17, 0.23, 0.3, 0.4, 0.5, 0.62, 0.75, 0.88)
+"""Onsets tried, as shares of the elapsed time before now."""
+QUIET: Final = 1.0
+"""Evidence under the best noise model below which the others are not asked."""
+MODELS: Final = 8
+"""Noise models that are kept for the second family."""
+EXPONENTIALS: Final = (0.01, 0.02, 0.04, 0.08, 0.16, 0.32, 0.64, 1.28)
+
+
+THIN: Final = (0.06, 0.005, 0.1)
+"""How far blocks are merged for a look: shares of distance from now, of the test, and of the time of test."""
+
+
+class Design(NamedTuple):
+    """Columns of the regression: free ones, concave ones (non-negative), departures, steps, and the data.
+
+    ``x`` (n,) shares of elapsed equivalent time, ``precision`` (f,) prior precisions of the free columns in
+    units of one scan's variance, ``sd`` of one scan.
+    """
+
+    x: FloatArray
+    variance: FloatArray
+    free: FloatArray
+    concave: FloatArray
+    departures: FloatArray
+    since: FloatArray
+    steps: FloatArray
+    step_at: FloatArray
+    y: FloatArray
+    precision: FloatArray
+    sd: float
+    now: float
+    knots: FloatArray
+
+
+class Evidence(NamedTuple):
+    """What one look found.
+
+    ``log_ratio``: evidence for a rise against the better of "never rises" and "a step", ``against_falling``
+    against the first alone. ``since``: share of the elapsed equivalent time since the most likely onset.
+    ``fall_gain``: log likelihood gained by letting the rate fall before the onset, ``fall_ratio`` first rate over
+    least, ``rise_ratio`` rate now over least, ``offset`` strain above the tangent at the least rate, all on the best
+    fitting curve. ``noise``: (k, 4) memory [h], drift variance, variance of one scan [strain^2], weight, of the
+    noise models that matter.
+    """
+
+    log_ratio: float
+    against_falling: float
+    since: float
+    fall_gain: float
+    fall_ratio: float
+    rise_ratio: float
+    offset: float
+    minimum_share: float
+    noise: FloatArray
+    x: FloatArray
+    rates: FloatArray
+
+
+def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error: float) -> Design:
+    """Build the regression from the ladder.
+
+    ``q_error``: prior s.d. [1/K] of the error of the temperature sensitivity of the rate, 0 for none.
+    """
+    sd = ladder.white_sd(rungs) * 1e6
+    rungs = ladder.thinned(rungs[rungs[:, ladder.T] > 0.004 * rungs[-1, ladder.T]], *THIN)
+    u = rungs[:, ladder.U]
+    now = float(u[-1])
+    x = u / now
+    n = rungs[:, ladder.N]
+    y = (rungs[:, ladder.E] - rungs[0, ladder.E]) * 1e6
+    if not np.isfinite(sd):
+        d2 = y[1:-1] - 0.5 * (y[2:] + y[:-2])
+        sd = float(np.sqrt(np.mean(d2 * d2) / 1.5)) if d2.size else 1.0
+    sd = max(sd, 0.05)
+    variance = 1.0 / n + (FLOOR * 1e6 / sd) ** 2
+    free = [np.ones_like(x), x]
+    precision = [0.0, 0.0]
+    if has_temperature:
+        t = rungs[:, ladder.TEMP]
+        t = t - np.mean(t)
+        if np.std(t) > 1e-3:
+            free.append(t)
+            precision.append(
+                (sd / 30.0) ** 2
+            )  # apparent strain of at most some tens of microstrain per kelvin
+            rate = float((y[-1] - y[0]) / max(now - u[0], 1e-9))
+            q = rungs[:, ladder.Q] * rate  # what a relative rate error of 1 per kelvin would do [microstrain]
+            if q_error > 0 and np.std(q) > 0:
+                free.append((q - np.mean(q)) * q_error)
+                precision.append(sd**2)
+    if has_room:
+        for c in (ladder.ROOM0, ladder.ROOM1, ladder.ROOM2):
+            r = rungs[:, c] - np.mean(rungs[:, c])
+            if np.std(r) > 1e-3:
+                free.append(r)
+                precision.append((sd / 100.0) ** 2)
+    elif rungs[-1, ladder.T] > 60.0:
+        phase = 2.0 * np.pi * rungs[:, ladder.T] / 24.0
+        fine = np.minimum(1.0, np.maximum(0.0, 2.0 - (rungs[:, ladder.END] - rungs[:, ladder.START]) / 6.0))
+        free += [np.cos(phase) * fine, np.sin(phase) * fine]
+        precision += [(sd / 100.0) ** 2] * 2
+    seg = rungs[:, ladder.SEGMENT]
+    for s in np.unique(seg)[1:][-6:]:
+        free.append((seg >= s).astype(np.float64))
+        precision.append(0.0)
+    knots = _knots(x)
+    concave = np.concatenate(
+        (
+            -np.maximum(x[:, None] - knots[None, :], 0.0) / (1.0 - knots)[None, :],
+            1.0 - np.exp(-x[:, None] / np.array(EXPONENTIALS)[None, :]),
+        ),
+        axis=1,
+    )
+    since = np.array([s for s in SINCE if np.count_nonzero(x > 1.0 - s) >= 4])
+    departures = np.maximum(x[:, None] - (1.0 - since)[None, :], 0.0) ** 2 / (since**2)[None, :]
+    at = 0.5 * (x[1:] + x[:-1])
+    at = at[3:-3:3]
+    steps = (x[:, None] > at[None, :]).astype(np.float64)
+    return Design(
+        x,
+        variance,
+        np.stack(free, axis=1),
+        concave,
+        departures,
+        since,
+        steps,
+        at,
+        y,
+        np.array(precision),
+        sd,
+        now,
+        knots,
+    )
+
+
+def _knots(x: FloatArray) -> FloatArray:
+    """Return knots for concave hinges: about geometric from the start and towards now."""
+    knots = []
+    last = 0.0
+    for v in x[2:-2]:
+        if v - last >= min(0.1 * v, 0.03 + 0.1 * (1.0 - v)):
+            knots.append(float(v))
+            last = float(v)
+    return np.array(knots)
+
+
+def nnls(h: FloatArray, b: FloatArray, start: FloatArray | None = None) -> tuple[FloatArray, FloatArray]:
+    """Minimise z'Hz - 2 b'z over z >= 0 by the active-set method of Lawson and Hanson (1974).
+
+    Returns (z, passive mask). ``start``: passive set to begin with (warm start).
+    """
+    m = b.shape[0]
+    tol = 1e-9 * float(np.max(np.abs(b), initial=1e-300))
+    z = np.zeros(m)
+    passive = np.zeros(m, dtype=bool)
+    if start is not None and start.any():
+        idx = np.flatnonzero(start)
+        while idx.size:
+            s = _solve(h, b, idx)
+            if s.min() > 0:
+                z[idx] = s
+                passive[idx] = True
+                break
+            idx = idx[s > 0]
+    for _ in range(3 * m):
+        w = b - h @ z
+        w[passive] = -np.inf
+        j = int(np.argmax(w))
+        if w[j] <= tol:
+            break
+        passive[j] = True
+        while True:
+            idx = np.flatnonzero(passive)
+            s = _solve(h, b, idx)
+            if s.min() > 0:
+                z = np.zeros(m)
+                z[idx] = s
+                break
+            old = z[idx]
+            bad = s <= 0
+            step = float(np.min(old[bad] / np.maximum(old[bad] - s[bad], 1e-300)))
+            new = old + step * (s - old)
+            drop = bad & (new <= 1e-14 * np.max(np.abs(new), initial=1e-300))
+            if not drop.any():
+                drop = bad & (new == new[bad].min())
+            z = np.zeros(m)
+            z[idx] = np.where(drop, 0.0, np.maximum(new, 0.0))
+            passive[idx[drop]] = False
+    return z, passive
+
+
+def _solve(h: FloatArray, b: FloatArray, idx: FloatArray) -> FloatArray:
+    g = h[idx[:, None], idx]
+    g.flat[:: idx.size + 1] *= 1.0 + 1e-11
+    return np.linalg.solve(g, b[idx])
+
+
+def weigh(d: Design, keep: float = 6.0) -> Evidence:
+    """Compare the families of curves; see the head of this file.
+
+    ``keep``: noise models whose likelihood lies this far [log] below the best in both families are left out.
+    """
+    f, c, k, s = d.free.shape[1], d.concave.shape[1], d.departures.shape[1], d.steps.shape[1]
+    columns = np.concatenate((d.free, d.concave, d.departures, d.steps, d.y[:, None]), axis=1)
+    n = d.x.shape[0]
+    dof = n - f
+    floor = 1e-6 * n
+    rests, consts, tags = [], [], []
+    whole = []
+    for white in noise.whiten(d.x, d.variance, columns):
+        gram = (white.columns.T[None, :, :] * white.weights[:, None, :]) @ white.columns
+        ff = gram[:, :f, :f] + np.diag(d.precision + 1e-12)
+        rests.append(gram[:, f:, f:] - gram[:, f:, :f] @ np.linalg.solve(ff, gram[:, :f, f:]))
+        whole.append(gram)
+        tags += [(white.memory, r) for r in white.ratios]
+        consts.append(white.prior - 0.5 * white.logdet - 0.5 * np.linalg.slogdet(ff)[1])
+    rest = np.concatenate(rests)
+    const = np.concatenate(consts)
+    grams = np.concatenate(whole)
+
+    def like(i: int, rss: FloatArray | float) -> FloatArray:
+        return np.asarray(const[i] - 0.5 * dof * np.log(np.maximum(rss, 0.0) + floor))
+
+    null = []
+    warm: FloatArray | None = None
+    l0 = np.empty(len(const))
+    for i, g in enumerate(rest):
+        z, warm = nnls(g[:c, :c], g[:c, -1], warm)
+        rss = float(g[-1, -1] - g[:c, -1] @ z)
+        null.append((z, warm, rss))
+        l0[i] = like(i, rss)
+    total0 = noise.log_mean(l0)
+    # departures: hinges only before the onset, so that a hump is not taken for a rise
+    l1 = np.full((len(const), k), -np.inf)
+    rss1 = np.full((len(const), k), np.nan)
+    keepers = np.argsort(-l0, kind="stable")[:MODELS]
+    keepers = keepers[l0[keepers] > np.max(l0) - keep]
+    sels = [
+        np.concatenate((np.flatnonzero(d.knots < 1.0 - d.since[j]), np.arange(len(d.knots), c), [c + j]))
+        for j in range(k)
+    ]
+    for i in keepers:
+        if i != keepers[0] and noise.log_mean(l1[keepers[0]]) - np.log(k) - l0[keepers[0]] < QUIET:
+            break
+        g = rest[i]
+        z, passive, rss = null[i]
+        for j in range(k):
+            if i != keepers[0] and l1[keepers[0], j] < np.max(l1[keepers[0]]) - keep:
+                continue  # an onset far from the best one under the best model
+            sel = sels[j]
+            z1, _ = nnls(g[np.ix_(sel, sel)], g[sel, -1], np.concatenate((passive[sel[:-1]], [True])))
+            rss1[i, j] = float(g[-1, -1] - g[sel, -1] @ z1)
+            l1[i, j] = like(i, rss1[i, j])
+    ls = np.full((len(const), s), -np.inf)
+    for i in keepers:
+        g = rest[i]
+        z, passive, rss = null[i]
+        idx = np.flatnonzero(passive)
+        extra = np.arange(c + k, c + k + s)
+        a = g[np.ix_(idx, idx)]
+        a = a + np.diag(np.diag(a) * 1e-11)
+        t = np.linalg.solve(a, g[np.ix_(idx, extra)])
+        grad = g[extra, -1] - g[np.ix_(extra, idx)] @ z[idx]
+        own = np.diag(g)[extra]
+        size = own - np.sum(g[np.ix_(idx, extra)] * t, axis=0)
+        ls[i] = like(i, rss - grad**2 / np.maximum(size, 1e-6 * own))
+    per_onset = np.array([noise.log_mean(l1[:, j]) for j in range(k)])
+    total1 = noise.log_mean(per_onset) - np.log(k)
+    per_step = np.array([noise.log_mean(ls[:, j]) for j in range(s)]) if s else np.array([-np.inf])
+    total_s = float(np.max(per_step)) - np.log(max(s, 1))
+    against = total1 - total0
+    asked = np.isfinite(l1).any(axis=1)
+    if np.count_nonzero(asked) == 1:
+        best = int(np.flatnonzero(asked)[0])
+        against = noise.log_mean(l1[best]) - np.log(k) - float(l0[best])
+    j = int(np.argmax(per_onset))
+    i = int(np.argmax(l1[:, j]))
+    g, sel = rest[i], sels[j]
+    z1, _ = nnls(g[np.ix_(sel, sel)], g[sel, -1], None)
+    # without a fall before the onset
+    one = max(float(g[c + j, -1]), 0.0) ** 2 / float(g[c + j, c + j])
+    fall_gain = float(l1[i, j] - like(i, float(g[-1, -1]) - one))
+    z = np.zeros(c + k)
+    z[sel] = z1
+    full = grams[i]
+    beta = np.linalg.solve(
+        full[:f, :f] + np.diag(d.precision + 1e-12), full[:f, -1] - full[:f, f : f + c + k] @ z
+    )
+    mid = 0.5 * (d.x[1:] + d.x[:-1])
+    rates = beta[1] + _slopes(d, mid) @ z
+    onset = 1.0 - float(d.since[j])
+    least = int(np.argmin(np.where(mid > 0.02, rates, np.inf)))
+    low = float(rates[least])
+    shape = d.concave @ z[:c] + d.departures @ z[c:] + beta[1] * d.x
+    tangent = float(np.interp(mid[least], d.x, shape)) + low * (1.0 - mid[least])
+    safe = max(low, 1e-3 * float(np.max(np.abs(rates))), 1e-300)
+    weight = np.exp(l1[:, j] - l1[i, j]) + 1e-12 * np.exp(l0 - np.max(l0))
+    order = np.argsort(-weight, kind="stable")[:4]
+    typical = float(np.median(d.variance))
+    models = []
+    for o in order:
+        scale = null[o][2] / dof if not np.isfinite(l1[o, j]) else rss1[o, j] / dof
+        scale = max(scale, 1e-6) * 1e-12
+        models.append((tags[o][0] * d.now, scale * tags[o][1] * typical, scale, float(weight[o])))
+    table = np.array(models)
+    table[:, 3] /= np.sum(table[:, 3])
+    return Evidence(
+        against - max(0.0, total_s - total0), against, 1.0 - onset, fall_gain,
+        float(np.mean(rates[mid < max(0.1 * onset, mid[2])])) / safe, float(rates[-1]) / safe,
+        float(shape[-1] - tangent) * 1e-6, float(mid[least]), table, mid, rates * (1e-6 / d.now),
+    )  # fmt: skip
+
+
+def _slopes(d: Design, x: FloatArray) -> FloatArray:
+    """Return the derivatives of concave columns and departures at ``x``."""
+    tau = np.array(EXPONENTIALS)
+    return np.concatenate(
+        (
+            np.where(x[:, None] > d.knots[None, :], -1.0, 0.0) / (1.0 - d.knots)[None, :],
+            np.exp(-x[:, None] / tau[None, :]) / tau[None, :],
+            2.0 * np.maximum(x[:, None] - (1.0 - d.since)[None, :], 0.0) / (d.since**2)[None, :],
+        ),
+        axis=1,
+    )

@@ -1,0 +1,501 @@
+"""Follows one test: scans in, stages, least rate, onsets and steps out.
+
+Scans become leaves (``intake``), leaves the ladder (``ladder``). At *looks*, spaced geometrically in time so that
+their number grows with the logarithm of the test, the evidence for a rising rate is weighed (``evidence``),
+judged (``verdict``) and moves the stage table (``stages``). Rates come from ``estimate``.
+The state is pure and canonical; nothing depends on how scans were cut into blocks.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from typing import Any, Final
+
+import numpy as np
+
+from daq.codec import state
+from daq.core import clean, estimate, evidence, intake, ladder, verdict
+from daq.core.block import Block, Conclusion
+from daq.core.estimate import Minimum
+from daq.core.intake import IntakeState
+from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, Loading, TestRules
+from daq.core.stages import Cue, Stage, following
+from daq.records import FloatArray
+
+LOOK_WIDE: Final = 0.03
+"""Spacing of looks as a share of elapsed time while nothing rises; costs at most half of it in delay."""
+LOOK_CLOSE: Final = 0.01
+"""And while evidence grows."""
+LOOK_LATE: Final = 0.05
+"""And in tertiary, where only the onsets still to come and a withdrawal are looked for."""
+LEAST_RUNGS: Final = 24
+"""Rungs needed for a look: three times the parameters of the plainest curve with a rise."""
+STEADY_CHANGE: Final = 0.25
+"""Secondary: the rate changed by less than this over the last half of the elapsed time, with 95 % confidence on
+each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is steady."""
+Q_ERROR: Final = 0.25
+"""Relative s.d. of a handbook activation energy (common practice, no source)."""
+Q_UNKNOWN: Final = 350e3
+"""J/mol: the middle of what metals show (CHECKVALUES 7.2), the s.d. where none is given."""
+
+
+def _no_models() -> FloatArray:
+    return np.zeros((0, 4))
+
+
+@state
+@dataclass(frozen=True, slots=True)
+class FollowState:
+    """All that the follower carries; see the modules for the parts."""
+
+    stage: Stage = Stage.HEATING
+    since_h: float | None = None
+    intake: IntakeState = IntakeState()
+    rungs: FloatArray = field(default_factory=ladder.empty)
+    leaves: int = 0
+    next_look_h: float = 0.0
+    window_h: float = 0.0
+    models: FloatArray = field(default_factory=_no_models)
+    log_ratio: float = 0.0
+    falling_looks: int = 0
+    rise_ratio: float = 1.0
+    minimum: Minimum | None = None
+    corrected_per_h: float | None = None
+    rise_5_h: float | None = None
+    offset_h: float | None = None
+    counts: tuple[tuple[str, int], ...] = ()
+    paused: bool = False
+    now_h: float = 0.0
+
+
+def begin(rules: TestRules) -> FollowState:
+    """Return the state before the first scan."""
+    return FollowState()
+
+
+def stage_of(s: FollowState) -> str:
+    """Return the name of the stage."""
+    return s.stage.value
+
+
+def follow(s: FollowState, rules: TestRules, block: Block) -> tuple[FollowState, tuple[Conclusion, ...]]:
+    """Take a block of converted scans; rows before full load have ``t_s`` < 0 and are left out."""
+    if s.paused or s.stage in (Stage.RUPTURED, Stage.ENDED):
+        return s, ()
+    fresh = intake.rows_of(block, s.intake.origin_s)
+    if fresh.shape[0] == 0:
+        return s, ()
+    out: list[Conclusion] = []
+    if s.stage in (Stage.HEATING, Stage.SOAKING, Stage.LOADING):
+        first = fresh[0]
+        s = _move(
+            s, Cue.FULL_LOAD, int(first[intake.SCAN]), int(first[intake.TICK]), 0.0, None, "full load", out
+        )
+    return _work(s, rules, np.concatenate((s.intake.rows, fresh)), False, out)
+
+
+def _work(
+    s: FollowState, rules: TestRules, rows: FloatArray, final: bool, out: list[Conclusion]
+) -> tuple[FollowState, tuple[Conclusion, ...]]:
+    clock = np.maximum(np.maximum.accumulate(rows[:, intake.T_S]), s.intake.clock_s)
+    at = 0
+    while at < rows.shape[0]:
+        before = s.intake
+        fed, at, leaf = intake.next_leaf(before, rules, rows, clock, at, final)
+        if leaf is None:
+            break
+        s = replace(s, intake=fed, now_h=leaf.now_h)
+        if leaf.step is not None:
+            out.append(_step(leaf, rules))
+        if leaf.rung is not None:
+            rungs = np.concatenate((s.rungs, leaf.rung))
+            leaves = s.leaves + 1
+            if leaves % ladder.SWEEP_EVERY == 0:
+                rungs = ladder.sweep(rungs, leaf.now_h)
+            s = replace(s, rungs=rungs, leaves=leaves)
+        if leaf.now_h >= s.next_look_h and s.rungs.shape[0] >= LEAST_RUNGS:
+            s = _look(s, rules, leaf.scan, leaf.tick, out)
+    s = replace(s, intake=replace(s.intake, rows=rows[at:].copy()))
+    return s, tuple(out)
+
+
+def tell(
+    s: FollowState, rules: TestRules, cue: str, tick: int, t_s: float, scan: int
+) -> tuple[FollowState, tuple[Conclusion, ...]]:
+    """Take word from outside: ``ruptured``, ``ended``, ``stress_changed``, ``interrupted``, ``resumed``,
+    and, before full load, ``at_temperature`` and ``load_begun``."""
+    out: list[Conclusion] = []
+    if s.stage in (Stage.RUPTURED, Stage.ENDED):
+        return s, ()
+    if cue == "interrupted":
+        return replace(s, paused=True), ()
+    if cue == "resumed":
+        i = s.intake
+        fed = replace(i, context=i.context[:0], segment=i.segment + 1)
+        return replace(s, paused=False, intake=fed), ()
+    if cue in ("at_temperature", "load_begun"):
+        s = _move(s, Cue(cue), scan, tick, t_s / 3600.0, None, cue.replace("_", " "), out)
+        return s, tuple(out)
+    if s.stage not in (Stage.HEATING, Stage.SOAKING, Stage.LOADING) and s.intake.rows.shape[0]:
+        s, said = _work(s, rules, s.intake.rows, True, [])
+        out += [replace(c, scan=max(c.scan, scan), tick=max(c.tick, tick)) for c in said]
+    time_h = (t_s - s.intake.origin_s) / 3600.0
+    if s.rungs.shape[0] >= LEAST_RUNGS:
+        s = _last_words(s, rules, scan, tick, out)
+    why = {"ruptured": "rupture", "ended": "test ended", "stress_changed": "stress changed"}[cue]
+    s = _move(s, Cue(cue), scan, tick, time_h, None, why, out)
+    if cue == "stress_changed":
+        i = s.intake
+        fresh = IntakeState(
+            origin_s=t_s, clock_s=t_s, reference_c=i.reference_c, temp_c=i.temp_c, rooms_c=i.rooms_c,
+            offsets=i.offsets, noise=i.noise, half=i.half, scan=i.scan, tick=i.tick,
+        )  # fmt: skip
+        s = FollowState(stage=s.stage, since_h=0.0, intake=fresh, counts=s.counts)
+    return s, tuple(out)
+
+
+# --- looks ------------------------------------------------------------------------------
+
+
+def _windowed(s: FollowState) -> FloatArray:
+    """Return the rungs since the window began, with times counted from there."""
+    if s.window_h <= 0.0:
+        return s.rungs
+    r = s.rungs[s.rungs[:, ladder.START] >= s.window_h].copy()
+    if r.shape[0] == 0:
+        return r
+    t0, u0 = r[0, ladder.START], r[0, ladder.U] - (r[0, ladder.T] - r[0, ladder.START])
+    r[:, [ladder.T, ladder.START, ladder.END]] -= t0
+    r[:, ladder.U] -= u0
+    return r
+
+
+def _weigh(s: FollowState, rules: TestRules, r: FloatArray) -> evidence.Evidence:
+    temp = r[:, ladder.TEMP]
+    has_temp = bool(np.isfinite(temp).all())
+    q_error = 0.0
+    if has_temp:
+        q = rules.activation_energy_j_per_mol
+        kelvin = float(temp[-1]) + ZERO_C_IN_K
+        q_error = (Q_ERROR * q if q is not None else Q_UNKNOWN) / (GAS_CONSTANT_J_PER_MOL_K * kelvin**2)
+    has_room = bool(np.isfinite(r[:, ladder.ROOM0]).all())
+    return evidence.weigh(evidence.design(r, has_temperature=has_temp, has_room=has_room, q_error=q_error))
+
+
+def _rising(r: FloatArray) -> bool:
+    """Cheap screen: can the rate of any late stretch be above that of the one before it, white noise allowed?"""
+    now = float(r[-1, ladder.T])
+    t = r[:, ladder.T]
+    for share in (0.06, 0.12, 0.22, 0.35):
+        late = r[t > now * (1.0 - share)]
+        early = r[(t <= now * (1.0 - share)) & (t > now * (1.0 - 2.0 * share))]
+        if late.shape[0] >= 4 and early.shape[0] >= 4:
+            b1, b0 = _slope(late), _slope(early)
+            if b1 > b0:
+                return True
+    return False
+
+
+def _slope(r: FloatArray) -> float:
+    w, x, y = r[:, ladder.N], r[:, ladder.T], r[:, ladder.E]
+    n = float(np.sum(w))
+    dx, dy = x - float(np.sum(w * x)) / n, y - float(np.sum(w * y)) / n
+    return float(
+        (np.sum(w * dx * dy) + np.sum(r[:, ladder.S_TE])) / (np.sum(w * dx * dx) + np.sum(r[:, ladder.S_TT]))
+    )
+
+
+def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    now = s.now_h
+    if s.stage is Stage.TERTIARY:
+        return _look_late(s, rules, scan, tick, out)
+    r = _windowed(s)
+    spacing = LOOK_WIDE
+    if r.shape[0] >= LEAST_RUNGS and (_rising(r) or s.models.shape[0] == 0):
+        e = _weigh(s, rules, r)
+        threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
+        s = replace(s, models=e.noise, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
+        cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h)
+        if e.log_ratio > 0.3 * threshold:
+            spacing = LOOK_CLOSE
+        if cue is Cue.RATE_ROSE:
+            return _turn(s, rules, e, scan, tick, out)
+        if cue is Cue.RATE_ROSE_EARLY:
+            why = (
+                f"the rate rises before any fall: inverse primary creep, a slow recovery after loading or, "
+                f"if it goes on, tertiary without primary (evidence {e.log_ratio:.1f})"
+            )
+            s = _move(s, cue, scan, tick, now * (1.0 - e.since), None, why, out)
+    else:
+        s = replace(s, log_ratio=min(s.log_ratio, 0.0))
+    if s.stage is Stage.INVERSE_PRIMARY:
+        s = _after_inverse(s, scan, tick, out)
+    if s.stage in (Stage.PRIMARY, Stage.INVERSE_PRIMARY) and s.models.shape[0]:
+        s = _steady(s, scan, tick, out)
+    return replace(s, next_look_h=now * (1.0 + spacing))
+
+
+def _after_inverse(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    """Begin the window of evidence where the rate was greatest, once it has fallen from there."""
+    t, rate, _ = estimate.coarse_rates(s.rungs, 0.1)
+    top = int(np.argmax(rate))
+    if top < rate.size - 2 and rate[-1] < 0.93 * rate[top]:
+        s = replace(s, window_h=float(t[top]))
+        return _move(
+            s, Cue.RATE_FALLS, scan, tick, float(t[top]), None, "the rate falls from its early peak", out
+        )
+    return s
+
+
+def _steady(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    r = _windowed(s)
+    if r.shape[0] < LEAST_RUNGS:
+        return s
+    now = float(r[-1, ladder.T])
+    fit = estimate.polynomial(r, s.models, 0.5 * now, now, 2)
+    if fit is None:
+        return s
+    c = fit.weights @ fit.coefs
+    if c[1] <= 0:
+        return s
+    each = 4.0 * fit.coefs[:, 2] / fit.coefs[:, 1]  # relative change of the rate over the stretch
+    change = float(fit.weights @ each)
+    own = 16.0 * fit.covariances[:, 2, 2] / fit.coefs[:, 1] ** 2
+    sd = float(np.sqrt(fit.weights @ (own + (each - change) ** 2)))
+    if abs(change) + estimate.Z90 * sd >= STEADY_CHANGE:
+        return s
+    why = (
+        f"over the last half of the time the rate changed by {100 * change:+.0f} % "
+        f"+- {100 * estimate.Z90 * sd:.0f} %, within {100 * STEADY_CHANGE:.0f} %"
+    )
+    begin_h = s.window_h + 0.5 * now
+    return _move(s, Cue.RATE_STEADY, scan, tick, begin_h, None, why, out)
+
+
+def _fit_least(s: FollowState, rules: TestRules) -> tuple[Minimum, float | None] | None:
+    """Fit the least rate as measured, and in equivalent time where there is one."""
+    r = s.rungs[s.rungs[:, ladder.START] >= s.window_h]
+    if r.shape[0] < 8 or s.models.shape[0] == 0:
+        return None
+    t, rate, _ = estimate.coarse_rates(r, 0.08)
+    if t.size < 4:
+        return None
+    inner = np.arange(t.size) >= 1
+    top = int(np.argmin(np.where(inner, rate, np.inf)))
+    low, high = _stretch(t, rate, top, r)
+    found = estimate.minimum(r, s.models, float(t[top]), low, high)
+    if found is None:
+        return None
+    m, _ = found
+    corrected = None
+    if rules.activation_energy_j_per_mol is not None and np.isfinite(s.intake.reference_c):
+        u = np.interp([m.from_h, m.to_h], r[:, ladder.T], r[:, ladder.U])
+        again = estimate.minimum(r, s.models, m.time_h, float(u[0]), float(u[1]), ladder.U)
+        if again is not None:
+            corrected = again[0].rate
+    return m, corrected
+
+
+def _stretch(t: FloatArray, rate: FloatArray, at: int, r: FloatArray) -> tuple[float, float]:
+    """Return the stretch around ``at`` in which coarse rates are below some 1.3 times the least."""
+    goal = 1.35 * rate[at] if rate[at] > 0 else np.inf
+    lo = at
+    while lo > 0 and rate[lo - 1] < goal:
+        lo -= 1
+    hi = at
+    while hi < t.size - 1 and rate[hi + 1] < goal:
+        hi += 1
+    first = float(r[0, ladder.T]) if lo == 0 else float(t[lo - 1])
+    last = float(r[-1, ladder.T]) if hi == t.size - 1 else float(t[hi + 1])
+    return first, last
+
+
+def _turn(
+    s: FollowState, rules: TestRules, e: evidence.Evidence, scan: int, tick: int, out: list[Conclusion]
+) -> FollowState:
+    """Conclude tertiary, with the least rate and the onsets as far as they are known."""
+    fitted = _fit_least(s, rules)
+    now = s.now_h
+    onset = (now - s.window_h) * (1.0 - e.since) + s.window_h
+    interval: tuple[float, float] | None = None
+    why = f"the rate has risen to {e.rise_ratio:.2f} times the least (log evidence {e.log_ratio:.1f})"
+    if fitted is not None:
+        m, corrected = fitted
+        onset, interval = m.time_h, (m.time_low_h, m.time_high_h)
+        n = rules.stress_exponent
+        if rules.loading is Loading.CONSTANT_LOAD and n is not None:
+            strain = float(s.rungs[-1, ladder.E]) - m.strain
+            by_section = np.expm1(n * strain)
+            why += (
+                f"; the shrinking section alone explains {100 * by_section:.1f} % of the rise of "
+                f"{100 * (e.rise_ratio - 1):.1f} % (n = {n:g})"
+            )
+        s = replace(s, minimum=m, corrected_per_h=corrected)
+    s = _move(s, Cue.RATE_ROSE, scan, tick, onset, interval, why, out)
+    s = replace(s, next_look_h=now * (1.0 + LOOK_LATE), falling_looks=0)
+    return _say_rates(s, scan, tick, out, fitted)
+
+
+def _say_rates(
+    s: FollowState, scan: int, tick: int, out: list[Conclusion], fitted: tuple[Minimum, float | None] | None
+) -> FollowState:
+    if fitted is None:
+        return s
+    m, corrected = fitted
+    r = s.rungs[s.rungs[:, ladder.START] >= s.window_h]
+    out.append(_minimum(m, corrected, scan, tick))
+    rise = estimate.rise_5_percent(r, s.models, m)
+    offset = estimate.offset_0p2(r, m)
+    turned = s.stage is Stage.TERTIARY
+    for name, when in (
+        ("minimum_rate", m.time_h if turned else None),
+        ("rate_rise_5_percent", rise if turned else None),
+        ("offset_0p2_percent", offset if turned else None),
+    ):
+        out.append(_onset(name, when, scan, tick))
+    return replace(s, minimum=m, corrected_per_h=corrected, rise_5_h=rise, offset_h=offset)
+
+
+def _look_late(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    """In tertiary: onsets that have been reached since, and whether the rise has gone back."""
+    now = s.now_h
+    m = s.minimum
+    if m is not None and (s.rise_5_h is None or s.offset_h is None):
+        r = s.rungs[s.rungs[:, ladder.START] >= s.window_h]
+        if s.rise_5_h is None:
+            rise = estimate.rise_5_percent(r, s.models, m)
+            if rise is not None:
+                out.append(_onset("rate_rise_5_percent", rise, scan, tick))
+                s = replace(s, rise_5_h=rise)
+        offset = estimate.offset_0p2(r, m)
+        if s.offset_h is None and offset is not None:
+            out.append(_onset("offset_0p2_percent", offset, scan, tick))
+            s = replace(s, offset_h=offset)
+    if s.rise_ratio < 2.0 and s.offset_h is None:
+        e = _weigh(s, rules, _windowed(s))
+        s = replace(s, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio, models=e.noise)
+        falling = s.falling_looks + 1 if e.against_falling < 0.0 else 0
+        s = replace(s, falling_looks=falling)
+        if falling >= 2:
+            why = "the rate has gone back to what it was: the rise was not tertiary creep"
+            s = _move(s, Cue.RISE_TAKEN_BACK, scan, tick, now, None, why, out)
+            s = replace(s, falling_looks=0, rise_5_h=None, offset_h=None)
+    return replace(s, next_look_h=now * (1.0 + LOOK_LATE))
+
+
+def _last_words(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    if s.models.shape[0] == 0:
+        s = replace(s, models=_weigh(s, rules, s.rungs).noise)
+    return _say_rates(s, scan, tick, out, _fit_least(s, rules))
+
+
+# --- conclusions ------------------------------------------------------------------------
+
+
+def _move(
+    s: FollowState,
+    cue: Cue,
+    scan: int,
+    tick: int,
+    onset_h: float | None,
+    interval: tuple[float, float] | None,
+    why: str,
+    out: list[Conclusion],
+) -> FollowState:
+    """Move the stage table by ``cue``; conclude where that changes the stage."""
+    after = following(s.stage, cue)
+    if after is s.stage and cue is not Cue.STRESS_CHANGED:
+        return s
+    counts = dict(s.counts)
+    withdraws = None
+    if cue is Cue.RISE_TAKEN_BACK:
+        withdraws = f"{Stage.TERTIARY.value}|{counts.get(Stage.TERTIARY.value, 1)}"
+    counts[after.value] = counts.get(after.value, 0) + 1
+    fields: dict[str, Any] = {
+        "stage": after.value,
+        "from": s.stage.value,
+        "onset_h": onset_h,
+        "onset_low_h": interval[0] if interval else None,
+        "onset_high_h": interval[1] if interval else None,
+        "withdraws": withdraws,
+        "why": why,
+    }
+    out.append(Conclusion(scan, tick, "stage", after.value, fields))
+    return replace(s, stage=after, since_h=onset_h, counts=tuple(sorted(counts.items())))
+
+
+def _minimum(m: Minimum, corrected: float | None, scan: int, tick: int) -> Conclusion:
+    return Conclusion(
+        scan, tick, "minimum_rate", "",
+        {
+            "rate_per_h": m.rate, "low_per_h": m.low, "high_per_h": m.high,
+            "time_h": m.time_h, "corrected_rate_per_h": corrected,
+        },
+    )  # fmt: skip
+
+
+def _onset(definition: str, time_h: float | None, scan: int, tick: int) -> Conclusion:
+    return Conclusion(scan, tick, "onset", definition, {"definition": definition, "time_h": time_h})
+
+
+def _step(leaf: intake.Leaf, rules: TestRules) -> Conclusion:
+    step = leaf.step
+    assert step is not None
+    names = [c.name for c in rules.channels if c.side in step.sides or (not c.side and "A" in step.sides)]
+    names = [c.name for c in rules.channels if c.name in names and c.role.value in ("strain", "extension")]
+    return Conclusion(
+        leaf.scan, leaf.tick, "step", ",".join(names),
+        {
+            "channels": names, "time_h": step.time_h, "size": step.size,
+            "cause": clean.cause_of(step.sides, step.sizes, step.both_there),
+        },
+    )  # fmt: skip
+
+
+# --- for screens and forecasts ----------------------------------------------------------
+
+
+def status(s: FollowState, rules: TestRules) -> Mapping[str, Any]:
+    """Return plain values for screens: stage, strain, rate now with interval, least rate, trend."""
+    told: dict[str, Any] = {
+        "stage": s.stage.value, "since_h": s.since_h, "strain": None, "rate_per_h": None, "rate_low_per_h": None,
+        "rate_high_per_h": None, "minimum_rate_per_h": None, "minimum_low_per_h": None, "minimum_high_per_h": None,
+        "minimum_time_h": None, "corrected_minimum_rate_per_h": None, "rise_ratio": None, "evidence": s.log_ratio,
+        "trend": "unknown", "onset_rise_5_percent_h": s.rise_5_h, "onset_offset_0p2_h": s.offset_h,
+    }  # fmt: skip
+    if s.rungs.shape[0]:
+        told["strain"] = float(s.rungs[-1, ladder.E])
+    if s.rungs.shape[0] >= 8:
+        models = s.models
+        if models.shape[0] == 0:
+            white = ladder.white_sd(s.rungs)
+            models = np.array([[1.0, 0.0, (white if np.isfinite(white) else 1e-5) ** 2, 1.0]])
+        rate, low, high = estimate.rate_now(s.rungs, models)
+        if np.isfinite(rate):
+            told |= {"rate_per_h": rate, "rate_low_per_h": low, "rate_high_per_h": high}
+        m = s.minimum
+        if m is not None:
+            told |= {
+                "minimum_rate_per_h": m.rate, "minimum_low_per_h": m.low, "minimum_high_per_h": m.high,
+                "minimum_time_h": m.time_h, "corrected_minimum_rate_per_h": s.corrected_per_h,
+                "rise_ratio": rate / m.rate if m.rate > 0 else None,
+            }  # fmt: skip
+        told["trend"] = {
+            Stage.PRIMARY: "falling", Stage.SECONDARY: "steady", Stage.TERTIARY: "rising",
+            Stage.INVERSE_PRIMARY: "rising early",
+        }.get(s.stage, "unknown")  # fmt: skip
+    return told
+
+
+def curve(s: FollowState) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return (t_h, strain, rate_per_h) of the ladder, each (n,); rates over about 3 % of the test."""
+    r = s.rungs
+    if r.shape[0] < 4:
+        return r[:, ladder.T], r[:, ladder.E], np.full(r.shape[0], np.nan)
+    t, rate, _ = estimate.coarse_rates(r, 0.03)
+    return (
+        r[:, ladder.T],
+        r[:, ladder.E],
+        np.interp(r[:, ladder.T], t, rate) if t.size else np.full(r.shape[0], np.nan),
+    )

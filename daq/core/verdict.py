@@ -1,0 +1,38 @@
+"""What the evidence means for the stage: order, earliness and materiality.
+
+Evidence says that the rate rises. Whether that is tertiary creep depends on what went before: tertiary
+follows a least rate that was reached by a fall or held for a steady stretch. A rise before that, or one very early in
+the life that the laboratory expects, is inverse primary creep (incubation): solid solutions, recovery of an early dip.
+"""
+
+from __future__ import annotations
+
+from typing import Final
+
+from daq.core.evidence import Evidence
+from daq.core.stages import Cue, Stage
+
+BEYOND_VILLE: Final = 4.0
+"""What is asked beyond log(1/alpha), because the noise model and the family of curves are fitted: from campaigns."""
+EARLY: Final = 0.08
+"""Share of the expected life before which a rise is not yet called tertiary: curves without a plateau have their
+least rate at 12 % of life and more, and an expectation is trusted within a factor of two to three."""
+EARLY_RISE: Final = 3.0
+"""Unless the rate has risen this much: more than inverse primary creep does (1.2 to 2.5-fold)."""
+FALL_GAIN: Final = 3.0
+FALL_RATIO: Final = 1.08
+STEADY_SHARE: Final = 0.4
+
+
+def judge(e: Evidence, stage: Stage, now_h: float, threshold: float, expected_h: float | None) -> Cue | None:
+    """Return the cue that the evidence gives, None for none."""
+    if e.log_ratio < threshold:
+        return None
+    fell = e.fall_gain >= FALL_GAIN and e.fall_ratio >= FALL_RATIO
+    steady = 1.0 - e.since >= STEADY_SHARE
+    overwhelming = e.rise_ratio >= EARLY_RISE and e.offset >= 0.002
+    if expected_h is not None and now_h < EARLY * expected_h and not overwhelming:
+        return None if fell or stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
+    if not (fell or steady or overwhelming):
+        return None if stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
+    return Cue.RATE_ROSE
