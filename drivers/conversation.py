@@ -129,8 +129,8 @@ class Conversation:
     ) -> str:
         """Ask who is there and return what it says; its answer is as good as a canary's.
 
-        Asked a second time, after silence, where the first answer does not fit: that may have been meant
-        for somebody before us. Raises IdentityError if both answers are the same and wrong,
+        Silence comes first: an answer to somebody before us may still be on its way. Asked a second time
+        where the first answer does not fit. Raises IdentityError if both answers are the same and wrong,
         InstrumentError if they are garbage, LinkError if there are none. Takes at most twice
         ``timeout_s`` + ``longest_reply_s``.
         """
@@ -146,14 +146,14 @@ class Conversation:
         question = Question(request, read, IDENTITY_VOICE, echoed)
         self.canaries = [question]
         until_s = self.port.clock.now_s() + 2.0 * (self.pace.timeout_s + self.pace.longest_reply_s)
-        answer = self._exchange(question, until_s)
-        if isinstance(answer, NoAnswer) and self._silence(until_s):
-            answer = self._exchange(question, until_s)
-        if not isinstance(answer, NoAnswer):
-            self._trust = _Trust.YES
-            return answer
+        for _ in range(2):
+            if self._silence(until_s):
+                answer = self._exchange(question, until_s)
+                if not isinstance(answer, NoAnswer):
+                    self._trust = _Trust.YES
+                    return answer
         if len(heard) == 2 and heard[0] == heard[1]:
-            raise IdentityError(f"{self.port.name}: {answer.why}")
+            raise IdentityError(f"{self.port.name}: {self._trouble.why}")
         raise self._complaint()
 
     def warm_up(self) -> None:

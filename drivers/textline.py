@@ -28,6 +28,7 @@ An instrument that talks by itself, fixed columns, decimal comma, checksum::
 
     listen: true
     decimal_comma: true
+    length: 16                # characters in a line (without checksum)
     checksum: {kind: xor8, mark: "*", skip: 1}
     silence_s: 10             # nothing heard for so long: the link is lost
     yields:
@@ -103,13 +104,15 @@ class Pick:
 class Message:
     """One line and the readings in it; ``ask`` empty where the instrument talks by itself.
 
-    ``fields`` is the number of fields that the line must have; 0 where nobody counts them.
+    ``fields`` and ``length`` are the numbers of fields and characters that the line must have; 0 where
+    nobody counts them.
     """
 
     ask: str
     reply: re.Pattern[str] | None
     separator: str
     fields: int
+    length: int
     echo: str
     picks: tuple[Pick, ...]
 
@@ -134,6 +137,8 @@ def read_line(text: str, message: Message, manner: Manner) -> dict[str, Value]:
         if body is None:
             raise NotTheAnswer(f"got {_short(text)}, its checksum is wrong")
         text = body
+    if message.length and len(text) != message.length:
+        raise NotTheAnswer(f"got {len(text)} characters ({_short(text)}), need {message.length}")
     found = None
     if message.reply is not None:
         found = message.reply.fullmatch(text)
@@ -195,7 +200,7 @@ class _Options:
 
 
 _PICK_KEYS: Final = (
-    "ask", "unit", "reply", "separator", "fields", "echo", "group", "field", "columns", "states"
+    "ask", "unit", "reply", "separator", "fields", "length", "echo", "group", "field", "columns", "states"
 )  # fmt: skip
 
 
@@ -231,7 +236,7 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
 def _messages(
     top: OptionReader, readings: Mapping[str, OptionReader], listen: bool, separator: str
 ) -> tuple[Message, ...]:
-    grouped: dict[tuple[str, str, str, int, str], tuple[re.Pattern[str] | None, list[Pick]]] = {}
+    grouped: dict[tuple[str, str, str, int, int, str], tuple[re.Pattern[str] | None, list[Pick]]] = {}
     for name, own in readings.items():
         source = {key: own if own.has(key) else top for key in _PICK_KEYS}
         unit = source["unit"].text("unit", "", most=20, empty=True)
@@ -250,8 +255,9 @@ def _messages(
             reply = None
         split = source["separator"].text("separator", separator, most=8)
         count = source["fields"].whole("fields", 0, least=1, most=200)
+        length = source["length"].whole("length", 0, least=1, most=MAX_LINE)
         pick = _pick(name, own, source, reply)
-        key = (ask, reply.pattern if reply is not None else "", split, count, echo)
+        key = (ask, reply.pattern if reply is not None else "", split, count, length, echo)
         grouped.setdefault(key, (reply, []))[1].append(pick)
         own.done()
     return tuple(
@@ -260,10 +266,11 @@ def _messages(
             reply,
             split,
             count or max(p.field for p in picks),
+            length,
             echo if reply is not None else "",
             tuple(picks),
         )
-        for (ask, _, split, count, echo), (reply, picks) in grouped.items()
+        for (ask, _, split, count, length, echo), (reply, picks) in grouped.items()
     )  # fmt: skip    )
 
 

@@ -274,6 +274,7 @@ class TalkerPeer(FaultyPeer):
 
     options = {  # noqa: RUF012
         "listen": True,
+        "length": 26,
         "checksum": {"kind": "xor8", "mark": "*", "skip": 1},
         "silence_s": 0.5,
         "identity": {"declared": "a gauge that talks by itself"},
