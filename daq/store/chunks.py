@@ -95,8 +95,13 @@ class Piece:
     size: int
 
 
-def split(rows: Iterable[Row], frame: str) -> tuple[list[Row], bool]:
-    """Take from ``rows`` those that make the next chunk of ``frame``; say whether it is whole.
+def fullness(scans: int, rows: int, size: int) -> float:
+    """Return the share of a whole chunk (1.0) that so many scans, rows or bytes make."""
+    return max(scans / CHUNK_SCANS, rows / CHUNK_ROWS, size / CHUNK_BYTES)
+
+
+def split(rows: Iterable[Row], frame: str) -> tuple[list[Row], float]:
+    """Take from ``rows`` those that make the next chunk of ``frame``; say how full it is (1.0: whole).
 
     Rows of the host (frame "") are taken only where a row of the frame follows them.
     """
@@ -109,25 +114,24 @@ def split(rows: Iterable[Row], frame: str) -> tuple[list[Row], bool]:
             waiting.append(row)
             continue
         n = len(fact) if isinstance(fact, ScansTaken) else 0
-        full = scans + n > CHUNK_SCANS or len(taken) + len(waiting) >= CHUNK_ROWS or size >= CHUNK_BYTES
-        if taken and full:
-            return taken, True
+        if taken and (scans + n > CHUNK_SCANS or fullness(0, len(taken) + len(waiting), size) >= 1.0):
+            return taken, 1.0
         taken += [*waiting, row]
         waiting = []
         scans += n
         size += len(data)
-    return taken, scans >= CHUNK_SCANS or len(taken) >= CHUNK_ROWS or size >= CHUNK_BYTES
+    return taken, fullness(scans, len(taken), size)
 
 
 def pack(frame: str, rows: Sequence[Row]) -> Chunk:
     """Return the chunk of ``rows``; it has been read again and compared before it is returned."""
-    plain = [_single(seq, fact) for seq, _, fact in rows]
-    joined = list(_join(plain))
+    joined = [_record(run) for run in _runs(rows)]
     content = content_of(joined)
     chunk = _chunk(frame, joined, JOINED, content, [encode_fact(r.fact) for r in joined])
     if content_of(unpack(chunk)) == content:
         return chunk
     # no packing may alter a bit: a value that it cannot give back stays in the bytes it came in
+    plain = [_record([row]) for row in rows]
     return _chunk(frame, plain, AS_THEY_WERE, content_of(plain), [data for _, data, _ in rows])
 
 
@@ -201,24 +205,20 @@ def _canonical(fact: Fact) -> Iterator[bytes]:
         yield encode_fact(fact)
 
 
-def _single(seq: int, fact: Fact) -> Record:
-    count = len(fact) if isinstance(fact, ScansTaken) else OTHER
-    return Record(np.array([seq], np.int64), np.array([count], np.int64), fact)
-
-
-def _join(records: Iterable[Record]) -> Iterator[Record]:
-    """Join consecutive scans of one frame, channels and boot, at most CHUNK_SCANS at a time."""
-    run: list[Record] = []
+def _runs(rows: Iterable[Row]) -> Iterator[list[Row]]:
+    """Yield the rows that become one record each: scans of one frame, channels and boot together."""
+    run: list[Row] = []
     scans = 0
-    for record in records:
-        n = int(record.counts[0])
-        if run and (not _alike(run[-1].fact, record.fact) or scans + n > CHUNK_SCANS):
-            yield _joined(run)
+    for row in rows:
+        fact = row[2]
+        n = len(fact) if isinstance(fact, ScansTaken) else 0
+        if run and (not _alike(run[-1][2], fact) or scans + n > CHUNK_SCANS):
+            yield run
             run, scans = [], 0
-        run.append(record)
-        scans += max(n, 0)
+        run.append(row)
+        scans += n
     if run:
-        yield _joined(run)
+        yield run
 
 
 def _alike(a: Fact, b: Fact) -> bool:
@@ -229,10 +229,14 @@ def _alike(a: Fact, b: Fact) -> bool:
     )
 
 
-def _joined(run: list[Record]) -> Record:
-    if len(run) == 1:
-        return run[0]
-    blocks = [r.fact for r in run if isinstance(r.fact, ScansTaken)]
+def _record(run: list[Row]) -> Record:
+    seqs = np.array([seq for seq, _, _ in run], np.int64)
+    blocks = [fact for _, _, fact in run if isinstance(fact, ScansTaken)]
+    if not blocks:
+        return Record(seqs, np.array([OTHER], np.int64), run[0][2])
+    counts = np.array([len(b) for b in blocks], np.int64)
+    if len(blocks) == 1:
+        return Record(seqs, counts, blocks[0])
     first = blocks[0]
     scans = ScansTaken(
         first.frame,
@@ -243,7 +247,7 @@ def _joined(run: list[Record]) -> Record:
         np.concatenate([b.values for b in blocks]),
         np.concatenate([b.quality for b in blocks]),
     )
-    return Record(np.concatenate([r.seqs for r in run]), np.concatenate([r.counts for r in run]), scans)
+    return Record(seqs, counts, scans)
 
 
 def _chunk(frame: str, records: list[Record], codec: str, content: bytes, parts: list[bytes]) -> Chunk:

@@ -67,6 +67,7 @@ class Journal(JournalReading):
         meta = dict(connection.execute("SELECT key, value FROM meta").fetchall())
         self.journal_id = meta["journal"]
         self.site = meta["site"]
+        self._sealer = Sealer(folder, connection, self.journal_id, self.site, hook, notices)
         self._next = self.last_seq + 1
         lock.mark(self.journal_id, self._next - 1)
 
@@ -143,6 +144,8 @@ class Journal(JournalReading):
                 self._break(error)
                 raise
             self._next = seqs.stop
+            for fact in facts:
+                self._sealer.note(fact)
             self._hook("commit.after")
             self._after_commit()
             return Committed(seqs, refused, undelivered)
@@ -230,13 +233,11 @@ class Journal(JournalReading):
         done = []
         with self._lock:
             self._refuse_if_broken()
-            sealer = Sealer(
-                self.folder, self._connection(), self.journal_id, self.site, self._hook, self.notices
-            )
+            self._connection()
             for name in [*self.frames(), HOST] if frame is None else [frame]:
                 try:
                     with guarded(self._host):
-                        sealed = sealer.next(name, into or name, limit, whole=whole, finish=finish)
+                        sealed = self._sealer.next(name, into or name, limit, whole=whole, finish=finish)
                 except JournalBroken as error:
                     self._break(error)
                     raise

@@ -8,21 +8,26 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from daq.codec import encode_fact
-from daq.records import Fact, Finding
+from daq.records import Fact, Finding, ScansTaken
 
 
 @dataclass(frozen=True, slots=True)
 class EncodedFact:
-    """A fact already in bytes (:func:`daq.codec.encode_fact`), so that it is encoded once."""
+    """A fact already in bytes (:func:`daq.codec.encode_fact`), so that it is encoded once.
+
+    ``scans`` is how many it holds; with None every call of ``seal`` looks whether a chunk is whole.
+    """
 
     frame: str
     kind: str
     data: bytes
+    scans: int | None = None
 
 
 def encoded(fact: Fact) -> EncodedFact:
     """Return ``fact`` in bytes, with what the journal must know beside them."""
-    return EncodedFact(fact.frame, type(fact).__name__, encode_fact(fact))
+    scans = len(fact) if isinstance(fact, ScansTaken) else 0
+    return EncodedFact(fact.frame, type(fact).__name__, encode_fact(fact), scans)
 
 
 @dataclass(frozen=True, slots=True)

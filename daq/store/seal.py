@@ -21,9 +21,10 @@ from pathlib import Path
 from typing import Any, Final
 
 from daq.records import RecordError
-from daq.store.chunks import Chunk, Row, pack, split, unpack
+from daq.store.chunks import Chunk, Row, fullness, pack, split, unpack
 from daq.store.errors import JournalDamaged, guarded
 from daq.store.reading import HOST, tail_fact
+from daq.store.rows import EncodedFact
 from daq.store.schema import HOST_FILE, tail_frames, transaction
 from daq.store.segments import FOLDER, SealedWriter, file_name, part_name
 
@@ -46,44 +47,65 @@ class Sealed:
     stored_bytes: int
 
 
-@dataclass(frozen=True, slots=True)
 class Sealer:
-    """What sealing needs of the journal; ``connection`` is its one writing connection."""
+    """Seals for one journal; ``connection`` is its one writing connection."""
 
-    folder: Path
-    connection: sqlite3.Connection
-    journal: str
-    site: str
-    hook: Callable[[str], None]
-    notices: list[str]
+    def __init__(
+        self,
+        folder: Path,
+        connection: sqlite3.Connection,
+        journal: str,
+        site: str,
+        hook: Callable[[str], None],
+        notices: list[str],
+    ) -> None:
+        self.folder = folder
+        self.connection = connection
+        self.journal = journal
+        self.site = site
+        self.hook = hook
+        self.notices = notices
+        self._place = f"{folder / HOST_FILE} tail row"
+        # how full the next chunk of a frame is at most: below 1 there is no whole one, and looking
+        # (which decodes every row of the frame) can be spared. Absent: not known
+        self._fullness: dict[str, float] = {}
+
+    def note(self, fact: EncodedFact) -> None:
+        """Take into account a fact that was committed."""
+        if fact.scans is None:
+            self._fullness.pop(fact.frame, None)
+        elif fact.frame in self._fullness:
+            self._fullness[fact.frame] += fullness(fact.scans, 1, len(fact.data))
 
     def next(self, frame: str, name: str, upto: int, *, whole: bool, finish: bool) -> Sealed | None:
         """Move the next chunk of ``frame`` to the file called ``name``; None where there is none to move."""
+        if whole and not finish and self._fullness.get(frame, 1.0) < 1.0:
+            return None
+        chunk = self._next_chunk(frame, upto, whole=whole)
+        if chunk is None and not finish:
+            return None
         file = self._newest_part(name)
         while True:
             try:
-                return self._move(frame, file, upto, whole=whole, finish=finish)
+                return self._move(frame, file, chunk)
             except _UnusableError as error:
                 self.notices.append(f"{error}; it is kept as it is, and sealing goes on in a new part")
                 file = part_name(file)
 
-    def _move(self, frame: str, file: str, upto: int, *, whole: bool, finish: bool) -> Sealed | None:
+    def _move(self, frame: str, file: str, chunk: Chunk | None) -> Sealed | None:
+        """Write ``chunk`` to ``file`` and name it; None: there are no more, make a plain single file."""
         path = self.folder / FOLDER / file
         known = self._known(file)
-        if not known and not path.exists():
-            chunk = self._next_chunk(frame, upto, whole=whole)
-            if chunk is None:
-                return None
+        if chunk is None and known is None:
+            return None
         writer = self._open(path, frame)
         try:
             orphan = self._orphan(writer, path, frame, known)
             if orphan is not None:
                 self._name(frame, file, *orphan)
                 return _sealed(file, orphan[0], orphan[2])
-            chunk = self._next_chunk(frame, upto, whole=whole)
             if chunk is None:
-                if finish and known:
-                    writer.finish()
+                writer.finish()
                 return None
             self.hook("seal.packed")
             try:
@@ -157,8 +179,12 @@ class Sealer:
                 (covered, first, LEADING_HOST_FACTS),
             ).fetchall()
             first = leading[-1][0] if leading else first
-        rows, is_whole = split(self._rows(frame, first, upto), frame)
-        return pack(frame, rows) if rows and (is_whole or not whole) else None
+        rows, full = split(self._rows(frame, first, upto), frame)
+        if full < 1.0:
+            self._fullness[frame] = full
+        else:
+            self._fullness.pop(frame, None)
+        return pack(frame, rows) if rows and (full >= 1.0 or not whole) else None
 
     def _host_limit(self) -> int:
         """Return the number up to which no frame has rows that are still to be sealed."""
@@ -181,7 +207,7 @@ class Sealer:
             (frame, first, last),
         )
         for row in rows:
-            yield row[0], row[4], tail_fact(row, f"{self.folder / HOST_FILE} tail row")
+            yield row[0], row[4], tail_fact(row, self._place)
 
     def _name(self, frame: str, file: str, number: int, chain: bytes, chunk: Chunk) -> None:
         """Name a chunk that is on the disk, and let its rows go, in one transaction."""

@@ -16,7 +16,7 @@ from daq.records import BurstTaken, Fact, ScansTaken
 from daq.store import chunks, segments
 from daq.store.errors import JournalDamaged
 from daq.store.journal import Journal, JournalReader
-from daq.store.rows import Batch
+from daq.store.rows import Batch, EncodedFact, encoded
 from daq.store.segments import file_name, part_name, sealed_facts
 from daq.store.verify import verify, verify_sealed
 
@@ -39,6 +39,21 @@ def test_only_whole_chunks_move_until_a_test_ends(folder: Path, small_chunks: in
         assert journal.seal("H1", whole=False) == []
         assert [(seq, len(f)) for seq, f in journal.facts()] == [(20, 20), (25, 5)]
         assert list(verify(folder)) == []
+
+
+def test_facts_in_bytes_are_sealed_whether_or_not_their_scans_are_counted(
+    folder: Path, small_chunks: int
+) -> None:
+    """Counting only spares a look; a missing count must not keep a chunk in the host file."""
+    with open_journal(folder) as journal:
+        put(journal, scans("H1", 0))
+        assert journal.seal() == []
+        journal.commit(Batch(facts=(EncodedFact("H1", "ScansTaken", encode_fact(scans("H1", 1, 19))),)))
+        assert [s.scans for s in journal.seal()] == [20]
+        put(journal, scans("H1", 20, 10))
+        assert journal.seal() == []
+        journal.commit(Batch(facts=(encoded(scans("H1", 30, 10)),)))
+        assert [s.scans for s in journal.seal()] == [20]
 
 
 def test_a_block_that_does_not_fit_waits_for_the_next_chunk(folder: Path, small_chunks: int) -> None:
