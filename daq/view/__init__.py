@@ -1,1 +1,16 @@
-"""What people look at in a terminal. Reads only."""
+"""The view: the laboratory at a glance in a terminal, read-only, a process of its own."""
+
+from daq.view.model import AlarmRow, Curve, Event, Expected, Snapshot, Source, TestRow, ViewError
+from daq.view.watch import watch
+
+__all__ = [
+    "AlarmRow",
+    "Curve",
+    "Event",
+    "Expected",
+    "Snapshot",
+    "Source",
+    "TestRow",
+    "ViewError",
+    "watch",
+]
