@@ -22,17 +22,18 @@ and the canary asks for the identity: whatever came before the canary's answer i
 
 from __future__ import annotations
 
-import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from enum import Enum
-from typing import Final, Generic, TypeVar
+from typing import Final, Generic, Protocol, TypeVar
 
 from drivers.base import GARBLED, MISSING, DriverError, IdentityError, InstrumentError, LinkError
-from drivers.lines import Garbled, LineCodec
+from drivers.lines import Garbled
 from drivers.options import OptionReader
 from drivers.transport import CHUNK, Transport
 
+M = TypeVar("M")
+"""What an undamaged answer is: a line, a frame."""
 T = TypeVar("T")
 T_co = TypeVar("T_co", covariant=True)
 GAP_S: Final = 0.05
@@ -41,22 +42,44 @@ WARM_UP_S: Final = 5.0
 """Time for coming into step with several units of which the first may be dead."""
 FAILED_POLLS: Final = 2
 """Polls in a row without any answer after which the link needs a remedy."""
-_BLANK: Final = b"\r\n \t"
 
 
 class NotTheAnswer(Exception):  # noqa: N818 - a verdict, not a failure of the program
-    """Raised by a question's ``read``: the line does not answer it."""
+    """Raised by a question's ``read``: this does not answer it."""
+
+
+class Stranger(NotTheAnswer):
+    """Raised by the ``read`` of a question for identity: this is the answer of another instrument."""
+
+
+class Codec(Protocol[M]):
+    """Cuts a byte stream into answers; any slicing, bounded memory, garbage is an event."""
+
+    blank: bytes
+    """Bytes that may stand between answers without meaning anything."""
+
+    @property
+    def midway(self) -> bool: ...
+    def reset(self) -> None: ...
+    def feed(self, data: bytes) -> list[M | Garbled]: ...
 
 
 @dataclass(frozen=True, slots=True)
-class Question(Generic[T_co]):
-    """What is sent, and how its answer is read (``read`` raises NotTheAnswer for any other line)."""
+class Question(Generic[M, T_co]):
+    """What is sent, and how its answer is read (``read`` raises NotTheAnswer for any other)."""
 
     request: bytes
-    read: Callable[[str], T_co]
+    read: Callable[[M], T_co]
     voice: str = ""
-    echoed: str = ""
-    """The line that the instrument sends back before its answer, where it repeats what it was sent."""
+    distinct: bool = False
+    """Whether its answer cannot be mistaken for that of any question for readings."""
+    echoed: M | None = None
+    """What the instrument sends back before its answer, where it repeats what it was sent."""
+
+
+def always(question: Question[M, T]) -> Callable[[], Question[M, T]]:
+    """For a question that is the same each time it is asked."""
+    return lambda: question
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,6 +89,7 @@ class NoAnswer:
     quality: str
     why: str
     asked: bool = True
+    stranger: bool = False
 
 
 _OUT_OF_STEP: Final = NoAnswer(MISSING, "waiting for the line to come back into step", asked=False)
@@ -96,14 +120,14 @@ class _Trust(Enum):
     SETTLE = "silence, then trusted"
 
 
-class Conversation:
+class Conversation(Generic[M]):
     """The dialogue over one transport. Not for several threads."""
 
-    def __init__(self, port: Transport, codec: LineCodec, pace: Pace) -> None:
+    def __init__(self, port: Transport, codec: Codec[M], pace: Pace) -> None:
         self.port = port
         self.pace = pace
-        self.canaries: Sequence[Question[object]] = ()
-        """Questions fit to show that the dialogue is in step; the next one is tried when one fails."""
+        self.canaries: Sequence[Callable[[], Question[M, object]]] = ()
+        """Make questions fit to show that the dialogue is in step; the next one is tried when one fails."""
         self.failures = 0
         """Questions that were not answered as they should, and lines too noisy to ask at all."""
         self.resyncs = 0
@@ -124,36 +148,31 @@ class Conversation:
         self._sent_s.clear()
         self._failed_polls = 0
 
-    def introduce(
-        self, request: bytes, wanted: re.Pattern[str], clean: Callable[[str], str] = str, echoed: str = ""
-    ) -> str:
+    def introduce(self, make: Callable[[], Question[M, T]]) -> T:
         """Ask who is there and return what it says; its answer is as good as a canary's.
 
         Silence comes first: an answer to somebody before us may still be on its way. Asked a second time
-        where the first answer does not fit. Raises IdentityError if both answers are the same and wrong,
-        InstrumentError if they are garbage, LinkError if there are none. Takes at most twice
-        ``timeout_s`` + ``longest_reply_s``.
+        where the first answer does not fit. Raises IdentityError if both answers are the same and a
+        stranger's, InstrumentError if they are garbage, LinkError if there are none. Takes at most twice
+        ``timeout_s`` + ``longest_reply_s``, and ``longest_reply_s`` more if the answer is not distinct.
         """
-        heard: list[str] = []
-
-        def read(line: str) -> str:
-            text = clean(line).strip()
-            if not wanted.fullmatch(text):
-                heard.append(text)
-                raise NotTheAnswer(f"got {text[:80]!r}, need an identity like {wanted.pattern!r}")
-            return text
-
-        question = Question(request, read, IDENTITY_VOICE, echoed)
-        self.canaries = [question]
-        until_s = self.port.clock.now_s() + 2.0 * (self.pace.timeout_s + self.pace.longest_reply_s)
+        self.canaries = [make]
+        patience_s = 2.0 * (self.pace.timeout_s + self.pace.longest_reply_s)
+        until_s = self.port.clock.now_s() + patience_s
+        strangers: list[str] = []
         for _ in range(2):
-            if self._silence(until_s):
-                answer = self._exchange(question, until_s)
-                if not isinstance(answer, NoAnswer):
-                    self._trust = _Trust.YES
-                    return answer
-        if len(heard) == 2 and heard[0] == heard[1]:
-            raise IdentityError(f"{self.port.name}: {self._trouble.why}")
+            if not self._silence(until_s):
+                continue
+            question = make()
+            answer = self._exchange(question, until_s)
+            if not isinstance(answer, NoAnswer):
+                self._believe(question)
+                self.in_step(until_s + self.pace.longest_reply_s)
+                return answer
+            if answer.stranger:
+                strangers.append(answer.why)
+        if len(strangers) == 2 and strangers[0] == strangers[1]:
+            raise IdentityError(f"{self.port.name}: {strangers[0]}")
         raise self._complaint()
 
     def warm_up(self) -> None:
@@ -168,7 +187,7 @@ class Conversation:
                 return
         raise self._complaint()
 
-    def ask(self, question: Question[T], until_s: float) -> T | NoAnswer:
+    def ask(self, question: Question[M, T], until_s: float) -> T | NoAnswer:
         """Return the answer, or why there is none, before ``until_s``. LinkError when the wire fails."""
         answer: T | NoAnswer = _OUT_OF_STEP
         for _ in range(2):  # a second try only if the first found the line in doubt before it asked
@@ -199,7 +218,6 @@ class Conversation:
 
     def in_step(self, until_s: float) -> bool:
         """Bring the conversation back into step if it is in doubt; False if time was too short."""
-        clock = self.port.clock
         while self._trust is not _Trust.YES:
             if not self._silence(until_s):
                 return False
@@ -207,17 +225,19 @@ class Conversation:
                 self._trust = _Trust.YES
                 return True
             canary, *others = self.canaries
-            answer = self._exchange(canary, until_s)
+            question = canary()
+            answer = self._exchange(question, until_s)
             if isinstance(answer, NoAnswer):
                 if answer.asked:
                     self.canaries = [*others, canary]
                 return False
-            if canary.voice == IDENTITY_VOICE:
-                self._trust = _Trust.YES
-            else:
-                self._trust = _Trust.SETTLE
-                self._quiet_until_s = clock.now_s() + self.pace.longest_reply_s
+            self._believe(question)
         return True
+
+    def _believe(self, canary: Question[M, object]) -> None:
+        """A canary was answered as it should: that is enough if nothing else is answered like that."""
+        self._trust = _Trust.YES if canary.distinct else _Trust.SETTLE
+        self._quiet_until_s = self.port.clock.now_s() + self.pace.longest_reply_s
 
     def _complaint(self) -> DriverError:
         text = f"{self.port.name}: {self._trouble.why}"
@@ -248,7 +268,7 @@ class Conversation:
             data = self.port.read(CHUNK, until_s)
             if not data:
                 return False
-            if data.strip(_BLANK):
+            if data.strip(self._codec.blank):
                 self.port.flush_input()
                 return True
         return True
@@ -261,7 +281,7 @@ class Conversation:
         self._quiet_until_s = max(sent_s + self.pace.longest_reply_s, self.port.clock.now_s() + GAP_S)
         return trouble
 
-    def _exchange(self, question: Question[T], until_s: float) -> T | NoAnswer:
+    def _exchange(self, question: Question[M, T], until_s: float) -> T | NoAnswer:
         clock, pace = self.port.clock, self.pace
         free_s = self._sent_s.get(question.voice, -1e300) + pace.guard_s
         if free_s >= until_s or clock.now_s() >= until_s:
@@ -274,15 +294,16 @@ class Conversation:
         sent_s = clock.now_s()
         self._sent_s[question.voice] = sent_s
         try:
-            answer = question.read(self._one_line(question, min(until_s, sent_s + pace.timeout_s)))
+            answer = question.read(self._one_answer(question, min(until_s, sent_s + pace.timeout_s)))
         except _Silent as silent:
             return self._doubt(sent_s, NoAnswer(GARBLED if self._codec.midway else MISSING, str(silent)))
         except NotTheAnswer as mismatch:
-            return self._doubt(sent_s, NoAnswer(GARBLED, str(mismatch)))
+            stranger = isinstance(mismatch, Stranger)
+            return self._doubt(sent_s, NoAnswer(GARBLED, str(mismatch), stranger=stranger))
         return answer
 
-    def _one_line(self, question: Question[T], until_s: float) -> str:
-        echo_due = bool(question.echoed)
+    def _one_answer(self, question: Question[M, T], until_s: float) -> M:
+        echo_due = question.echoed is not None
         while True:
             data = self.port.read(CHUNK, until_s)
             if not data:
@@ -290,20 +311,17 @@ class Conversation:
             events = self._codec.feed(data)
             if events and echo_due:
                 first = events.pop(0)
-                if isinstance(first, Garbled) or first.text.strip() != question.echoed.strip():
+                if first != question.echoed:
                     raise NotTheAnswer(f"got {_show(first)}, need the echo {question.echoed!r}")
                 echo_due = False
             if not events:
                 continue
-            if isinstance(events[0], Garbled):
-                raise NotTheAnswer(f"got {_show(events[0])}")
+            answer = events[0]
+            if isinstance(answer, Garbled):
+                raise NotTheAnswer(f"got {_show(answer)}")
             if len(events) > 1 or self._codec.midway:
-                raise NotTheAnswer(f"got more than one line in answer to {question.request!r}")
-            return events[0].text
-
-
-IDENTITY_VOICE: Final = "identity"
-"""The voice of a question whose answer cannot be mistaken for a reading."""
+                raise NotTheAnswer(f"got more than one answer to {question.request!r}")
+            return answer
 
 
 class _Silent(Exception):  # noqa: N818 - as above

@@ -43,6 +43,8 @@ class LineCodec:
     the middle of ``12.345`` would otherwise hear ``2.345``.
     """
 
+    blank = b"\r\n \t"
+
     def __init__(self, terminator: bytes = b"\r\n", most: int = MAX_LINE, encoding: str = "ascii") -> None:
         self._end = terminator
         self._most = most
@@ -58,7 +60,7 @@ class LineCodec:
     @property
     def midway(self) -> bool:
         """Whether part of a line waits for the rest."""
-        return bool(self._pending.strip(b"\r\n \t")) or self._skipping
+        return bool(self._pending.strip(self.blank)) or self._skipping
 
     def feed(self, data: bytes) -> list[Line | Garbled]:
         """Take any slice of the stream; return the lines it completes, maybe none."""

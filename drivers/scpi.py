@@ -43,9 +43,11 @@ from drivers.conversation import (
     NotTheAnswer,
     Pace,
     Question,
+    Stranger,
+    always,
     read_pace,
 )
-from drivers.lines import LineCodec, parse_number
+from drivers.lines import Line, LineCodec, parse_number
 from drivers.options import OptionReader, must_be_fit
 from drivers.transport import Clock, Transport, read_port
 
@@ -147,8 +149,15 @@ class Scpi:
         self._port = o.make_port(clock) if port is None else port
         codec = LineCodec(o.terminator.encode("latin-1", "replace"), most=ANSWER_MOST)
         self._talk = Conversation(self._port, codec, o.pace)
-        self._scan = Question(self._line(o.scan), lambda line: read_scan(line, o.yields), "scan")
-        self._error = Question(self._line(o.error_query), read_error, "error")
+        self._scan: Question[Line, dict[str, Value]] = Question(
+            self._line(o.scan), lambda line: read_scan(line.text, o.yields), "scan"
+        )
+        self._error: Question[Line, tuple[int, str]] = Question(
+            self._line(o.error_query), lambda line: read_error(line.text), "error"
+        )
+        self._who: Question[Line, str] = Question(
+            self._line("*IDN?"), self._read_identity, "identity", distinct=True
+        )
         self._identified = False
         self._checked_s = 0.0
         self._in_doubt = False
@@ -168,7 +177,7 @@ class Scpi:
 
     def identify(self) -> Identity:
         o, clock = self._options, self._port.clock
-        answer = self._talk.introduce(self._line("*IDN?"), o.identity)
+        answer = self._talk.introduce(always(self._who))
         patience_s = o.pace.timeout_s + o.pace.longest_reply_s
         self._errors(clock.now_s() + patience_s)  # what happened before is of no concern
         for command in o.setup:
@@ -182,6 +191,12 @@ class Scpi:
         self._in_doubt = False
         self._identified = True
         return Identity(answer)
+
+    def _read_identity(self, line: Line) -> str:
+        text, wanted = line.text.strip(), self._options.identity
+        if not wanted.fullmatch(text):
+            raise Stranger(f"got {_short(text)}, need an identity like {wanted.pattern!r}")
+        return text
 
     def poll(self, deadline_s: float) -> list[RawReading]:
         o, clock = self._options, self._port.clock

@@ -69,6 +69,8 @@ from drivers.conversation import (
     NotTheAnswer,
     Pace,
     Question,
+    Stranger,
+    always,
     read_pace,
 )
 from drivers.lines import CHECKSUMS, MAX_LINE, WORDS, Checksum, Line, LineCodec, parse_number
@@ -400,7 +402,7 @@ class TextLine:
         o = self._options
         if o.declared:
             if not self.listens:
-                self._talk.canaries = [question for _, question in self._questions]
+                self._talk.canaries = [always(question) for _, question in self._questions]
                 self._talk.warm_up()
             self._identified = True
             return Identity(o.declared, declared=True)
@@ -408,10 +410,20 @@ class TextLine:
         if self.listens:
             text = self._overhear(o.identity_reply)
         else:
-            request, echo = self._request(o.identity_ask), self._echoed(o.identity_ask)
-            text = self._talk.introduce(request, o.identity_reply, self._unsealed, echo)
+            question = Question(
+                self._request(o.identity_ask), self._read_identity, distinct=True, voice="identity",
+                echoed=self._echoed(o.identity_ask),
+            )  # fmt: skip
+            text = self._talk.introduce(always(question))
         self._identified = True
         return Identity(text)
+
+    def _read_identity(self, line: Line) -> str:
+        wanted = self._options.identity_reply
+        text = self._unsealed(line.text).strip()
+        if wanted is not None and not wanted.fullmatch(text):
+            raise Stranger(f"got {_short(text)}, need an identity like {wanted.pattern!r}")
+        return text
 
     def _overhear(self, wanted: re.Pattern[str]) -> str:
         until_s = self._port.clock.now_s() + min(self._options.silence_s, OVERHEAR_S)
@@ -518,19 +530,20 @@ class TextLine:
                 continue
         return None
 
-    def _question(self, message: Message) -> Question[dict[str, Value]]:
-        def read(line: str) -> dict[str, Value]:
-            return read_line(line, message, self._options.manner)
+    def _question(self, message: Message) -> Question[Line, dict[str, Value]]:
+        def read(line: Line) -> dict[str, Value]:
+            return read_line(line.text, message, self._options.manner)
 
-        return Question(self._request(message.ask), read, message.echo, self._echoed(message.ask))
+        return Question(self._request(message.ask), read, message.echo, echoed=self._echoed(message.ask))
 
     def _request(self, ask: str) -> bytes:
         o = self._options
         sealed = o.manner.checksum.seal(ask) if o.seal_requests and o.manner.checksum else ask
         return (sealed + o.ask_terminator).encode("latin-1", "replace")
 
-    def _echoed(self, ask: str) -> str:
-        return self._request(ask).decode("latin-1").strip() if self._options.command_echo else ""
+    def _echoed(self, ask: str) -> Line | None:
+        sent = self._request(ask).decode("latin-1").removesuffix(self._options.ask_terminator)
+        return Line(sent) if self._options.command_echo else None
 
     def _unsealed(self, line: str) -> str:
         checksum = self._options.manner.checksum
