@@ -172,7 +172,7 @@ def row_of(name: str, d: Mapping[str, Any], history: _History | None = None) -> 
     test_h, stage = _number(d, "test_h"), _text(d, "stage")
     expected, nothing = _expected(d.get("forecast"))
     own = history if history is not None and history.test == name else None
-    since = _number(d, "stage_since_h")
+    since = _number(d, "stage_since_h", "since_h")
     marks = own.marks if own is not None else ((since, stage.replace("_", " ")),) if since is not None else ()
     row = TestRow(
         name=name,
@@ -185,13 +185,13 @@ def row_of(name: str, d: Mapping[str, Any], history: _History | None = None) -> 
         rate_low_per_h=_number(d, "rate_low_per_h"),
         rate_high_per_h=_number(d, "rate_high_per_h"),
         minimum_rate_per_h=_number(d, "minimum_rate_per_h"),
-        ratio_to_minimum=_number(d, "ratio_to_minimum"),
+        ratio_to_minimum=_number(d, "ratio_to_minimum", "rise_ratio"),
         temperature_c=_number(d, "temperature_c"),
         set_point_c=_number(d, "set_point_c"),
         below_k=_number(d, "below_k"),
         above_k=_number(d, "above_k"),
         alarms=_alarms(d),
-        next_event=nothing,
+        next_event=nothing or _milestone(d),
         curve=_curve(d.get("curve")),
         marks=marks,
         events=tuple(reversed(own.events)) if own is not None else (),
@@ -225,6 +225,12 @@ def _expected(value: Any) -> tuple[tuple[Expected, ...], str | None]:
         elif d.get("none_because") and (why is None or of == "rupture"):
             why = f"{event_name(of)}: none yet, because {d['none_because']}"
     return tuple(sorted(found, key=lambda e: (e.low_h, e.median_h, e.of))), why
+
+
+def _milestone(d: Mapping[str, Any]) -> str | None:
+    """Return the next strain to be reached, for want of a forecast."""
+    strain = _number(d, "next_milestone")
+    return None if strain is None else f"strain {100.0 * strain:g} % is the next milestone"
 
 
 def _each_forecast(value: Any) -> Iterator[Mapping[str, Any]]:
@@ -283,8 +289,9 @@ def _is_map(value: Any) -> TypeGuard[Mapping[str, Any]]:
     return isinstance(value, Mapping)
 
 
-def _number(d: Mapping[str, Any], key: str) -> float | None:
-    value = d.get(key)
+def _number(d: Mapping[str, Any], key: str, other: str = "") -> float | None:
+    """Return the number under ``key`` (or, where that is absent, under the ``other`` name for it)."""
+    value = d.get(key if key in d else other)
     if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
         return None
     return float(value)

@@ -108,6 +108,14 @@ def test_no_forecast_says_why() -> None:
     assert row.can_wait_until_tick is None
 
 
+def test_what_goes_by_two_names_is_found_by_either() -> None:
+    """The core says ``since_h`` and ``rise_ratio`` where a topic says more."""
+    bare = {k: v for k, v in FULL.items() if k not in ("stage_since_h", "forecast")}
+    row = row_of("H7", bare | {"since_h": 300.0, "rise_ratio": 2.1, "next_milestone": 0.02})
+    assert (row.stage_since_h, row.ratio_to_minimum) == (300.0, 2.1)
+    assert row.next_event == "strain 2 % is the next milestone"
+
+
 def test_a_rupture_that_may_come_any_moment_is_placed_by_its_median() -> None:
     """Past the early edge of the forecast a test must not fall to the end of the list."""
     row = row_of("H7", FULL | {"test_h": 355.0})
