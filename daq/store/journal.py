@@ -28,7 +28,9 @@ from daq.store.segments import FOLDER, tidy
 __all__ = ["Journal", "JournalReader"]
 
 CHECKPOINT_BYTES: Final = 4 << 20
-"""Size of the write-ahead file from which a commit also folds it into the host file."""
+"""Bytes, roughly, after which a commit also folds the write-ahead file into the host file."""
+COMMIT_BYTES: Final = 16_384
+"""What a commit adds to the write-ahead file beside its data: about four pages."""
 SNAPSHOTS_KEPT: Final = 3
 NEWEST: Final = 1 << 62
 """Above every sequence number."""
@@ -69,6 +71,8 @@ class Journal(JournalReading):
         self.site = meta["site"]
         self._sealer = Sealer(folder, connection, self.journal_id, self.site, hook, notices)
         self._next = self.last_seq + 1
+        # the file's size does not tell: once grown it is written anew from its beginning
+        self._unfolded = self.wal_bytes
         lock.mark(self.journal_id, self._next - 1)
 
     @classmethod
@@ -147,6 +151,8 @@ class Journal(JournalReading):
             for fact in facts:
                 self._sealer.note(fact)
             self._hook("commit.after")
+            self._unfolded += COMMIT_BYTES + sum(len(f.data) for f in facts)
+            self._unfolded += sum(len(s.data) for s in batch.snapshots)
             self._after_commit()
             return Committed(seqs, refused, undelivered)
 
@@ -178,7 +184,7 @@ class Journal(JournalReading):
         """Note the mark and fold in the write-ahead file; the commit stands whatever happens here."""
         try:
             self._folder_lock.mark(self.journal_id, self._next - 1)
-            if self.wal_bytes >= CHECKPOINT_BYTES:
+            if self._unfolded >= CHECKPOINT_BYTES:
                 self.checkpoint()
         except (JournalFull, JournalBusy):
             pass  # tried again at the next commit; ``wal_bytes`` shows that it grows
@@ -198,6 +204,7 @@ class Journal(JournalReading):
             self._hook("checkpoint.before")
             busy, log, done = self._connection().execute("PRAGMA wal_checkpoint(PASSIVE)").fetchone()
             self._hook("checkpoint.after")
+            self._unfolded = 0
         return not busy and log == done
 
     # --- sealing --------------------------------------------------------------------------
@@ -234,6 +241,8 @@ class Journal(JournalReading):
         with self._lock:
             self._refuse_if_broken()
             self._connection()
+            if finish:
+                self._sealed.close()
             for name in [*self.frames(), HOST] if frame is None else [frame]:
                 try:
                     with guarded(self._host):
@@ -243,6 +252,7 @@ class Journal(JournalReading):
                     raise
                 if sealed is not None:
                     done.append(sealed)
+                    self._unfolded += sealed.facts * 256
         return done
 
     # --- ends -----------------------------------------------------------------------------

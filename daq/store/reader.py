@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import sqlite3
+import time
 from pathlib import Path
 from types import TracebackType
-from typing import Self
+from typing import Final, Self
 
 from daq.store.errors import JournalError
 from daq.store.reading import JournalReading
 from daq.store.schema import connect
+
+REPLACED_WITHIN_S: Final = 1.0
 
 
 class JournalReader(JournalReading):
@@ -27,11 +30,22 @@ class JournalReader(JournalReading):
     def _connection(self) -> sqlite3.Connection:
         if self._closed:
             raise JournalError(f"{self.folder}: got a closed reader, wanted an open one")
-        inode = self._host.stat().st_ino
+        inode = self._inode_now()
         if self._db is None or inode != self._inode:
             self._drop()
             self._db, self._inode = open_host_to_read(self._host), inode
         return self._db
+
+    def _inode_now(self) -> int:
+        """Return which file has the host file's name; while it is replaced, for moments none has."""
+        patience = time.monotonic() + (REPLACED_WITHIN_S if self._db is not None else 0.0)
+        while True:
+            try:
+                return self._host.stat().st_ino
+            except FileNotFoundError:
+                if time.monotonic() >= patience:
+                    raise
+                time.sleep(0.01)
 
     def _drop(self) -> None:
         self._sealed.close()

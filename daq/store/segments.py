@@ -135,6 +135,7 @@ class SealedWriter:
     def finish(self) -> bool:
         """Make it a plain single file; say whether it went (a reader may be in the way)."""
         try:
+            self._connection.execute("PRAGMA busy_timeout = 50")
             mode = self._connection.execute("PRAGMA journal_mode = DELETE").fetchone()[0]
         except sqlite3.Error as error:
             problem = explain(error, str(self._path))
@@ -144,7 +145,9 @@ class SealedWriter:
         return bool(mode == "delete")
 
     def close(self) -> None:
-        """Let go of the file; its write-ahead file is folded in unless a reader is in the way."""
+        """Fold in the write-ahead file (unless a reader is in the way) and let go of the file."""
+        with suppress(sqlite3.Error):  # the chunks are on the disk already, in one file or the other
+            self._connection.execute("PRAGMA wal_checkpoint(PASSIVE)")
         self._connection.close()
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import shutil
 import sqlite3
 import subprocess
+import threading
 from collections.abc import Callable
 from pathlib import Path
 from random import Random
@@ -588,6 +589,31 @@ def test_a_write_ahead_file_that_a_reader_holds_is_seen_to_grow(
         assert [
             len(f) for _, f in journal.facts(frame="H1") if hasattr(f, "values") and hasattr(f, "channels")
         ]
+
+
+def test_the_write_ahead_file_is_folded_in_now_and_then_not_at_every_commit(
+    folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Once grown the file keeps its size, so that its size is no reason to fold it in."""
+    monkeypatch.setattr("daq.store.journal.CHECKPOINT_BYTES", 200_000)
+    points: list[str] = []
+    with Journal.open(folder, site="hall-a", hook=points.append) as journal:
+        for k in range(60):
+            journal.commit(Batch(facts=(scans("H1", k),)))
+        assert 2 <= points.count("checkpoint.after") <= 6
+        assert journal.wal_bytes < 600_000
+
+
+def test_a_reader_waits_out_the_moment_in_which_no_file_has_the_name(filled: Path) -> None:
+    """Between the two renames of a replacement there is no host file."""
+    host, away = filled / "journal.sqlite", filled / "away"
+    with JournalReader(filled) as reader:
+        assert reader.last_seq == 90
+        host.rename(away)
+        back = threading.Timer(0.05, lambda: away.rename(host))
+        back.start()
+        assert reader.last_seq == 90
+        back.join()
 
 
 def test_readers_follow_a_host_file_that_was_replaced(filled: Path) -> None:

@@ -260,6 +260,26 @@ def test_a_reader_loses_and_repeats_nothing_while_the_writer_seals(
         assert sorted(one_by_one(got["all"])) == sorted(every)
 
 
+def test_a_reader_in_the_way_delays_neither_a_seal_nor_its_end(folder: Path, small_chunks: int) -> None:
+    """A report that reads a test's file must not hold up the engine, nor keep its chunks from the file."""
+    with open_journal(folder) as journal, JournalReader(folder) as reader:
+        put(journal, scans("H1", 0))
+        journal.seal("H1", whole=False)
+        assert len(list(reader.facts())) == 1
+        for k in range(1, 4):
+            put(journal, scans("H1", k, 20))
+            journal.seal("H1")
+        assert journal.seal("H1", finish=True) == []
+        path = folder / "tests" / "H1.sqlite"
+        alone = folder / "alone.sqlite"
+        alone.write_bytes(path.read_bytes())
+        assert len(list(sealed_facts(alone))) == 4, "the chunks are in the file itself"
+        assert len(list(reader.facts())) == 4
+        reader.close()
+        assert journal.seal("H1", finish=True) == []
+        assert [p.name for p in path.parent.iterdir()] == ["H1.sqlite"]
+
+
 def test_a_sealed_file_can_be_read_from_a_disk_that_cannot_be_written(
     folder: Path, small_chunks: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
