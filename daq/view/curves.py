@@ -134,6 +134,16 @@ def mark_line(marks: Sequence[tuple[float, str]], axis: Axis, words: Words) -> T
     return say(("".join(line).rstrip(), "late"))
 
 
+def stage_line(row: TestRow, axis: Axis, words: Words) -> Text:
+    """Return the marks of a test and, right of now, its next forecast, for the axis between two charts."""
+    line = mark_line(row.marks, axis, words)
+    first = max(axis.cell(row.test_h or 0.0), line.cell_len) + 1
+    e = coming(row)
+    if e is not None and (line.cell_len < axis.cell(row.test_h or 0.0) or axis.cell(e.low_h) >= first):
+        line.append(" " * (first - line.cell_len)).append_text(_future(row, axis, first, words))
+    return line
+
+
 def _shown(t: float, axis: Axis) -> bool:
     return math.isfinite(t) and t <= axis.end_h
 

@@ -6,7 +6,7 @@ from typing import Final
 
 from rich.text import Text
 
-from daq.view.curves import MARGIN, Axis, axis_of, chart, coming, hour_line, mark_line
+from daq.view.curves import MARGIN, Axis, axis_of, chart, coming, hour_line, stage_line
 from daq.view.model import HOST, Place, Snapshot, TestRow, band, ratio_to_minimum, trend
 from daq.view.sentences import (
     alarm_line,
@@ -148,7 +148,7 @@ def _charts(row: TestRow, width: int, room: int, words: Words) -> list[Text]:
             return []
         return [*chart(row, "rate", axis, room - 2, words), hour_line(axis, words)]
     marks = say(" " * MARGIN)
-    marks.append_text(mark_line(row.marks, axis, words))
+    marks.append_text(stage_line(row, axis, words))
     return [
         *chart(row, "strain", axis, room - 4 - each, words),
         marks,

@@ -18,6 +18,8 @@ LABEL: Final = 6
 """Cells before a life line and what comes next, for the word that says which it is."""
 GAP: Final = 2
 NAME_MOST: Final = 12
+AIRY_FROM: Final = 112
+"""Width from which two blanks stand between figures, and a life line still fits beside them."""
 
 
 class Form(NamedTuple):
@@ -76,7 +78,7 @@ def row_lines(
     shot: Snapshot, p: Place, chosen: bool, width: int, name_width: int, form: Form, words: Words
 ) -> list[Text]:
     """Return all that a form says of one row."""
-    head = lay(head_pieces(p, words, name_width), width - 1)
+    head = lay(head_pieces(p, words, name_width), width - 1, " " if width < AIRY_FROM else "  ")
     spare = width - 1 - head.cell_len - GAP
     if p.row is not None and spare >= 12:
         life = 0 if form.life else spare if spare < 40 else spare - 26

@@ -37,7 +37,7 @@ _SHORT_STATES: Final = {
     "latched_unacknowledged": "latched, unack",
     "latched_acknowledged": "latched, ack",
 }
-_SHORT_STAGES: Final = {"inverse primary": "inverse p"}
+_SHORT_STAGES: Final = {"inverse primary": "inverse p", "quarantined": "quarant."}
 
 
 def title(name: str) -> str:

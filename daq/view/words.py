@@ -120,7 +120,7 @@ class Words:
 
     def off(self, b: Band | None) -> str:
         """Return the distance from the set point: "+0.3 K"."""
-        return NONE if b is None else f"{b.off_k:+.1f} K"
+        return NONE if b is None else f"{round(b.off_k, 1) + 0.0:+.1f} K"
 
     def strip(self, b: Band | None, width: int) -> str:
         """Return the band as a strip with a pointer, for instance [--|o-]; beyond it the pointer is < or >.
@@ -273,16 +273,14 @@ def say(*parts: str | tuple[str, str]) -> Text:
     return line
 
 
-def lay(pieces: Sequence[Piece], width: int) -> Text:
+def lay(pieces: Sequence[Piece], width: int, gap: str = " ") -> Text:
     """Return the pieces side by side, leaving out the least dear ones until they fit.
 
-    Which are left out, and whether one or two blanks stand between, depends on widths alone, so the
-    rows of a list stay aligned.
+    Which are left out depends on widths alone, so the rows of a list stay aligned.
     """
     kept = [p for p in pieces if p.width > 0]
-    while len(kept) > 1 and sum(p.width for p in kept) + len(kept) - 1 > width:
+    while len(kept) > 1 and sum(p.width for p in kept) + len(gap) * (len(kept) - 1) > width:
         kept.remove(max(kept, key=lambda p: p.keep))
-    gap = "  " if sum(p.width for p in kept) + 2 * len(kept) - 2 <= width else " "
     line = Text(no_wrap=True, overflow="crop", end="")
     for i, p in enumerate(kept):
         line.append(gap if i else "")
