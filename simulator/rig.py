@@ -250,12 +250,13 @@ def _truth(spec: RigSpec, world: World, end_h: float, rupture_h: float | None) -
     found = curve_events(spec.creep, last)
 
     def dated(equivalent: float | None) -> float | None:
-        return None if equivalent is None else float(np.interp(equivalent, world.equivalent_h, world.t_h))
+        if equivalent is None:
+            return None
+        return min(float(np.interp(equivalent, world.equivalent_h, world.t_h)), end_h)
 
     final = float(spec.creep.envelope.rate(last))
     inside = world.t_h < end_h
     t_h = np.append(world.t_h[inside], end_h)
-    minimum_h = float(np.interp(found.minimum_h, world.equivalent_h, world.t_h))
     rises = found.rise_5_percent_h is not None or final > 1.01 * found.minimum_rate_per_h
     first = found.first_rise_h if found.first_rise_h is not None else found.minimum_h
     return Truth(
@@ -265,7 +266,7 @@ def _truth(spec: RigSpec, world: World, end_h: float, rupture_h: float | None) -
         rises=rises,
         turns_tertiary=found.rise_5_percent_h is not None,
         incubation_h=dated(spec.creep.incubation_h) or 0.0,
-        minimum_h=minimum_h,
+        minimum_h=dated(found.minimum_h) or 0.0,
         minimum_rate_per_h=found.minimum_rate_per_h,
         first_rise_h=dated(first) if rises else None,
         rise_5_percent_h=dated(found.rise_5_percent_h),

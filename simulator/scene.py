@@ -5,7 +5,7 @@ A scenario is a rig in plain JSON values (``spec.rig_from_json``) with three key
 - ``scenario``: the name of one of SCENARIOS, whose values the others override;
 - ``starts_h``: lab hours after the scene's origin at which full load is on (default 0; before that the
   specimen hangs unstrained at temperature);
-- ``grid_s``: step of the precomputed courses [s] (default 60).
+- ``grid_s``: step of the precomputed courses [s] (default 300).
 
 The rig's ``sampling`` and its gaps and bursts are of no account here: scans are taken by whoever asks.
 ``seed`` defaults to the scene's seed and the rig's name. Example, a slip and a lost thermocouple::
@@ -72,7 +72,7 @@ SCENARIOS: Final[Mapping[str, Mapping[str, Any]]] = {
     # secondary creep at 980 C; 8 K too hot for an hour and a half, and later a step inside the band
     "excursion": {
         "creep": _steady(0.003, 0.15, 2e-5),
-        "duration_h": 2000.0,
+        "duration_h": 5000.0,
         "loading_strain": 0.002,
         "transducers": _TWO_SIDES,
         "furnace": _QUIET_FURNACE,
@@ -84,7 +84,7 @@ SCENARIOS: Final[Mapping[str, Mapping[str, Any]]] = {
     # secondary creep; the left side slips, later the right side is re-zeroed
     "slip": {
         "creep": _steady(0.003, 0.15, 2e-5),
-        "duration_h": 2000.0,
+        "duration_h": 5000.0,
         "loading_strain": 0.002,
         "transducers": _TWO_SIDES,
         "furnace": _QUIET_FURNACE,
@@ -96,7 +96,7 @@ SCENARIOS: Final[Mapping[str, Mapping[str, Any]]] = {
     # a long secondary stage, one transducer, in which nothing happens
     "quiet": {
         "creep": _steady(0.002, 0.08, 1e-5),
-        "duration_h": 2000.0,
+        "duration_h": 5000.0,
         "loading_strain": 0.0015,
         "transducers": [{"name": "strain", "side": "A", "white": 5e-6, "count": 2e-6, "per_room_k": 2e-6}],
         "thermocouples": [{"name": "mid"}],
@@ -116,7 +116,7 @@ class RigSignals:
     def __init__(self, scenario: Mapping[str, Any], seed: int, name: str) -> None:
         raw = _resolve(scenario, f"rigs.{name}")
         self._starts_h = _number(raw.pop("starts_h", 0.0), f"rigs.{name}.starts_h")
-        grid_s = _number(raw.pop("grid_s", 60.0), f"rigs.{name}.grid_s")
+        grid_s = _number(raw.pop("grid_s", 300.0), f"rigs.{name}.grid_s")
         if not grid_s > 0.0:
             raise ValueError(f"rigs.{name}.grid_s: got {grid_s}, wanted > 0")
         own = zlib.crc32(name.encode()) ^ (seed & 0xFFFFFFFF)
