@@ -18,6 +18,7 @@ from drivers.base import Driver, SetupError
 
 GROUP: Final = "upturn.drivers"
 FAMILIES: Final[Mapping[str, str]] = {
+    "modbus": "drivers.modbus:Modbus",
     "scpi": "drivers.scpi:Scpi",
     "textline": "drivers.textline:TextLine",
 }

@@ -75,13 +75,12 @@ from drivers.conversation import (
 )
 from drivers.lines import CHECKSUMS, MAX_LINE, WORDS, Checksum, Line, LineCodec, parse_number
 from drivers.options import NEVER, OptionReader, must_be_fit
+from drivers.rota import Rota
 from drivers.transport import CHUNK, Clock, Transport, read_port
 
 CONNECT_S: Final = 2.0
 OVERHEAR_S: Final = 5.0
 """How long to wait for a talker that names itself."""
-REST_MOST: Final = 8
-"""A unit that stays silent is asked in every eighth poll at least."""
 TTY_BUFFER: Final = 4000
 """Bytes waiting from which on a serial port's buffer (4096 in Linux) may have overflowed."""
 
@@ -376,8 +375,7 @@ class TextLine:
         self._codec = LineCodec(o.terminator, encoding=o.encoding)
         self._talk = Conversation(self._port, self._codec, o.pace)
         self._questions = [(m, self._question(m)) for m in o.messages]
-        self._silent: dict[int, int] = {}
-        self._rest: dict[int, int] = {}
+        self._rota = Rota(len(self._questions))
         self._identified = False
         self._heard_s = 0.0
 
@@ -389,8 +387,7 @@ class TextLine:
         self._identified = False
         self._port.open(self._port.clock.now_s() + self._options.connect_timeout_s)
         self._talk.begin()
-        self._silent.clear()
-        self._rest.clear()
+        self._rota = Rota(len(self._questions))
         self._codec.reset(synced=not self.listens)
         self._heard_s = self._port.clock.now_s()
 
@@ -451,33 +448,19 @@ class TextLine:
         ]
 
     def _ask_all(self, until_s: float) -> dict[str, Value]:
-        values: dict[str, Value] = {}
+        values: dict[str, Value] = dict.fromkeys(self.yields, (float("nan"), MISSING))
         answered = False
-        # units that were silent last time come last, so that they take nobody else's time
-        for i in sorted(range(len(self._questions)), key=lambda i: i in self._silent):
+        for i in self._rota.turn():
             message, question = self._questions[i]
-            if self._rest.get(i, 0) > 0:
-                self._rest[i] -= 1
-                answer: dict[str, Value] | NoAnswer = NoAnswer(
-                    MISSING, "not asked: silent for several polls", False
-                )
-            else:
-                answer = self._talk.ask(question, until_s)
+            answer = self._talk.ask(question, until_s)
+            self._rota.note(i, answer)
             if isinstance(answer, NoAnswer):
-                self._note_silence(i, answer)
                 values |= {pick.name: (float("nan"), answer.quality) for pick in message.picks}
             else:
-                self._silent.pop(i, None)
                 answered = True
                 values |= answer
         self._talk.end_of_poll(answered)
         return values
-
-    def _note_silence(self, i: int, answer: NoAnswer) -> None:
-        if answer.asked and answer.quality == MISSING:
-            self._silent[i] = self._silent.get(i, 0) + 1
-            if len(self._questions) > 1 and self._silent[i] >= 2:
-                self._rest[i] = min(REST_MOST, 2 ** (self._silent[i] - 1)) - 1
 
     def _listen(self, until_s: float) -> dict[str, Value]:
         """Take the last line of each kind that was heard since the last poll, or wait for one."""

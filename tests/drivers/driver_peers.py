@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import heapq
+import math
 import os
 import random
 import select
@@ -79,12 +80,15 @@ class FaultyPeer:
         *requests, self._pending = (self._pending + data).split(self.end)
         answers: Answers = []
         for request in requests:
-            self.asked += 1
-            if self.mood is not None:
-                self.how = self.mood()
-                self.faults.append(self.how)
-            answers += self._misbehave(request.decode("latin-1"))
+            answers += self._request(request.decode("latin-1"))
         return answers
+
+    def _request(self, request: str) -> Answers:
+        self.asked += 1
+        if self.mood is not None:
+            self.how = self.mood()
+            self.faults.append(self.how)
+        return self._misbehave(request)
 
     def compose(self, request: str) -> str | None:
         raise AssertionError("a subclass says how")
@@ -118,7 +122,7 @@ class FaultyPeer:
         if how == "garbled":
             return [(soon, self._damaged(answer))]
         if how == "cut":
-            return [(soon, answer[: rng.randrange(len(text) + 1)])]
+            return [(soon, answer[: rng.randrange(len(answer) - max(0, len(self.end) - 1))])]
         if how == "drip":
             step_s = 1.2 * self.timeout_s / len(answer)
             return [(soon + i * step_s, answer[i : i + 1]) for i in range(len(answer))]
@@ -229,6 +233,98 @@ class ScannerPeer(FaultyPeer):
         "scan": "READ?",
         "yields": {"left": 101, "right": 102, "mid": 111},
     }
+
+
+class RtuPeer(FaultyPeer):
+    """Modbus RTU: unit 1 with two floats and an oven's temperature in tenths, unit 2 with a break switch."""
+
+    sealed = True
+    end = b""
+
+    def receive(self, data: bytes) -> Answers:
+        self._pending += data
+        answers: Answers = []
+        while len(self._pending) >= 8:
+            request, self._pending = self._pending[:8], self._pending[8:]
+            answers += self._request(request.decode("latin-1"))
+        return answers
+
+    def compose(self, request: str) -> str | None:
+        frame = request.encode("latin-1")
+        if bitwise_crc(frame) != b"\0\0":
+            return None
+        pdu = self.answer(*struct.unpack(">BBHH", frame[:6]))
+        return None if pdu is None else (pdu + bitwise_crc(pdu)).decode("latin-1")
+
+    def answer(self, unit: int, code: int, address: int, count: int) -> bytes | None:
+        """Unit, function code and data of the answer."""
+        strange, nothing = self.how == "stranger", self.how == "no_number"
+        if (unit, code, address, count) == (1, 4, 0, 1):
+            return struct.pack(">BBBH", 1, 4, 2, 4712 if strange else 4711)
+        if (unit, code, address, count) == (1, 4, 100, 4):
+            sides = [self._float("left"), self._float("right")]
+            if nothing:
+                sides = self.rng.sample([math.nan, math.inf, -math.inf], 2)
+            return struct.pack(">BBBff", 1, 4, 8, *sides)
+        if (unit, code, address, count) == (1, 3, 7, 1):
+            raw = int(self._float("oven", 0.1) * 10.0 + 0.5)
+            return struct.pack(">BBBh", 1, 3, 2, 32767 if nothing else raw)
+        if (unit, code, address, count) == (1, 3, 17, 1):
+            raw = int(self._float("room", 0.1) * 10.0 + 0.5)
+            return struct.pack(">BBBh", 1, 3, 2, -32768 if nothing else raw)
+        return bytes([unit, code | 0x80, 2]) if unit == 1 else None
+
+    def _float(self, name: str, scale: float = 1.0) -> float:
+        self._n = self._n % 30000 + 1
+        number = self._n * scale if scale != 1.0 else self._n + 0.25
+        self._owed[name].append(number)
+        return number
+
+    options = {  # noqa: RUF012
+        "unit": 1,
+        "identity": {"table": "input", "register": 0, "equals": 4711},
+        "no_reading": {32767: "open_circuit", -32768: "overload"},
+        "yields": {
+            "left": {"table": "input", "register": 100, "type": "float32"},
+            "right": {"table": "input", "register": 102, "type": "float32"},
+            "oven": {"register": 7, "scale": 0.1},
+            "room": {"register": 17, "scale": 0.1},
+        },
+    }
+
+
+class ModbusTcpPeer(RtuPeer):
+    """The same over Modbus TCP, where damage can only be seen in the header."""
+
+    def receive(self, data: bytes) -> Answers:
+        self._pending += data
+        answers: Answers = []
+        while len(self._pending) >= 12:
+            request, self._pending = self._pending[:12], self._pending[12:]
+            answers += self._request(request.decode("latin-1"))
+        return answers
+
+    def compose(self, request: str) -> str | None:
+        frame = request.encode("latin-1")
+        body = self.answer(*struct.unpack(">BBHH", frame[6:12]))
+        return None if body is None else (frame[:4] + struct.pack(">H", len(body)) + body).decode("latin-1")
+
+    def _damaged(self, answer: bytes) -> bytes:
+        at = self.rng.randrange(8)
+        return answer[:at] + bytes([answer[at] ^ 1 << self.rng.randrange(8)]) + answer[at + 1 :]
+
+    options = {**RtuPeer.options, "framing": "tcp"}  # noqa: RUF012
+
+
+def bitwise_crc(data: bytes) -> bytes:
+    """CRC of Modbus over Serial Line by polynomial division, bit by bit, over the bits as they are sent."""
+    register = 0xFFFF
+    for bit in (byte >> i & 1 for byte in data for i in range(8)):
+        feedback = (register & 1) ^ bit
+        register >>= 1
+        if feedback:
+            register ^= 0xA001
+    return struct.pack("<H", register)
 
 
 class TalkerPeer(FaultyPeer):

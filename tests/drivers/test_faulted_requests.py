@@ -14,7 +14,17 @@ from collections import Counter, defaultdict
 from typing import Any
 
 import pytest
-from driver_peers import BusPeer, FaultyPeer, GaugePeer, MutePeer, ScannerPeer, TalkerPeer, scripted
+from driver_peers import (
+    BusPeer,
+    FaultyPeer,
+    GaugePeer,
+    ModbusTcpPeer,
+    MutePeer,
+    RtuPeer,
+    ScannerPeer,
+    TalkerPeer,
+    scripted,
+)
 
 from drivers.base import GOOD, Driver, DriverError, RawReading
 from drivers.registry import driver_class
@@ -33,6 +43,8 @@ FAMILIES: dict[str, tuple[str, type[FaultyPeer]]] = {
     "text, no echo": ("textline", MutePeer),
     "text, talking": ("textline", TalkerPeer),
     "scpi": ("scpi", ScannerPeer),
+    "modbus rtu": ("modbus", RtuPeer),
+    "modbus tcp": ("modbus", ModbusTcpPeer),
 }
 
 
@@ -45,9 +57,11 @@ class Round:
         self.peer.second_copy_s = (0.0, LONGEST_S - self.peer.reply_s)
         self.port: ScriptedPort = scripted(self.peer)
         options: dict[str, Any] = {
-            "port": "/dev/none", "timeout_s": TIMEOUT_S, "longest_reply_s": LONGEST_S, "guard_s": LONGEST_S,
-            **peer_class.options,  # type: ignore[attr-defined]
+            "port": "socket://scripted:1", "timeout_s": TIMEOUT_S, "longest_reply_s": LONGEST_S,
+            "guard_s": LONGEST_S, **peer_class.options,  # type: ignore[attr-defined]
         }  # fmt: skip
+        if peer_class is RtuPeer:
+            options["framing"] = "rtu"
         make: Any = driver_class(family)
         self.driver: Driver = make(options, port=self.port)
         self.moods = [how for how in ON_THE_WIRE if how in self.peer.can]
