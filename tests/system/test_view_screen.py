@@ -300,7 +300,8 @@ def test_one_test_in_full_shows_both_curves_with_the_stages_marked(size: tuple[i
         "2 of 4",
     ):
         assert words in text
-    assert any("╵tertiary" in line and "├" in line for line in told)  # and what is expected next
+    ahead = screen(shot(4), size, ViewState(page=Page.DETAIL, chosen="K2"))
+    assert any(line.startswith(" " * 40) and "├──" in line for line in ahead)  # the forecast, on that axis
     between = next(i for i, line in enumerate(told) if "╵secondary" in line)
     column = told[between].index("╵secondary")
     dotted = [line for line in told if len(line) > column and line[column] == "·"]
