@@ -338,5 +338,14 @@ def _bench(document: Document, tree: Mapping[str, Any]) -> None:
             ("bench", "speed"),
             f"got {speed:g} beside {', '.join(real)} with a real port, wanted 1 (those keep their own time)",
         )
+    parts = mapping(mapping(bench).get("instruments"))
+    for name in played:
+        if name not in parts:
+            hint = f"wanted bench.instruments.{name}{near(name, parts)}"
+            document.problem(("instruments", name, "port"), f"got emulated, {hint}")
+    for name in parts:
+        if name not in played:
+            wanted = f"wanted an instrument of that name with port: emulated{near(name, played)}"
+            document.problem(("bench", "instruments", name), f"got {name!r}, {wanted}", at_key=True)
     if not played:
         document.problem(("bench",), "got no instrument with port: emulated, wanted one to play", at_key=True)

@@ -309,15 +309,19 @@ class Broker(Section):
     client_id: Name | None = None
 
 
-class Bench(BaseModel):
-    """Emulated instruments and what their frames go through; the rest is judged by the emulation."""
-
-    model_config = ConfigDict(extra="allow", frozen=True, allow_inf_nan=False)
+class Bench(Section):
+    """Emulated instruments and what their frames go through; the emulation judges its own words."""
 
     speed: Annotated[float, BeforeValidator(_number), Field(ge=0.01, le=1e6)] = Field(
         default=1.0, description="Times real time; other than 1 only where every instrument is emulated."
     )
     seed: Annotated[int, BeforeValidator(_whole), Field(ge=0)] = 0
+    rigs: dict[Name, dict[str, Any]] = Field(
+        default_factory=dict, description="Rig -> scenario, in the words of the emulation."
+    )
+    instruments: dict[InstrumentName, dict[str, Any]] = Field(
+        default_factory=dict, description="Emulated instrument -> protocol and what its readings are."
+    )
 
 
 class LabFile(Section):

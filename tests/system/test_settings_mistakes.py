@@ -242,6 +242,42 @@ def test_a_mistake_in_a_conversion_is_named(conversion: str, complaint: str) -> 
     assert any(complaint in line for line in found), "\n".join(found)
 
 
+BENCH = "bench: {speed: 60, instruments: {gauge: {protocol: text}}}\n"
+
+
+@pytest.mark.parametrize(
+    ("was", "becomes", "complaint"),
+    [
+        (
+            "instruments: {gauge:",
+            "instruments: {gage:",
+            "got emulated, wanted bench.instruments.gauge; did you",
+        ),
+        (
+            "instruments: {gauge:",
+            "instruments: {gage:",
+            "10:34: bench.instruments.gage: got 'gage', wanted an",
+        ),
+        ("speed: 60", "speed: fast", "bench.speed: got 'fast', wanted a number"),
+        (
+            "speed: 60",
+            "pace: 60",
+            "bench.pace: got an unknown key, wanted one of speed, seed, rigs, instruments",
+        ),
+    ],
+)
+def test_a_mistake_in_the_bench_is_named(was: str, becomes: str, complaint: str) -> None:
+    """Every emulated instrument is played, and nothing else is."""
+    gauge = GAUGE.replace("socket://127.0.0.1:4001", "emulated")
+    text = frame("channels: {a: {role: strain, source: gauge.left}}", gauge + BENCH)
+    lab = loads(text, "lab.yaml")
+    assert lab.instruments[0].emulated
+    assert lab.bench is not None
+    assert (lab.bench.speed, lab.bench.spec["instruments"]) == (60.0, {"gauge": {"protocol": "text"}})
+    found = complaints(text.replace(was, becomes, 1))
+    assert any(complaint in line for line in found), "\n".join(found)
+
+
 def test_one_mistake_is_named_once() -> None:
     """An empty value is no mapping either; the second complaint would only follow from the first."""
     assert complaints(frame("channels:\n  a: {role: strain}\n  b:")) == [
