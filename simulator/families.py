@@ -86,14 +86,35 @@ def _theta_projection(rng: Rng, life_h: float) -> tuple[Curve, float]:
 
 
 def _no_plateau(rng: Rng, life_h: float) -> tuple[Curve, float]:
-    """Least rate at 12-18 % of life, as on measured nickel single crystals; theta or Graham & Walles."""
-    if rng.random() < 0.6:
+    """Least rate at 12-18 % of life, as on measured nickel single crystals.
+
+    Theta, Graham & Walles (a t^(1/3) + f t^3), or damage whose rate goes as (1 - t/tr)^-p with p 1.3..2.4
+    behind a short primary: that one runs through two decades of rate, as single crystals do.
+    """
+    pick = rng.random()
+    if pick < 0.4:
         return _theta(rng, life_h, 0.12, 0.18), life_h
+    if pick < 0.75:
+        return _runaway(rng, life_h), life_h
     at = float(rng.uniform(0.12, 0.18))
     rise = at ** (-8.0 / 3.0) / 27.0
     a = _final_strain(rng) / (1.0 + rise)
     cube = PowerOfTime(a * rise / life_h**3, 3.0)
     return Sum((PowerOfTime(a / life_h ** (1.0 / 3.0), 1.0 / 3.0, 1e-4 * life_h), cube)), life_h
+
+
+def _runaway(rng: Rng, life_h: float) -> Curve:
+    """Damage with n > 1 + phi, cut off before its strain diverges; least rate put at 12-18 % of life."""
+    p, phi = float(rng.uniform(1.3, 2.4)), 7.0
+    end = life_h / float(rng.uniform(0.95, 0.99))
+    unit = Kachanov(1.0 / end, p * (1.0 + phi), phi, end)
+    rate0 = _final_strain(rng) / float(unit.strain(life_h)) / end
+    fast = float(rng.uniform(12.0, 30.0)) / life_h
+    at = float(rng.uniform(0.12, 0.18)) * life_h
+    # the slopes of the falling and of the rising rate cancel there
+    rising = rate0 * p / end * (1.0 - at / end) ** (-p - 1.0)
+    amount = rising / (fast**2 * math.exp(-fast * at))
+    return Sum((ExponentialPrimary(amount, fast), Kachanov(rate0, p * (1.0 + phi), phi, end)))
 
 
 def _damage(rng: Rng, life_h: float) -> tuple[Curve, float]:
@@ -167,13 +188,15 @@ def _several_minima(rng: Rng, life_h: float) -> tuple[Curve, float]:
 
 
 def _jerky(rng: Rng, life_h: float) -> tuple[Curve, float]:
-    """Staircase creep of 100-800 microstrain a stair on a theta curve."""
+    """Staircase creep on a theta curve."""
     base = _theta(rng, life_h, 0.1, 0.45)
-    return _with_stairs(rng, base), life_h
+    return _with_stairs(rng, base, life_h), life_h
 
 
-def _with_stairs(rng: Rng, base: Curve) -> Jerky:
-    return Jerky(base, log_uniform(rng, 1e-4, 8e-4), float(rng.uniform(0.3, 0.9)), int(rng.integers(1 << 30)))
+def _with_stairs(rng: Rng, base: Curve, life_h: float) -> Jerky:
+    """Stairs of 100-800 microstrain, at least eight of them within the first 30 % of life."""
+    step = min(log_uniform(rng, 1e-4, 8e-4), float(base.strain(0.3 * life_h)) / 8.0)
+    return Jerky(base, step, float(rng.uniform(0.3, 0.9)), int(rng.integers(1 << 30)))
 
 
 def _to_steady(rng: Rng, life_h: float) -> Curve:
@@ -211,7 +234,7 @@ def _hump_to_steady(rng: Rng, life_h: float) -> Curve:
 
 
 def _jerky_steady(rng: Rng, life_h: float) -> Curve:
-    return _with_stairs(rng, _to_steady(rng, life_h))
+    return _with_stairs(rng, _to_steady(rng, life_h), life_h)
 
 
 TURNING: Final[Mapping[str, tuple[float, Callable[[Rng, float], tuple[Curve, float]]]]] = {

@@ -16,7 +16,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from simulator.creep import FloatArray
+from simulator.creep import FloatArray, Jerky
 from simulator.onset import curve_events
 from simulator.spec import Event, RigSpec, Transducer
 from simulator.world import World, build_world, event_edges
@@ -36,7 +36,8 @@ class NoiseTruth:
     ``white``: standard deviation [1] of one scan. ``count``: converter step of the mean; its error is
     uniform, variance count^2/12. ``drifts``: (standard deviation [1], memory [h]) of first-order processes;
     those of room and furnace that act but are not logged are among them, so that a bound worked out
-    from this noise asks nothing impossible.
+    from this noise asks nothing impossible. The stairs of jerky creep, real strain but no change of stage,
+    are there too, as a saw-tooth's standard deviation and a tenth of a stair's time.
     """
 
     white: float
@@ -125,6 +126,9 @@ def noise_truth(spec: RigSpec) -> NoiseTruth:
     if not spec.thermocouples:
         k = abs(sum(c.per_specimen_k for c in spec.transducers)) / n
         drifts.append((k * spec.furnace.wander_k, spec.furnace.wander_memory_h))
+    if isinstance(spec.creep, Jerky):
+        pace = float(spec.creep.base.rate(0.5 * spec.longest_h))
+        drifts.append((spec.creep.sharpness * spec.creep.step / 12.0**0.5, 0.1 * spec.creep.step / pace))
     return NoiseTruth(
         white=sum(c.white**2 for c in spec.transducers) ** 0.5 / n,
         count=sum(max(c.count, c.display) ** 2 for c in spec.transducers) ** 0.5 / n,
