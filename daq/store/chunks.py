@@ -161,7 +161,7 @@ def pieces_of(index: bytes, facts: int) -> list[Piece]:
         rows, sizes, rest = numbers[1 : n + 1], numbers[n + 1 : 2 * n + 1], numbers[2 * n + 1 :]
     except (zlib.error, ValueError, IndexError) as error:
         raise RecordError(f"index of a chunk: got {error!r}") from error
-    if rest.size != 2 * facts or int(rows.sum()) != facts or (rows < 1).any() or (sizes < 1).any():
+    if rows.size != sizes.size or rest.size != 2 * facts or rows.sum() != facts or (rows < 1).any():
         raise RecordError(f"index of a chunk: got {rest.size} numbers, wanted {2 * facts}")
     seqs, counts = np.cumsum(rest[:facts]), rest[facts:]
     pieces = []

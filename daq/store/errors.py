@@ -70,7 +70,7 @@ def explain(error: sqlite3.Error | OSError, place: str) -> JournalError:
     if primary in _DAMAGE_CODES or "Could not decode" in str(error):  # text that is no UTF-8 has no code
         return JournalDamaged(f"{place}: got {name} ({error}), wanted an undamaged file")
     if primary in (None, sqlite3.SQLITE_ERROR):
-        return JournalError(f"{place}: got {error}, wanted an open journal")
+        return JournalError(f"{place}: got {error}, wanted something that can be done there")
     return JournalBroken(f"{place}: got {name} ({error}), wanted to read and write there")
 
 

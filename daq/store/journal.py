@@ -12,10 +12,11 @@ from collections.abc import Callable
 from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
-from typing import Final, Self
+from typing import Final, Self, TypeVar
 
 from daq.codec import canonical_json, encode_finding
-from daq.store.errors import JournalBroken, JournalBusy, JournalError, JournalFull, guarded
+from daq.records import Finding
+from daq.store.errors import JournalBroken, JournalBusy, JournalDamaged, JournalError, JournalFull, guarded
 from daq.store.lock import FolderLock
 from daq.store.reader import JournalReader
 from daq.store.reading import HOST, JournalReading
@@ -126,8 +127,11 @@ class Journal(JournalReading):
             JournalFull: no room; nothing of the batch was written, it may be tried again.
             JournalBusy: something else holds the write lock; as above.
             JournalBroken: the disk failed; this and every later commit is refused.
-            JournalError: a spool file in ``inbox`` was taken before; nothing was written.
+            JournalError: a spool file in ``inbox`` was taken before, or a value has no canonical form
+                (a NaN in a finding); nothing was written, and the facts alone may be tried again.
         """
+        findings = [(f, _json(f"finding {f.id}", encode_finding, f)) for f in batch.findings]
+        status = [(t, _json(f"status of {t}", canonical_json, body)) for t, body in batch.status.items()]
         facts = [f if isinstance(f, EncodedFact) else encoded(f) for f in batch.facts]
         with self._lock:
             self._refuse_if_broken()
@@ -138,14 +142,13 @@ class Journal(JournalReading):
             try:
                 with guarded(self._host), transaction(connection):
                     _put_facts(connection, seqs, facts)
-                    refused = _put_findings(connection, batch)
+                    refused = _put_findings(connection, findings)
                     undelivered = _put_outbox(connection, batch)
-                    self._put_rest(connection, seqs, batch)
+                    _put_rest(connection, seqs, batch)
+                    connection.executemany("INSERT OR REPLACE INTO status VALUES (?, ?)", status)
                     self._hook("commit.before")
-            except (JournalFull, JournalBusy):
-                raise
-            except JournalError as error:
-                self._break(error)
+            except (JournalBroken, JournalDamaged) as error:
+                self._broken = error
                 raise
             self._next = seqs.stop
             for fact in facts:
@@ -156,30 +159,6 @@ class Journal(JournalReading):
             self._after_commit()
             return Committed(seqs, refused, undelivered)
 
-    def _put_rest(self, connection: sqlite3.Connection, seqs: range, batch: Batch) -> None:
-        last = seqs.stop - 1
-        connection.executemany("UPDATE outbox SET acked = 1 WHERE seq = ?", ((seq,) for seq in batch.acked))
-        for s in batch.snapshots:
-            seq = last if s.seq is None else s.seq
-            connection.execute(
-                "INSERT OR REPLACE INTO snapshot VALUES (?, ?, ?, ?, ?)",
-                (s.key, seq, s.engine, checksum(s.data, s.key, seq, s.engine), s.data),
-            )
-            # a snapshot can be made again from the facts; only the newest are worth their room
-            connection.execute(
-                "DELETE FROM snapshot WHERE key = ?1 AND seq NOT IN "
-                f"(SELECT seq FROM snapshot WHERE key = ?1 ORDER BY seq DESC LIMIT {SNAPSHOTS_KEPT})",
-                (s.key,),
-            )
-        connection.executemany(
-            "INSERT OR REPLACE INTO status VALUES (?, ?)",
-            ((test, canonical_json(body)) for test, body in batch.status.items()),
-        )
-        for name in batch.inbox:
-            if connection.execute("SELECT 1 FROM inbox WHERE name = ?", (name,)).fetchone():
-                raise _TakenError(f"spool/{name}: got an entry that was taken before, wanted a new one")
-            connection.execute("INSERT INTO inbox VALUES (?, ?)", (name, last))
-
     def _after_commit(self) -> None:
         """Note the mark and fold in the write-ahead file; the commit stands whatever happens here."""
         try:
@@ -189,7 +168,7 @@ class Journal(JournalReading):
         except (JournalFull, JournalBusy):
             pass  # tried again at the next commit; ``wal_bytes`` shows that it grows
         except JournalError as error:
-            self._break(error)
+            self._broken = error
 
     @property
     def wal_bytes(self) -> int:
@@ -248,7 +227,7 @@ class Journal(JournalReading):
                     with guarded(self._host):
                         sealed = self._sealer.next(name, into or name, limit, whole=whole, finish=finish)
                 except JournalBroken as error:
-                    self._break(error)
+                    self._broken = error
                     raise
                 if sealed is not None:
                     done.append(sealed)
@@ -280,13 +259,16 @@ class Journal(JournalReading):
         if self._broken is not None:
             raise JournalBroken(f"{self._host}: broken since: {self._broken}") from self._broken
 
-    def _break(self, error: JournalError) -> None:
-        if not isinstance(error, _TakenError):
-            self._broken = error
+
+T = TypeVar("T")
 
 
-class _TakenError(JournalError):
-    """A spool file was taken before: the caller's mistake, not the disk's."""
+def _json(what: str, encode: Callable[[T], str], value: T) -> str:
+    """Return the text of a finding or status; it is made before the transaction begins."""
+    try:
+        return encode(value)
+    except (ValueError, TypeError) as error:
+        raise JournalError(f"{what}: got {error}, wanted plain JSON values") from error
 
 
 def _put_facts(connection: sqlite3.Connection, seqs: range, facts: list[EncodedFact]) -> None:
@@ -302,10 +284,9 @@ def _put_facts(connection: sqlite3.Connection, seqs: range, facts: list[EncodedF
     connection.execute("UPDATE head SET last_seq = ?", (seqs.stop - 1,))
 
 
-def _put_findings(connection: sqlite3.Connection, batch: Batch) -> tuple[str, ...]:
+def _put_findings(connection: sqlite3.Connection, findings: list[tuple[Finding, str]]) -> tuple[str, ...]:
     refused = []
-    for f in batch.findings:
-        body = encode_finding(f)
+    for f, body in findings:
         done = connection.execute(
             "INSERT INTO finding (id, test, kind, checksum, body) VALUES (?, ?, ?, ?, ?) "
             "ON CONFLICT (id) DO NOTHING",
@@ -329,3 +310,24 @@ def _put_outbox(connection: sqlite3.Connection, batch: Batch) -> tuple[str, ...]
         if not done.rowcount:
             refused.append(m.id)
     return tuple(refused)
+
+
+def _put_rest(connection: sqlite3.Connection, seqs: range, batch: Batch) -> None:
+    last = seqs.stop - 1
+    connection.executemany("UPDATE outbox SET acked = 1 WHERE seq = ?", ((seq,) for seq in batch.acked))
+    for s in batch.snapshots:
+        seq = last if s.seq is None else s.seq
+        connection.execute(
+            "INSERT OR REPLACE INTO snapshot VALUES (?, ?, ?, ?, ?)",
+            (s.key, seq, s.engine, checksum(s.data, s.key, seq, s.engine), s.data),
+        )
+        # a snapshot can be made again from the facts; only the newest are worth their room
+        connection.execute(
+            "DELETE FROM snapshot WHERE key = ?1 AND seq NOT IN "
+            f"(SELECT seq FROM snapshot WHERE key = ?1 ORDER BY seq DESC LIMIT {SNAPSHOTS_KEPT})",
+            (s.key,),
+        )
+    for name in batch.inbox:
+        if connection.execute("SELECT 1 FROM inbox WHERE name = ?", (name,)).fetchone():
+            raise JournalError(f"spool/{name}: got an entry that was taken before, wanted a new one")
+        connection.execute("INSERT INTO inbox VALUES (?, ?)", (name, last))

@@ -155,17 +155,27 @@ class JournalReading:
                 "SELECT seq, engine, checksum, data FROM snapshot WHERE key = ? ORDER BY seq DESC", (key,)
             ).fetchall()
         for seq, made_by, check, data in rows:
-            if check == checksum(data, key, seq, made_by) and engine in (None, made_by):
+            sound = isinstance(data, bytes) and check == checksum(data, key, seq, made_by)
+            if sound and engine in (None, made_by):
                 return Snapshot(key, seq, made_by, data)
         return None
 
     def findings(
-        self, *, test: str | None = None, kinds: Collection[str] | None = None, after: int = 0
+        self,
+        *,
+        test: str | None = None,
+        kinds: Collection[str] | None = None,
+        after: int = 0,
+        on_damage: OnDamage | None = None,
     ) -> Iterator[tuple[int, Finding]]:
         """Yield (number, finding) in the order of commit, findings having numbers of their own.
 
+        Args:
+            test: ``FRAME`` or ``FRAME/POSITION``; None for all.
+            on_damage: Told about each damaged row, which is then left out.
+
         Raises:
-            JournalDamaged: a row is not what was written.
+            JournalDamaged: a row is not what was written, and ``on_damage`` is None.
         """
         where, given = ["seq > ?"], []
         if test is not None:
@@ -182,7 +192,14 @@ class JournalReading:
             with self._reading() as connection:
                 rows = connection.execute(sql, (after, *given)).fetchall()
             for seq, name, check, body in rows:
-                yield seq, _finding(f"{self._host} finding {seq}", name, check, body)
+                try:
+                    found = _finding(f"{self._host} finding {seq}", name, check, body)
+                except JournalDamaged as damage:
+                    if on_damage is None:
+                        raise
+                    on_damage(damage)
+                else:
+                    yield seq, found
             if len(rows) < PAGE:
                 return
             after = rows[-1][0]
@@ -250,13 +267,18 @@ def _decoded(rows: list[Any], place: str, on_damage: OnDamage | None) -> list[tu
 
 def tail_fact(row: tuple[int, str, str, bytes, bytes], place: str) -> Fact:
     """Return the fact of one row (seq, frame, kind, checksum, data) of the table ``tail``."""
+    check_tail(row, place)
+    try:
+        return decode_fact(row[4])
+    except RecordError as error:
+        raise JournalDamaged(f"{place} {row[0]}: {error}") from error
+
+
+def check_tail(row: tuple[int, str, str, bytes, bytes], place: str) -> None:
+    """Compare the checksum of one row of the table ``tail``."""
     seq, frame, kind, check, data = row
     if not isinstance(data, bytes) or check != checksum(data, seq, frame, kind):
         raise JournalDamaged(f"{place} {seq}: got other bytes than its checksum was made of")
-    try:
-        return decode_fact(data)
-    except RecordError as error:
-        raise JournalDamaged(f"{place} {seq}: {error}") from error
 
 
 def _finding(place: str, name: str, check: bytes, body: str) -> Finding:

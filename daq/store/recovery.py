@@ -20,7 +20,7 @@ from typing import Final
 
 from daq.store.errors import JournalDamaged, JournalError, explain
 from daq.store.lock import Mark
-from daq.store.reading import tail_fact
+from daq.store.reading import check_tail
 from daq.store.rows import checksum
 from daq.store.salvage import carry_over
 from daq.store.schema import (
@@ -34,7 +34,6 @@ from daq.store.schema import (
     migrate,
     prepare_writing,
     sync_folder,
-    tail_frames,
     transaction,
     version_of,
 )
@@ -42,8 +41,8 @@ from daq.store.segments import FOLDER
 
 FRESH_FILE: Final = "journal.sqlite.new"
 QUARANTINE: Final = "quarantine"
-NEWEST_ROWS: Final = 64
-"""Rows of each frame, and findings, whose checksums are compared at start."""
+NEWEST_FINDINGS: Final = 10_000
+"""Findings whose checksums are compared at start; rows of facts and open messages are all compared."""
 
 Hook = Callable[[str], None]
 
@@ -139,24 +138,19 @@ def _judge_rows(connection: sqlite3.Connection, mark: Mark | None) -> str | None
     (last,) = connection.execute("SELECT last_seq FROM head").fetchone()
     if mark is not None and mark.last_seq > last:
         return f"got facts up to {last}, wanted up to {mark.last_seq} (the write-ahead file is gone or cut)"
-    for frame in tail_frames(connection):
-        rows = connection.execute(
-            "SELECT seq, frame, kind, checksum, data FROM tail WHERE frame = ? ORDER BY seq DESC LIMIT ?",
-            (frame, NEWEST_ROWS),
-        )
-        for row in rows:
-            tail_fact(row, "tail row")
-            if row[0] > last:
-                return f"got a fact {row[0]} above the last one, {last}"
+    for row in connection.execute("SELECT seq, frame, kind, checksum, data FROM tail"):
+        check_tail(row, "tail row")
+        if row[0] > last:
+            return f"got a fact {row[0]} above the last one, {last}"
     for seq, name, check, body in connection.execute(
-        "SELECT seq, id, checksum, body FROM finding ORDER BY seq DESC LIMIT ?", (NEWEST_ROWS,)
+        "SELECT seq, id, checksum, body FROM finding ORDER BY seq DESC LIMIT ?", (NEWEST_FINDINGS,)
     ):
-        if check != checksum(body.encode(), name):
+        if not isinstance(body, str) or check != checksum(body.encode(), name):
             return f"finding {seq}: got other text than its checksum was made of"
     for seq, check, payload, *about in connection.execute(
         "SELECT seq, checksum, payload, id, topic, retain, expires_s FROM outbox WHERE acked = 0 ORDER BY seq"
     ):
-        if check != checksum(payload, *about):
+        if not isinstance(payload, bytes) or check != checksum(payload, *about):
             return f"outbox row {seq}: got other bytes than its checksum was made of"
     return None
 

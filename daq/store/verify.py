@@ -188,12 +188,12 @@ def _verify_rest(connection: sqlite3.Connection, host: Path) -> Iterator[Trouble
         "SELECT seq, checksum, payload, id, topic, retain, expires_s FROM outbox"
     )
     for seq, check, payload, *about in rows:
-        if check != checksum(payload, *about):
+        if not isinstance(payload, bytes) or check != checksum(payload, *about):
             yield Trouble(DAMAGE, f"{host} outbox row {seq}", "other bytes", "what was committed")
     for key, seq, engine, check, data in connection.execute(
         "SELECT key, seq, engine, checksum, data FROM snapshot"
     ):
-        if check != checksum(data, key, seq, engine):
+        if not isinstance(data, bytes) or check != checksum(data, key, seq, engine):
             yield Trouble(DAMAGE, f"{host} snapshot of {key} at {seq}", "other bytes", "what was committed")
 
 
