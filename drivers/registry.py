@@ -19,6 +19,8 @@ from drivers.base import Driver, SetupError
 GROUP: Final = "upturn.drivers"
 FAMILIES: Final[Mapping[str, str]] = {
     "modbus": "drivers.modbus:Modbus",
+    "numberfile": "drivers.numberfile:NumberFile",
+    "recording": "drivers.recording:Recording",
     "scpi": "drivers.scpi:Scpi",
     "textline": "drivers.textline:TextLine",
 }
