@@ -50,6 +50,8 @@ from simulator.scene import Scene
 CHUNK: Final = 4096
 MOST_WAITING: Final = 1 << 18
 """Bytes kept for a peer that does not read; what comes on top is lost, as on a serial line."""
+SEND_BUFFER: Final = 1 << 16
+"""Bytes the system may hold for a connection: little, as in an instrument."""
 TALK_EVERY_S: Final = 0.02
 """How often instruments that talk by themselves are asked for what they have to say."""
 
@@ -199,6 +201,7 @@ class Server:
                 connection, _address = listener.accept()
                 connection.setblocking(False)
                 connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+                connection.setsockopt(socket.SOL_SOCKET, socket.SO_SNDBUF, SEND_BUFFER)
                 link = _Link(connection.fileno(), Session(instrument), connection.close)
                 self._register(link, links)
 

@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.optimize import nnls
 
-from daq.core.limit import Noise, detectable_at, energy, level_for
+from daq.core.limit import Noise, _block_covariance, detectable_at, energy, level_for
 from daq.records import CoreError, FloatArray
 
 HOUR = 3600.0
@@ -69,6 +69,23 @@ def test_the_distance_agrees_with_least_squares_on_concave_hinges(
     _, distance = nnls(columns / size, whiten @ y, maxiter=20000)
     found = energy(t * HOUR, y, Noise(3e-5, drifts=drifts), np.array([630.0 * HOUR]))
     assert found[0] == pytest.approx(distance**2, rel=1e-5)
+
+
+@pytest.mark.parametrize("memory_s", [5.0, 300.0, 4e4, 1e9])
+def test_blocks_have_the_covariance_of_the_means_of_their_scans(memory_s: float) -> None:
+    """Averaged from the scan-by-scan covariance; for long memory it is the small differences that count."""
+    sizes, spacings = [1, 7, 30, 2, 1], [1.0, 10.0, 2.0, 60.0, 1.0]
+    starts = np.array([0.0, 50.0, 400.0, 500.0, 900.0])
+    scans = np.concatenate([t + d * np.arange(n) for t, d, n in zip(starts, spacings, sizes, strict=True)])
+    mean = np.repeat(np.arange(5), sizes)[None, :] == np.arange(5)[:, None]
+    average = mean / np.array(sizes)[:, None]
+    lost = -np.expm1(-np.abs(scans[:, None] - scans) / memory_s)  # 1 - correlation, without cancellation
+    last = starts + np.array(spacings) * (np.array(sizes) - 1.0)
+    found = _block_covariance(
+        starts, last, np.array(sizes, dtype=float), Noise(0.0, drifts=((1.0, memory_s),))
+    )
+    wanted = average @ lost @ average.T
+    assert np.allclose(1.0 - found, wanted, rtol=2e-3 if memory_s < 1e9 else 2e-2, atol=3e-10)
 
 
 def test_a_curve_that_never_rises_has_no_energy_however_it_is_sampled() -> None:

@@ -7,6 +7,7 @@ from collections import Counter
 import numpy as np
 import pytest
 
+from simulator.families import NEVER
 from simulator.population import draw, iso204_band_k, lab_settings, simulate
 from simulator.rig import Run
 from simulator.spec import rig_from_json, rig_to_json
@@ -52,6 +53,7 @@ def test_the_truth_is_in_order_and_within_the_record(runs: list[Run]) -> None:
     for run in runs:
         truth = run.truth
         assert truth.turns_tertiary <= truth.rises
+        assert not (truth.rises and truth.kind.split("/")[0] in (*NEVER, "stopped_before"))
         assert (truth.first_rise_h is not None) == truth.rises
         assert truth.rupture_h is None or (truth.turns_tertiary and truth.offset_0p2_h is not None)
         times = [truth.minimum_h, truth.rise_5_percent_h, truth.end_h]

@@ -109,17 +109,22 @@ def test_a_late_reply_comes_late_and_holds_up_nobody_else() -> None:
         assert time.monotonic() - began_s >= 0.3
 
 
-def test_a_babbling_line_that_nobody_reads_costs_bounded_memory() -> None:
-    """10 kB/s into a closed port for a while, then a client still gets answers from the neighbour."""
-    babbler = GAUGE | {"faults": [{"kind": "babble", "bytes_per_s": 1e6}]}
+def test_babble_that_nobody_reads_costs_bounded_memory_and_no_neighbour() -> None:
+    """A megabyte a second into a closed serial line and into a client that does not read."""
+    fault = {"faults": [{"kind": "babble", "bytes_per_s": 3e6}]}
     with (
-        Server(spec(babbler=babbler, scanner=SCANNER)) as server,
+        Server(spec(a=GAUGE | fault, b=GAUGE | fault | {"transport": "tcp"}, scanner=SCANNER)) as server,
+        socket.socket() as deaf,
         connect(server.ports["scanner"]) as connection,
     ):
-        until_s = time.monotonic() + 0.3
+        deaf.setsockopt(socket.SOL_SOCKET, socket.SO_RCVBUF, 4096)
+        deaf.connect(("127.0.0.1", int(server.ports["b"].rpartition(":")[2])))
+        until_s = time.monotonic() + 0.5
         while time.monotonic() < until_s:
             assert question(connection, "*OPC?") == "1"
-        assert sum(len(link.waiting) for link in server._links) < 1 << 18
+        waiting = {link.is_terminal: len(link.waiting) for link in server._links if link.waiting}
+    assert 0 < waiting[True] < 100_000
+    assert 100_000 < waiting[False] <= 1 << 18
 
 
 def test_hanging_up_closes_the_connection_and_the_next_one_works() -> None:
