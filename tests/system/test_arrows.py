@@ -25,6 +25,7 @@ EDGES: dict[str, set[str]] = {
     "daq.recording": {"daq.instants", "daq.records", "drivers"},
     "daq.settings": {"daq.core", "daq.records", "daq.yamlmarks", "daq.settings", "drivers", "daq.publish"},
     "daq.publish": {"daq.core", "daq.store", "daq.records", "daq.codec", "daq.publish", "daq.lines"},
+    "daq.broker": {"daq.records"},
     "daq.view": {"daq.view", "daq.store", "daq.records", "daq.lines"},
     "daq.replay": {
         "daq.engine",
