@@ -11,6 +11,7 @@ import heapq
 import json
 import sqlite3
 import threading
+from abc import ABC, abstractmethod
 from collections.abc import Callable, Collection, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -21,7 +22,7 @@ from typing import Any, Final
 from daq.codec import decode_fact, decode_finding
 from daq.records import Fact, Finding, RecordError
 from daq.store.chunks import unpack
-from daq.store.errors import JournalDamaged, JournalError, guarded
+from daq.store.errors import JournalDamaged, guarded
 from daq.store.rows import OutboxRow, Snapshot, checksum
 from daq.store.schema import HOST_FILE, tail_frames, transaction
 from daq.store.segments import FOLDER, SealedReader
@@ -40,7 +41,7 @@ class _Page:
     more: bool
 
 
-class JournalReading:
+class JournalReading(ABC):
     """Reading methods; whoever inherits says how to get at the host file (:meth:`_connection`)."""
 
     def __init__(self, folder: Path) -> None:
@@ -50,8 +51,9 @@ class JournalReading:
         # readers in other threads must not look into a transaction that is half done
         self._lock = threading.RLock()
 
+    @abstractmethod
     def _connection(self) -> sqlite3.Connection:
-        raise JournalError(f"{self.folder}: got a closed journal, wanted an open one")
+        """Return the connection to the host file."""
 
     @contextmanager
     def _reading(self) -> Iterator[sqlite3.Connection]:

@@ -100,6 +100,8 @@ def carry_over(folder: Path, into: sqlite3.Connection, mark: Mark | None) -> Car
         present: list[int] = []
         for frame in source.frames({p.frame for p in pieces}):
             rows, failed = source.rows(_TAIL, sealed_to.get(frame, 0) + 1, last, frame)
+            # rows above the last number that was told prove themselves by their checksums
+            rows += source.all(_TAIL, last + 1, UNKNOWN_JUMP << 20, frame)
             lost += failed
             for row in rows:
                 try:
@@ -115,6 +117,7 @@ def carry_over(folder: Path, into: sqlite3.Connection, mark: Mark | None) -> Car
         if present or tops or pieces:
             # numbers above the newest row that is left were given, or may have been
             newest = max([*present, *(p.last for p in pieces)], default=0)
+            last = max(last, newest)
             lost.append((newest + 1, last))
         _carry_rest(source, into, carried)
         carried.missing = _missing(folder, pieces, np.array(sorted(present), np.int64), lost)

@@ -31,7 +31,8 @@ def test_facts_come_back_in_the_order_of_their_commit(journal: Journal) -> None:
         scans("H1", 2),
     ]
     assert list(journal.commit(Batch(facts=tuple(facts[:2])))) == [1, 2]
-    assert journal.commit(Batch(facts=tuple(encoded(f) for f in facts[2:]))).seqs == range(3, 6)
+    done = journal.commit(Batch(facts=tuple(encoded(f) for f in facts[2:])))
+    assert (done.seqs, done.start, done.stop, done[0], len(done)) == (range(3, 6), 3, 6, 3, 3)
     wanted = as_bytes(list(enumerate(facts, 1)))
     assert as_bytes(list(journal.facts())) == wanted
     assert [s for s, _ in journal.facts(frame="H1")] == [1, 2, 4, 5]
