@@ -7,8 +7,9 @@ comes back, a spike. A step is taken out of what follows by an offset, never out
 and the ladder begins a new segment, whose level the estimator may fit anew: so the neutralisation can be undone.
 
 Thresholds are in units of the noise of single scans, measured on the scans themselves as the median of second
-differences (insensitive to creep, drift and steps), never below the resolution seen. Six standard deviations: one
-Gaussian scan in 5e8 is wrongly suspected, and wrong suspicion only costs a wait of four scans.
+differences (insensitive to creep, drift and steps), never below the resolution seen. Suspected beyond four standard
+deviations (one Gaussian scan in 16 000: a wrong suspicion only costs a wait of four scans), judged beyond six
+(one in 5e8).
 """
 
 from __future__ import annotations
@@ -19,14 +20,16 @@ import numpy as np
 
 from daq.records import FloatArray
 
-SUSPECT_SDS: Final = 6.0
+SUSPECT_SDS: Final = 4.0
+JUDGE_SDS: Final = 6.0
 CONFIRM: Final = 5
 """Scans needed from a suspected one on: a median of five outvotes two further spikes."""
 CONTEXT: Final = 24
 """Clean scans kept before the buffer."""
-TEAR: Final = 0.01
-"""A jump of all sides in the direction of creep by more than this strain is a specimen tearing, not a slip:
-an extensometer slips by far less before its travel or its alarm notices (common practice, no source)."""
+
+
+JERKS: Final = 3
+"""Jumps that look like creep and are then taken as creep: one is an accident, three are a habit of the material."""
 
 
 class Judged(NamedTuple):
@@ -55,7 +58,9 @@ def scan_noise(v: FloatArray) -> float:
     return max(1.4826 * float(np.median(second)) / np.sqrt(1.5), 0.3 * resolution)
 
 
-def judge(t_h: FloatArray, v: FloatArray, context: int, noise_before: float, final: bool) -> Judged:
+def judge(
+    t_h: FloatArray, v: FloatArray, context: int, noise_before: float, final: bool, jerky: bool = False
+) -> Judged:
     """Judge the rows from ``context`` on of one side.
 
     Args:
@@ -64,6 +69,7 @@ def judge(t_h: FloatArray, v: FloatArray, context: int, noise_before: float, fin
         context: How many leading rows are context, already judged.
         noise_before: Long-run noise of single scans; NaN in the beginning.
         final: No more rows will come: decide with what is there.
+        jerky: Creep has been seen to go in jumps: those in its direction are creep, not steps.
     """
     n = v.shape[0] - context
     spikes = np.zeros(n, dtype=bool)
@@ -72,12 +78,13 @@ def judge(t_h: FloatArray, v: FloatArray, context: int, noise_before: float, fin
     noise = float(np.nanmax([now, 0.7 * noise_before])) if np.isfinite(now) else noise_before
     if good.size < 6 or not np.isfinite(noise):
         return Judged(spikes, None, 0.0, None, now)
-    for _ in range(12):
+    cleared = context
+    for _ in range(16):
         tg, vg = t_h[good], v[good]
         slope = _slope(tg, vg)
-        dt = np.abs(np.diff(tg))
-        limit = SUSPECT_SDS * np.sqrt(2.0) * noise + 0.7 * abs(slope) * dt
-        odd = np.flatnonzero((np.abs(np.diff(vg) - slope * np.diff(tg)) > limit) & (good[1:] >= context))
+        dt = np.diff(tg)
+        limit = SUSPECT_SDS * np.sqrt(2.0) * noise + 0.7 * abs(slope) * np.abs(dt)
+        odd = np.flatnonzero((np.abs(np.diff(vg) - slope * dt) > limit) & (good[1:] >= cleared))
         if odd.size == 0:
             break
         j = int(odd[0]) + 1
@@ -90,14 +97,17 @@ def judge(t_h: FloatArray, v: FloatArray, context: int, noise_before: float, fin
         jump = level1 - level0
         room = 0.7 * abs(slope) * float(np.max(np.diff(tg[before.start : after.stop])))
         k0, k1 = before.stop - before.start, after.stop - after.start
-        if k1 >= CONFIRM and abs(jump) > SUSPECT_SDS * noise * np.sqrt(1.57 * (1 / k0 + 1 / k1)) + room:
-            if abs(vg[j] - level1) <= abs(vg[j] - level0):
-                return Judged(spikes, int(good[j]) - context, jump, None, now)
-        if abs(vg[j] - level0) > SUSPECT_SDS * noise:
+        sure = JUDGE_SDS * noise * np.sqrt(1.57 * (1 / k0 + 1 / k1)) + room
+        if k1 >= CONFIRM and abs(jump) > sure and abs(vg[j] - level1) <= abs(vg[j] - level0):
+            if jerky and jump > 0.0:
+                cleared = int(good[j]) + 1
+                continue
+            return Judged(spikes, int(good[j]) - context, jump, None, now)
+        if abs(vg[j] - level0) > JUDGE_SDS * noise + 0.7 * abs(slope) * float(dt[j - 1]):
             spikes[good[j] - context] = True
             good = np.delete(good, j)
         else:
-            break
+            cleared = int(good[j]) + 1
     return Judged(spikes, None, 0.0, None, now)
 
 
@@ -109,6 +119,13 @@ def _slope(t: FloatArray, v: FloatArray) -> float:
     if not ok.any():
         return 0.0
     return float(np.median((v[h:] - v[: v.size - h])[ok] / dt[ok]))
+
+
+def looks_like_creep(sizes: tuple[float, ...], both_there: bool) -> bool:
+    """Say whether every side there is jumped alike in the direction of creep."""
+    if both_there:
+        return len(sizes) == 2 and min(sizes) > 0.5 * max(sizes) > 0.0
+    return len(sizes) == 1 and sizes[0] > 0.0
 
 
 def cause_of(sides: tuple[str, ...], sizes: tuple[float, ...], both_there: bool) -> str:

@@ -21,8 +21,14 @@ from daq.records import FloatArray
 Z90: Final = 1.645
 RISE_5: Final = 1.05
 OFFSET_0P2: Final = 0.002
-WITHIN: Final = 1.2
-"""The least rate is fitted where the rate is below this many times it."""
+STRETCHES: Final = (1.06, 1.12, 1.25, 1.5)
+PRIOR_DOF: Final = 12.0
+"""How much the level of noise found on the whole record counts against that of the stretch fitted."""
+BENT: Final = 0.03
+"""Bias of a polynomial of fitting degree, as a share of the bend within its stretch: seen on the theta, damage and
+omega curves of the constructed checks, where it is 1 to 4 %."""
+BENT_LINE: Final = 0.3
+"""The same for a straight line, where there are too few blocks for more: a third of a parabola's height."""
 
 
 class Fit(NamedTuple):
@@ -127,7 +133,10 @@ def polynomial(
         cov = np.linalg.inv(a + np.diag(np.diag(a) * 1e-13))
         beta = cov @ (x.T @ (inv @ (y - base)))
         rest = y - base - x @ beta
-        score += weight * float(rest @ inv @ rest)
+        misfit = float(rest @ inv @ rest)
+        score += weight * misfit
+        scale = (misfit + PRIOR_DOF) / (max(y.size - x.shape[1], 0) + PRIOR_DOF)
+        cov = cov * scale
         coefs.append(np.concatenate(([beta[0] + base], beta[1:n_poly])))
         covs.append(cov[:n_poly, :n_poly])
     p, n = x.shape[1], r.shape[0]
@@ -149,39 +158,61 @@ def best_polynomial(
 
 
 def minimum(
-    rungs: FloatArray, models: FloatArray, guess_h: float, low_h: float, high_h: float, column: int = ladder.T
-) -> tuple[Minimum, Fit] | None:
-    """Fit the least rate near ``guess_h``, using rungs in [low_h, high_h] where the rate is near its least."""
-    fit = best_polynomial(rungs, models, low_h, high_h, (3, 4, 5, 6), column)
-    if fit is None:
-        fit = polynomial(rungs, models, low_h, high_h, 1, column)
-    if fit is None:
-        return None
-    for _ in range(2):
-        grid = np.linspace(fit.low_h, fit.high_h, 401)
-        rates = fit.rate(grid)
-        at = int(np.argmin(rates))
-        near = rates <= WITHIN * rates[at] if rates[at] > 0 else np.ones(401, dtype=bool)
-        left = at - int(np.argmin(near[at::-1])) if not near[: at + 1].all() else 0
-        right = at + int(np.argmin(near[at:])) if not near[at:].all() else 400
-        closer = best_polynomial(rungs, models, grid[left], grid[right], (1, 3, 4, 5), column)
-        if closer is None or right - left > 380:
-            break
-        fit = closer
-    grid = np.linspace(fit.low_h, fit.high_h, 801)
-    rates = fit.rate(grid)
+    rungs: FloatArray, models: FloatArray, t_h: FloatArray, rates: FloatArray, column: int = ladder.T
+) -> Minimum | None:
+    """Fit the least rate.
+
+    Args:
+        t_h, rates: The falling-then-rising curve of ``core.shape`` (n,), which says where to look.
+        column: Time of the fit; ``t_h`` is in the same time.
+
+    Of stretches in which the rate is within 6, 12, 25 and 50 % of its least, the one with the least sum of
+    variance and squared bias is taken, the bias being put at ``BENT`` of the bend allowed.
+    """
+    rough = float(np.min(rates))
     at = int(np.argmin(rates))
-    sd = fit.rate_sd(float(grid[at]))
-    # where the rate cannot be told from the least one: the interval of the time
-    close = rates <= rates[at] + Z90 * sd * 0.5
-    lo = at - int(np.argmin(close[at::-1])) if not close[: at + 1].all() else 0
-    hi = at + int(np.argmin(close[at:])) if not close[at:].all() else 800
-    rate, when = float(rates[at]), float(grid[at])
-    return (
-        Minimum(rate, rate - Z90 * sd, rate + Z90 * sd, when, float(grid[lo]), float(grid[hi]), fit.low_h, fit.high_h,
-                float(fit.strain(np.array([when]))[0])),
-        fit,
-    )  # fmt: skip
+    if rough <= 0.0:
+        rough = max(float(np.median(np.abs(rates))) * 0.02, 1e-300)
+    best: tuple[float, Minimum] | None = None
+    for within in STRETCHES:
+        low, high = _around(t_h, rates, at, within * rough, rungs, column)
+        fit, bent = best_polynomial(rungs, models, low, high, (3, 4, 5), column), BENT
+        if fit is None:
+            fit, bent = polynomial(rungs, models, low, high, 1, column), BENT_LINE
+        if fit is None:
+            continue
+        inner_low, inner_high = _around(t_h, rates, at, (1.0 + 0.6 * (within - 1.0)) * rough, rungs, column)
+        grid = np.linspace(max(fit.low_h, inner_low), min(fit.high_h, inner_high), 401)
+        fitted = fit.rate(grid)
+        k = int(np.argmin(fitted))
+        sd = float(np.hypot(fit.rate_sd(float(grid[k])), bent * (within - 1.0) * rough))
+        if best is not None and sd >= best[0]:
+            continue
+        # where the rate cannot be told from the least one: the interval of the time
+        close = fitted <= fitted[k] + 0.5 * Z90 * sd
+        lo = k - int(np.argmin(close[k::-1])) if not close[: k + 1].all() else 0
+        hi = k + int(np.argmin(close[k:])) if not close[k:].all() else 400
+        rate, when = float(fitted[k]), float(grid[k])
+        best = (
+            sd,
+            Minimum(
+                rate, rate - Z90 * sd, rate + Z90 * sd, when, float(grid[lo]), float(grid[hi]),
+                fit.low_h, fit.high_h, float(fit.strain(np.array([when]))[0]),
+            ),
+        )  # fmt: skip
+    return None if best is None else best[1]
+
+
+def _around(
+    t_h: FloatArray, rates: FloatArray, at: int, goal: float, rungs: FloatArray, column: int
+) -> tuple[float, float]:
+    """Return the stretch around point ``at`` in which the curve's rate is below ``goal``."""
+    near = rates <= goal
+    lo = at - int(np.argmin(near[at::-1])) if not near[: at + 1].all() else -1
+    hi = at + int(np.argmin(near[at:])) if not near[at:].all() else rates.size
+    low = float(rungs[0, column]) if lo < 0 else float(t_h[lo])
+    high = float(rungs[-1, column]) if hi >= rates.size else float(t_h[hi])
+    return low, high
 
 
 def rate_now(rungs: FloatArray, models: FloatArray, share: float = 0.1) -> tuple[float, float, float]:

@@ -17,6 +17,7 @@ A step that nobody saw is a third explanation: evidence is counted only as far a
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -28,11 +29,14 @@ FLOOR: Final = 0.2e-6
 """Systematic error of a block mean [strain] that no extensometer can be trusted beyond: 5 nm on 25 mm."""
 SINCE: Final = (0.03, 0.05, 0.08, 0.12, 0.17, 0.23, 0.3, 0.4, 0.5, 0.62, 0.75, 0.88)
 """Onsets tried, as shares of the elapsed time before now."""
+KEEP: Final = 6.0
+"""Noise models and onsets whose likelihood lies this far [log] below the best count for nothing: 1 in 400."""
 QUIET: Final = 1.0
 """Evidence under the best noise model below which the others are not asked."""
 MODELS: Final = 8
 """Noise models that are kept for the second family."""
 EXPONENTIALS: Final = (0.01, 0.02, 0.04, 0.08, 0.16, 0.32, 0.64, 1.28)
+RAMPS: Final = (0.03, 0.06, 0.12, 0.2, 0.3, 0.42, 0.55, 0.7, 0.85, 1.0)
 
 
 THIN: Final = (0.06, 0.005, 0.1)
@@ -83,6 +87,7 @@ class Evidence(NamedTuple):
     noise: FloatArray
     x: FloatArray
     rates: FloatArray
+    model: tuple[float, float]
 
 
 def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error: float) -> Design:
@@ -137,13 +142,14 @@ def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error:
         (
             -np.maximum(x[:, None] - knots[None, :], 0.0) / (1.0 - knots)[None, :],
             1.0 - np.exp(-x[:, None] / np.array(EXPONENTIALS)[None, :]),
+            _ramps(x),
         ),
         axis=1,
     )
     since = np.array([s for s in SINCE if np.count_nonzero(x > 1.0 - s) >= 4])
     departures = np.maximum(x[:, None] - (1.0 - since)[None, :], 0.0) ** 2 / (since**2)[None, :]
     at = 0.5 * (x[1:] + x[:-1])
-    at = at[3:-3:3]
+    at = at[1:-1]
     steps = (x[:, None] > at[None, :]).astype(np.float64)
     return Design(
         x,
@@ -160,6 +166,14 @@ def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error:
         now,
         knots,
     )
+
+
+def _ramps(x: FloatArray) -> FloatArray:
+    """Return strains whose rates fall linearly to zero at each of ``RAMPS``: smooth where hinges are not."""
+    end = np.array(RAMPS)[None, :]
+    t = np.minimum(x[:, None], end)
+    ramps: FloatArray = (2.0 * end * t - t * t) / end**2
+    return ramps
 
 
 def _knots(x: FloatArray) -> FloatArray:
@@ -224,129 +238,167 @@ def _solve(h: FloatArray, b: FloatArray, idx: FloatArray) -> FloatArray:
     return np.linalg.solve(g, b[idx])
 
 
-def weigh(d: Design, keep: float = 6.0) -> Evidence:
+class _Cell(NamedTuple):
+    """One noise model: reduced normal equations after the free columns, and the fit of the falling family."""
+
+    memory: float
+    ratio: float
+    weights: FloatArray
+    columns: FloatArray
+    vectors: FloatArray
+    gram: FloatArray
+    rest: FloatArray
+    const: float
+    z: FloatArray
+    passive: FloatArray
+    rss: float
+    log_like: float
+
+
+def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
     """Compare the families of curves; see the head of this file.
 
-    ``keep``: noise models whose likelihood lies this far [log] below the best in both families are left out.
+    ``start``: memory share and ratio of the noise model that fitted best at the look before; the
+    grid is explored from there and from white noise as far as models matter.
     """
-    f, c, k, s = d.free.shape[1], d.concave.shape[1], d.departures.shape[1], d.steps.shape[1]
-    columns = np.concatenate((d.free, d.concave, d.departures, d.steps, d.y[:, None]), axis=1)
-    n = d.x.shape[0]
-    dof = n - f
-    floor = 1e-6 * n
-    rests, consts, tags = [], [], []
-    whole = []
-    for white in noise.whiten(d.x, d.variance, columns):
-        gram = (white.columns.T[None, :, :] * white.weights[:, None, :]) @ white.columns
-        ff = gram[:, :f, :f] + np.diag(d.precision + 1e-12)
-        rests.append(gram[:, f:, f:] - gram[:, f:, :f] @ np.linalg.solve(ff, gram[:, :f, f:]))
-        whole.append(gram)
-        tags += [(white.memory, r) for r in white.ratios]
-        consts.append(white.prior - 0.5 * white.logdet - 0.5 * np.linalg.slogdet(ff)[1])
-    rest = np.concatenate(rests)
-    const = np.concatenate(consts)
-    grams = np.concatenate(whole)
+    f, c, k, steps = d.free.shape[1], d.concave.shape[1], d.departures.shape[1], d.steps.shape[1]
+    columns = np.concatenate((d.free, d.concave, d.departures, d.y[:, None]), axis=1)
+    dof = d.x.shape[0] - f
+    floor = 1e-6 * d.x.shape[0]
+    penalty = np.diag(d.precision + 1e-12)
 
-    def like(i: int, rss: FloatArray | float) -> FloatArray:
-        return np.asarray(const[i] - 0.5 * dof * np.log(np.maximum(rss, 0.0) + floor))
+    def like(const: float, rss: FloatArray | float) -> FloatArray:
+        return np.asarray(const - 0.5 * dof * np.log(np.maximum(rss, 0.0) + floor))
 
-    null = []
+    grid = noise.Grid(d.x, d.variance, columns)
+    cells: dict[tuple[int, int], _Cell] = {}
+    todo = [(0, 0), grid.nearest(start)]
+    best = -np.inf
     warm: FloatArray | None = None
-    l0 = np.empty(len(const))
-    for i, g in enumerate(rest):
-        z, warm = nnls(g[:c, :c], g[:c, -1], warm)
-        rss = float(g[-1, -1] - g[:c, -1] @ z)
-        null.append((z, warm, rss))
-        l0[i] = like(i, rss)
-    total0 = noise.log_mean(l0)
+    while todo:
+        at = todo.pop()
+        if at in cells:
+            continue
+        memory, ratio, prior, vectors, z_columns, weights, logdet = grid.model(*at)
+        gram = z_columns.T @ (weights[:, None] * z_columns)
+        ff = gram[:f, :f] + penalty
+        rest = gram[f:, f:] - gram[f:, :f] @ np.linalg.solve(ff, gram[:f, f:])
+        const = float(prior - 0.5 * logdet - 0.5 * np.linalg.slogdet(ff)[1])
+        z, passive = nnls(rest[:c, :c], rest[:c, -1], warm)
+        warm = passive
+        rss = float(rest[-1, -1] - rest[:c, -1] @ z)
+        # how large a drift this model means, against what extensometers show
+        drift = np.sqrt(max(rss, floor) / dof * ratio * grid.typical)
+        const += noise.log_prior(drift, ratio)
+        log_like = float(like(const, rss))
+        cells[at] = _Cell(
+            memory, ratio, weights, z_columns, vectors, gram, rest, const, z, passive, rss, log_like
+        )
+        best = max(best, log_like)
+        if log_like > best - KEEP - 2.0:
+            todo += grid.neighbours(*at)
+    order = sorted(cells, key=lambda at: (-cells[at].log_like, at))
+    total0 = noise.log_mean(np.array([cells[at].log_like for at in order]))
     # departures: hinges only before the onset, so that a hump is not taken for a rise
-    l1 = np.full((len(const), k), -np.inf)
-    rss1 = np.full((len(const), k), np.nan)
-    keepers = np.argsort(-l0, kind="stable")[:MODELS]
-    keepers = keepers[l0[keepers] > np.max(l0) - keep]
+    smooth = np.arange(d.knots.size, c)
     sels = [
-        np.concatenate((np.flatnonzero(d.knots < 1.0 - d.since[j]), np.arange(len(d.knots), c), [c + j]))
-        for j in range(k)
+        np.concatenate((np.flatnonzero(d.knots < 1.0 - s), smooth, [c + j])) for j, s in enumerate(d.since)
     ]
-    for i in keepers:
-        if i != keepers[0] and noise.log_mean(l1[keepers[0]]) - np.log(k) - l0[keepers[0]] < QUIET:
+    kept = [at for at in order[:MODELS] if cells[at].log_like > best - KEEP]
+    l1 = np.full((len(kept), k), -np.inf)
+    rss1 = np.full((len(kept), k), np.nan)
+    for i, at in enumerate(kept):
+        cell = cells[at]
+        if i and noise.log_mean(l1[0]) - np.log(k) - cells[kept[0]].log_like < QUIET:
             break
-        g = rest[i]
-        z, passive, rss = null[i]
-        for j in range(k):
-            if i != keepers[0] and l1[keepers[0], j] < np.max(l1[keepers[0]]) - keep:
+        g = cell.rest
+        for j, sel in enumerate(sels):
+            if i and l1[0, j] < np.max(l1[0]) - KEEP:
                 continue  # an onset far from the best one under the best model
-            sel = sels[j]
-            z1, _ = nnls(g[np.ix_(sel, sel)], g[sel, -1], np.concatenate((passive[sel[:-1]], [True])))
+            z1, _ = nnls(g[sel[:, None], sel], g[sel, -1], np.append(cell.passive[sel[:-1]], True))
             rss1[i, j] = float(g[-1, -1] - g[sel, -1] @ z1)
-            l1[i, j] = like(i, rss1[i, j])
-    ls = np.full((len(const), s), -np.inf)
-    for i in keepers:
-        g = rest[i]
-        z, passive, rss = null[i]
-        idx = np.flatnonzero(passive)
-        extra = np.arange(c + k, c + k + s)
-        a = g[np.ix_(idx, idx)]
-        a = a + np.diag(np.diag(a) * 1e-11)
-        t = np.linalg.solve(a, g[np.ix_(idx, extra)])
-        grad = g[extra, -1] - g[np.ix_(extra, idx)] @ z[idx]
-        own = np.diag(g)[extra]
-        size = own - np.sum(g[np.ix_(idx, extra)] * t, axis=0)
-        ls[i] = like(i, rss - grad**2 / np.maximum(size, 1e-6 * own))
+            l1[i, j] = like(cell.const, rss1[i, j])
     per_onset = np.array([noise.log_mean(l1[:, j]) for j in range(k)])
-    total1 = noise.log_mean(per_onset) - np.log(k)
-    per_step = np.array([noise.log_mean(ls[:, j]) for j in range(s)]) if s else np.array([-np.inf])
-    total_s = float(np.max(per_step)) - np.log(max(s, 1))
-    against = total1 - total0
-    asked = np.isfinite(l1).any(axis=1)
-    if np.count_nonzero(asked) == 1:
-        best = int(np.flatnonzero(asked)[0])
-        against = noise.log_mean(l1[best]) - np.log(k) - float(l0[best])
+    if np.isfinite(l1).any(axis=1).sum() == 1:
+        against = float(noise.log_mean(l1[0]) - np.log(k) - cells[kept[0]].log_like)
+    else:
+        against = float(noise.log_mean(per_onset) - np.log(k) - total0)
+    step = _step_gain(d, [cells[at] for at in kept[:3]], like) if against > QUIET and steps > 1 else 0.0
     j = int(np.argmax(per_onset))
     i = int(np.argmax(l1[:, j]))
-    g, sel = rest[i], sels[j]
-    z1, _ = nnls(g[np.ix_(sel, sel)], g[sel, -1], None)
+    cell, sel = cells[kept[i]], sels[j]
+    g = cell.rest
+    z1, _ = nnls(g[sel[:, None], sel], g[sel, -1])
     # without a fall before the onset
     one = max(float(g[c + j, -1]), 0.0) ** 2 / float(g[c + j, c + j])
-    fall_gain = float(l1[i, j] - like(i, float(g[-1, -1]) - one))
+    fall_gain = float(l1[i, j] - like(cell.const, float(g[-1, -1]) - one))
     z = np.zeros(c + k)
     z[sel] = z1
-    full = grams[i]
-    beta = np.linalg.solve(
-        full[:f, :f] + np.diag(d.precision + 1e-12), full[:f, -1] - full[:f, f : f + c + k] @ z
-    )
+    beta = np.linalg.solve(cell.gram[:f, :f] + penalty, cell.gram[:f, -1] - cell.gram[:f, f : f + c + k] @ z)
     mid = 0.5 * (d.x[1:] + d.x[:-1])
-    rates = beta[1] + _slopes(d, mid) @ z
+    rates = beta[1] + slopes(d, mid) @ z
     onset = 1.0 - float(d.since[j])
     least = int(np.argmin(np.where(mid > 0.02, rates, np.inf)))
     low = float(rates[least])
     shape = d.concave @ z[:c] + d.departures @ z[c:] + beta[1] * d.x
     tangent = float(np.interp(mid[least], d.x, shape)) + low * (1.0 - mid[least])
     safe = max(low, 1e-3 * float(np.max(np.abs(rates))), 1e-300)
-    weight = np.exp(l1[:, j] - l1[i, j]) + 1e-12 * np.exp(l0 - np.max(l0))
-    order = np.argsort(-weight, kind="stable")[:4]
     typical = float(np.median(d.variance))
     models = []
-    for o in order:
-        scale = null[o][2] / dof if not np.isfinite(l1[o, j]) else rss1[o, j] / dof
-        scale = max(scale, 1e-6) * 1e-12
-        models.append((tags[o][0] * d.now, scale * tags[o][1] * typical, scale, float(weight[o])))
+    for m, at in enumerate(kept[:4]):
+        rss = rss1[m, j] if np.isfinite(rss1[m, j]) else cells[at].rss
+        scale = max(rss / dof, 1e-6) * 1e-12
+        weight = float(np.exp(np.clip(cells[at].log_like - best, -30.0, 0.0)))
+        if np.isfinite(l1[m, j]):
+            weight = float(np.exp(np.clip(l1[m, j] - np.max(l1[:, j]), -30.0, 0.0)))
+        models.append((cells[at].memory * d.now, scale * cells[at].ratio * typical, scale, weight))
     table = np.array(models)
     table[:, 3] /= np.sum(table[:, 3])
+    first = cells[order[0]]
     return Evidence(
-        against - max(0.0, total_s - total0), against, 1.0 - onset, fall_gain,
+        against - max(0.0, step), against, 1.0 - onset, fall_gain,
         float(np.mean(rates[mid < max(0.1 * onset, mid[2])])) / safe, float(rates[-1]) / safe,
         float(shape[-1] - tangent) * 1e-6, float(mid[least]), table, mid, rates * (1e-6 / d.now),
+        (first.memory, first.ratio),
     )  # fmt: skip
 
 
-def _slopes(d: Design, x: FloatArray) -> FloatArray:
+def _step_gain(d: Design, cells: list[_Cell], like: Callable[[float, FloatArray], FloatArray]) -> float:
+    """Return how much better [log] a falling rate fits with one step at the best place, place averaged over."""
+    f, c = d.free.shape[1], d.concave.shape[1]
+    per_cell = []
+    for cell in cells:
+        idx = np.concatenate((np.arange(f), f + np.flatnonzero(cell.passive)))
+        a = cell.gram[idx[:, None], idx].copy()
+        a.flat[:: idx.size + 1] *= 1.0 + 1e-10
+        a[np.arange(f), np.arange(f)] += d.precision + 1e-12
+        turned = cell.vectors.T @ (d.steps / np.sqrt(d.variance)[:, None])
+        weighted = cell.weights[:, None] * turned
+        cross = cell.columns[:, idx].T @ weighted
+        own = np.sum(turned * weighted, axis=0)
+        t = np.linalg.solve(a, np.concatenate((cross, cell.gram[idx, -1][:, None]), axis=1))
+        grad = weighted.T @ cell.columns[:, -1] - cross.T @ t[:, -1]
+        size = own - np.sum(cross * t[:, :-1], axis=0)
+        beside = np.sum(turned[:, :-1] * weighted[:, 1:], axis=0) - np.sum(cross[:, :-1] * t[:, 1:-1], axis=0)
+        # a step inside a block leaves its mean anywhere between: two steps, before and after it
+        det = size[:-1] * size[1:] - beside**2
+        both = grad[:-1] ** 2 * size[1:] + grad[1:] ** 2 * size[:-1] - 2.0 * grad[:-1] * grad[1:] * beside
+        drop = both / np.maximum(det, 1e-9 * size[:-1] * size[1:] + 1e-300)
+        per_cell.append(like(cell.const, cell.rss - drop))
+    table = np.array(per_cell)
+    total0 = noise.log_mean(np.array([cell.log_like for cell in cells]))
+    best = max(noise.log_mean(table[:, j]) for j in range(table.shape[1]))
+    return float(best - np.log(table.shape[1]) - total0)
+
+
+def slopes(d: Design, x: FloatArray) -> FloatArray:
     """Return the derivatives of concave columns and departures at ``x``."""
     tau = np.array(EXPONENTIALS)
     return np.concatenate(
         (
             np.where(x[:, None] > d.knots[None, :], -1.0, 0.0) / (1.0 - d.knots)[None, :],
             np.exp(-x[:, None] / tau[None, :]) / tau[None, :],
+            2.0 * np.maximum(np.array(RAMPS)[None, :] - x[:, None], 0.0) / np.array(RAMPS)[None, :] ** 2,
             2.0 * np.maximum(x[:, None] - (1.0 - d.since)[None, :], 0.0) / (d.since**2)[None, :],
         ),
         axis=1,

@@ -15,7 +15,7 @@ from typing import Any, Final
 import numpy as np
 
 from daq.codec import state
-from daq.core import clean, estimate, evidence, intake, ladder, verdict
+from daq.core import clean, estimate, evidence, intake, ladder, shape, verdict
 from daq.core.block import Block, Conclusion
 from daq.core.estimate import Minimum
 from daq.core.intake import IntakeState
@@ -23,10 +23,10 @@ from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, Loading, TestR
 from daq.core.stages import Cue, Stage, following
 from daq.records import FloatArray
 
-LOOK_WIDE: Final = 0.03
-"""Spacing of looks as a share of elapsed time while nothing rises; costs at most half of it in delay."""
-LOOK_CLOSE: Final = 0.01
-"""And while evidence grows."""
+LOOKS: Final = ((4.0, 0.008), (1.0, 0.02), (-np.inf, 0.05))
+"""Spacing of looks as a share of elapsed time, by the evidence there is at least. Evidence grows with the
+fourth to seventh power of the time since onset, so from 1 to a verdict that time grows by half: looks are never so far
+apart that much is lost."""
 LOOK_LATE: Final = 0.05
 """And in tertiary, where only the onsets still to come and a withdrawal are looked for."""
 LEAST_RUNGS: Final = 24
@@ -34,10 +34,15 @@ LEAST_RUNGS: Final = 24
 STEADY_CHANGE: Final = 0.25
 """Secondary: the rate changed by less than this over the last half of the elapsed time, with 95 % confidence on
 each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is steady."""
+FIT_THIN: Final = (0.04, 0.004, 0.05)
+"""How far blocks are merged for fits (``ladder.thinned``)."""
 Q_ERROR: Final = 0.25
 """Relative s.d. of a handbook activation energy (common practice, no source)."""
 Q_UNKNOWN: Final = 350e3
 """J/mol: the middle of what metals show (CHECKVALUES 7.2), the s.d. where none is given."""
+
+
+JERKY: Final = "jerky creep: this jump and those before it are put back, later ones are left in"
 
 
 def _no_models() -> FloatArray:
@@ -60,6 +65,7 @@ class FollowState:
     log_ratio: float = 0.0
     falling_looks: int = 0
     rise_ratio: float = 1.0
+    model: tuple[float, float] = (0.1, 1.0)
     minimum: Minimum | None = None
     corrected_per_h: float | None = None
     rise_5_h: float | None = None
@@ -107,13 +113,16 @@ def _work(
             break
         s = replace(s, intake=fed, now_h=leaf.now_h)
         if leaf.step is not None:
-            out.append(_step(leaf, rules))
+            out.append(_step(leaf, rules, len(s.intake.jerks) >= clean.JERKS))
         if leaf.rung is not None:
             rungs = np.concatenate((s.rungs, leaf.rung))
             leaves = s.leaves + 1
             if leaves % ladder.SWEEP_EVERY == 0:
                 rungs = ladder.sweep(rungs, leaf.now_h)
             s = replace(s, rungs=rungs, leaves=leaves)
+        if len(s.intake.jerks) >= clean.JERKS:
+            fed, rungs = intake.give_back(s.intake, s.rungs)
+            s = replace(s, intake=fed, rungs=rungs)
         if leaf.now_h >= s.next_look_h and s.rungs.shape[0] >= LEAST_RUNGS:
             s = _look(s, rules, leaf.scan, leaf.tick, out)
     s = replace(s, intake=replace(s.intake, rows=rows[at:].copy()))
@@ -180,30 +189,36 @@ def _weigh(s: FollowState, rules: TestRules, r: FloatArray) -> evidence.Evidence
         kelvin = float(temp[-1]) + ZERO_C_IN_K
         q_error = (Q_ERROR * q if q is not None else Q_UNKNOWN) / (GAS_CONSTANT_J_PER_MOL_K * kelvin**2)
     has_room = bool(np.isfinite(r[:, ladder.ROOM0]).all())
-    return evidence.weigh(evidence.design(r, has_temperature=has_temp, has_room=has_room, q_error=q_error))
+    d = evidence.design(r, has_temperature=has_temp, has_room=has_room, q_error=q_error)
+    return evidence.weigh(d, s.model)
 
 
 def _rising(r: FloatArray) -> bool:
-    """Cheap screen: can the rate of any late stretch be above that of the one before it, white noise allowed?"""
+    """Cheap screen: is the rate of any late stretch above that of the one before it by more than white noise
+    alone would do? Drift only adds to that noise, and evidence enough for a verdict needs four of these
+    standard errors: nothing is lost below two."""
+    white = ladder.white_sd(r)
+    if not np.isfinite(white):
+        return True
     now = float(r[-1, ladder.T])
     t = r[:, ladder.T]
-    for share in (0.06, 0.12, 0.22, 0.35):
+    for share in (0.05, 0.1, 0.2, 0.35):
         late = r[t > now * (1.0 - share)]
         early = r[(t <= now * (1.0 - share)) & (t > now * (1.0 - 2.0 * share))]
-        if late.shape[0] >= 4 and early.shape[0] >= 4:
-            b1, b0 = _slope(late), _slope(early)
-            if b1 > b0:
+        if late.shape[0] >= 3 and early.shape[0] >= 3:
+            (b1, s1), (b0, s0) = _slope(late), _slope(early)
+            if b1 - b0 > 2.0 * white * np.sqrt(1.0 / s1 + 1.0 / s0):
                 return True
     return False
 
 
-def _slope(r: FloatArray) -> float:
+def _slope(r: FloatArray) -> tuple[float, float]:
+    """Return the slope of all scans in ``r`` and the sum of squares of their times."""
     w, x, y = r[:, ladder.N], r[:, ladder.T], r[:, ladder.E]
     n = float(np.sum(w))
     dx, dy = x - float(np.sum(w * x)) / n, y - float(np.sum(w * y)) / n
-    return float(
-        (np.sum(w * dx * dy) + np.sum(r[:, ladder.S_TE])) / (np.sum(w * dx * dx) + np.sum(r[:, ladder.S_TT]))
-    )
+    sxx = float(np.sum(w * dx * dx) + np.sum(r[:, ladder.S_TT]))
+    return float(np.sum(w * dx * dy) + np.sum(r[:, ladder.S_TE])) / sxx, sxx
 
 
 def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
@@ -211,14 +226,12 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
     if s.stage is Stage.TERTIARY:
         return _look_late(s, rules, scan, tick, out)
     r = _windowed(s)
-    spacing = LOOK_WIDE
+    s = replace(s, log_ratio=min(s.log_ratio, 0.0))
     if r.shape[0] >= LEAST_RUNGS and (_rising(r) or s.models.shape[0] == 0):
         e = _weigh(s, rules, r)
         threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
-        s = replace(s, models=e.noise, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
+        s = replace(s, models=e.noise, model=e.model, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
         cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h)
-        if e.log_ratio > 0.3 * threshold:
-            spacing = LOOK_CLOSE
         if cue is Cue.RATE_ROSE:
             return _turn(s, rules, e, scan, tick, out)
         if cue is Cue.RATE_ROSE_EARLY:
@@ -227,12 +240,11 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
                 f"if it goes on, tertiary without primary (evidence {e.log_ratio:.1f})"
             )
             s = _move(s, cue, scan, tick, now * (1.0 - e.since), None, why, out)
-    else:
-        s = replace(s, log_ratio=min(s.log_ratio, 0.0))
     if s.stage is Stage.INVERSE_PRIMARY:
         s = _after_inverse(s, scan, tick, out)
     if s.stage in (Stage.PRIMARY, Stage.INVERSE_PRIMARY) and s.models.shape[0]:
         s = _steady(s, scan, tick, out)
+    spacing = next(share for least, share in LOOKS if s.log_ratio >= least)
     return replace(s, next_look_h=now * (1.0 + spacing))
 
 
@@ -276,39 +288,20 @@ def _steady(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> Foll
 def _fit_least(s: FollowState, rules: TestRules) -> tuple[Minimum, float | None] | None:
     """Fit the least rate as measured, and in equivalent time where there is one."""
     r = s.rungs[s.rungs[:, ladder.START] >= s.window_h]
-    if r.shape[0] < 8 or s.models.shape[0] == 0:
+    if r.shape[0] < 12 or s.models.shape[0] == 0:
         return None
-    t, rate, _ = estimate.coarse_rates(r, 0.08)
-    if t.size < 4:
+    t, rates = shape.unimodal(r, s.models)
+    r = ladder.thinned(r, *FIT_THIN)
+    m = estimate.minimum(r, s.models, t, rates)
+    if m is None:
         return None
-    inner = np.arange(t.size) >= 1
-    top = int(np.argmin(np.where(inner, rate, np.inf)))
-    low, high = _stretch(t, rate, top, r)
-    found = estimate.minimum(r, s.models, float(t[top]), low, high)
-    if found is None:
-        return None
-    m, _ = found
     corrected = None
     if rules.activation_energy_j_per_mol is not None and np.isfinite(s.intake.reference_c):
-        u = np.interp([m.from_h, m.to_h], r[:, ladder.T], r[:, ladder.U])
-        again = estimate.minimum(r, s.models, m.time_h, float(u[0]), float(u[1]), ladder.U)
-        if again is not None:
-            corrected = again[0].rate
+        u = np.interp(t, r[:, ladder.T], r[:, ladder.U])
+        speed = np.gradient(u, t)
+        again = estimate.minimum(r, s.models, u, rates / np.maximum(speed, 1e-3), ladder.U)
+        corrected = None if again is None else again.rate
     return m, corrected
-
-
-def _stretch(t: FloatArray, rate: FloatArray, at: int, r: FloatArray) -> tuple[float, float]:
-    """Return the stretch around ``at`` in which coarse rates are below some 1.3 times the least."""
-    goal = 1.35 * rate[at] if rate[at] > 0 else np.inf
-    lo = at
-    while lo > 0 and rate[lo - 1] < goal:
-        lo -= 1
-    hi = at
-    while hi < t.size - 1 and rate[hi + 1] < goal:
-        hi += 1
-    first = float(r[0, ladder.T]) if lo == 0 else float(t[lo - 1])
-    last = float(r[-1, ladder.T]) if hi == t.size - 1 else float(t[hi + 1])
-    return first, last
 
 
 def _turn(
@@ -374,7 +367,7 @@ def _look_late(s: FollowState, rules: TestRules, scan: int, tick: int, out: list
             s = replace(s, offset_h=offset)
     if s.rise_ratio < 2.0 and s.offset_h is None:
         e = _weigh(s, rules, _windowed(s))
-        s = replace(s, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio, models=e.noise)
+        s = replace(s, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio, models=e.noise, model=e.model)
         falling = s.falling_looks + 1 if e.against_falling < 0.0 else 0
         s = replace(s, falling_looks=falling)
         if falling >= 2:
@@ -439,7 +432,7 @@ def _onset(definition: str, time_h: float | None, scan: int, tick: int) -> Concl
     return Conclusion(scan, tick, "onset", definition, {"definition": definition, "time_h": time_h})
 
 
-def _step(leaf: intake.Leaf, rules: TestRules) -> Conclusion:
+def _step(leaf: intake.Leaf, rules: TestRules, jerky: bool) -> Conclusion:
     step = leaf.step
     assert step is not None
     names = [c.name for c in rules.channels if c.side in step.sides or (not c.side and "A" in step.sides)]
@@ -448,7 +441,7 @@ def _step(leaf: intake.Leaf, rules: TestRules) -> Conclusion:
         leaf.scan, leaf.tick, "step", ",".join(names),
         {
             "channels": names, "time_h": step.time_h, "size": step.size,
-            "cause": clean.cause_of(step.sides, step.sizes, step.both_there),
+            "cause": JERKY if jerky else clean.cause_of(step.sides, step.sizes, step.both_there),
         },
     )  # fmt: skip
 

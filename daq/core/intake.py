@@ -57,6 +57,8 @@ class IntakeState:
     absent: tuple[int, int] = (0, 0)
     still: tuple[int, int] = (0, 0)
     segment: int = 0
+    jerks: tuple[tuple[int, float, float], ...] = ()
+    jerky: bool = False
     scan: int = -1
     tick: int = 0
 
@@ -141,8 +143,8 @@ def _judge(s: IntakeState, part: FloatArray, final: bool) -> tuple[clean.Judged,
     a = np.concatenate((s.context[:, 1], part[:, A] - s.offsets[0]))
     b = np.concatenate((s.context[:, 2], part[:, B] - s.offsets[1]))
     return (
-        clean.judge(t, a, k, s.noise[0], final),
-        clean.judge(t, b, k, s.noise[1], final),
+        clean.judge(t, a, k, s.noise[0], final, s.jerky),
+        clean.judge(t, b, k, s.noise[1], final, s.jerky),
     )
 
 
@@ -159,7 +161,36 @@ def _step(
         int(part[0, SCAN]), int(part[0, TICK]), float((part[0, T_S] - s.origin_s) / 3600.0),
         sides, tuple(x for x in sizes if x != 0.0), size, both,
     )  # fmt: skip
-    return replace(s, offsets=offsets, segment=s.segment + 1), step
+    jerks = s.jerks
+    if not s.jerky and clean.looks_like_creep(step.sizes, both):
+        jerks = (*jerks, (s.segment + 1, sizes[0], sizes[1]))
+    return replace(s, offsets=offsets, segment=s.segment + 1, jerks=jerks), step
+
+
+def give_back(s: IntakeState, rungs: FloatArray) -> tuple[IntakeState, FloatArray]:
+    """Put the jumps that turned out to be jerky creep back into the ladder, and take no more of them out."""
+    rungs = rungs.copy()
+    context = s.context.copy()
+    offsets = list(s.offsets)
+    segments = rungs[:, ladder.SEGMENT].copy()
+    for segment, size_a, size_b in s.jerks:
+        sizes = [x for x in (size_a, size_b) if x != 0.0]
+        later = segments >= segment
+        rungs[later, ladder.E] += sum(sizes) / len(sizes)
+        rungs[later, ladder.SEGMENT] -= 1.0
+        offsets[0] -= size_a
+        offsets[1] -= size_b
+        context[:, 1] += size_a
+        context[:, 2] += size_b
+    fed = replace(
+        s,
+        context=context,
+        offsets=(offsets[0], offsets[1]),
+        segment=s.segment - len(s.jerks),
+        jerks=(),
+        jerky=True,
+    )
+    return fed, rungs
 
 
 def _close(

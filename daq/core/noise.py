@@ -21,51 +21,81 @@ RATIOS: Final = (0.5, 2.0, 8.0, 32.0, 128.0, 512.0, 2048.0)
 """Variance of the drift over that of a typical block mean: a factor of four apart."""
 
 
-class Whitened(NamedTuple):
-    """Columns in the eigenbasis of one memory, for all ratios.
+DRIFT: Final = 8.0
+"""Middle of what drifts extensometers show [microstrain]: 0.2 um on 25 mm (common practice, no source)."""
+DRIFT_SPREAD: Final = 1.3
+"""And the s.d. of its logarithm: a factor of ten either way is hardly seen. A weak opinion, and it must be one: in the
+first hours no record can tell a drift of hours from creep."""
 
-    ``columns`` (n, c); ``weights`` (r, n) inverse variances; ``logdet`` (r,); ``prior`` (r,) log weights;
-    ``ratios`` (r,), ``memory`` share of the elapsed time.
-    """
 
+def log_prior(drift_microstrain: float, ratio: float) -> float:
+    """Return the log prior weight of a drift of this s.d.; none at all counts as 0.2 microstrain."""
+    drift = max(drift_microstrain, 0.2) if ratio > 0.0 else 0.2
+    return -0.5 * float((np.log(drift / DRIFT) / DRIFT_SPREAD) ** 2)
+
+
+class Model(NamedTuple):
+    """One noise model: memory as a share of the elapsed time, ratio, log weight of the grid, eigenvectors
+    (n, n), columns in that basis (n, c), inverse variances (n,), log determinant."""
+
+    memory: float
+    ratio: float
+    prior: float
+    vectors: FloatArray
     columns: FloatArray
     weights: FloatArray
-    logdet: FloatArray
-    prior: FloatArray
-    ratios: FloatArray
-    memory: float
+    logdet: float
 
 
-def whiten(x: FloatArray, variance: FloatArray, columns: FloatArray) -> list[Whitened]:
-    """Return ``columns`` (n, c) whitened for each memory of the grid.
+class Grid:
+    """The grid of noise models of one look; decompositions are made when first asked for.
 
     Args:
         x: Times as shares of the elapsed time (n,), rising.
         variance: White variance of each block mean in units of one scan's (n,).
         columns: Regressors and data, one a column.
+
+    Cells are (memory index, ratio index); ratio index 0 is white noise alone, the same for all memories.
     """
-    typical = float(np.median(variance))
-    root = 1.0 / np.sqrt(variance)
-    gap = np.abs(x[:, None] - x[None, :])
-    grid: list[Whitened] = []
-    ratios = np.array(RATIOS)
-    share = np.log(0.5 / (len(MEMORY_SHARES) * len(RATIOS)))
-    scaled = columns * root[:, None]
-    base = float(np.sum(np.log(variance)))
-    for i, memory in enumerate(MEMORY_SHARES):
-        k = np.exp(-gap / memory) * (typical * root[:, None] * root[None, :])
-        value, vector = np.linalg.eigh(k)
-        value = np.maximum(value, 0.0)
-        r = ratios
-        prior = np.full(len(ratios), share)
-        if i == 0:  # white alone belongs to every memory: said once, with half of the weight
-            r = np.concatenate(([0.0], ratios))
-            prior = np.concatenate(([np.log(0.5)], prior))
-        spread = 1.0 + r[:, None] * value[None, :]
-        grid.append(
-            Whitened(vector.T @ scaled, 1.0 / spread, base + np.sum(np.log(spread), axis=1), prior, r, memory)
-        )
-    return grid
+
+    def __init__(self, x: FloatArray, variance: FloatArray, columns: FloatArray) -> None:
+        self._root = 1.0 / np.sqrt(variance)
+        self._gap = np.abs(x[:, None] - x[None, :])
+        self._scaled = columns * self._root[:, None]
+        self._base = float(np.sum(np.log(variance)))
+        self.typical = float(np.median(variance))
+        self._known: dict[int, tuple[FloatArray, FloatArray, FloatArray]] = {}
+
+    def model(self, i: int, j: int) -> Model:
+        if j == 0:
+            n = self._root.size
+            return Model(MEMORY_SHARES[0], 0.0, 0.0, np.eye(n), self._scaled, np.ones(n), self._base)
+        if i not in self._known:
+            k = np.exp(-self._gap / MEMORY_SHARES[i]) * (
+                self.typical * self._root[:, None] * self._root[None, :]
+            )
+            value, vector = np.linalg.eigh(k)
+            self._known[i] = (np.maximum(value, 0.0), vector, vector.T @ self._scaled)
+        value, vector, turned = self._known[i]
+        spread = 1.0 + RATIOS[j - 1] * value
+        share = -float(np.log(len(MEMORY_SHARES) * len(RATIOS)))
+        logdet = self._base + float(np.sum(np.log(spread)))
+        return Model(MEMORY_SHARES[i], RATIOS[j - 1], share, vector, turned, 1.0 / spread, logdet)
+
+    def nearest(self, model: tuple[float, float] | None) -> tuple[int, int]:
+        """Return the cell nearest to (memory share, ratio); the middle of the grid for None."""
+        if model is None or model[1] <= 0.0:
+            return len(MEMORY_SHARES) // 2, 1
+        i = int(np.argmin(np.abs(np.log(np.array(MEMORY_SHARES) / model[0]))))
+        j = int(np.argmin(np.abs(np.log(np.array(RATIOS) / model[1]))))
+        return i, j + 1
+
+    def neighbours(self, i: int, j: int) -> list[tuple[int, int]]:
+        """Return the cells beside (i, j)."""
+        if j == 0:
+            return [(m, 1) for m in range(len(MEMORY_SHARES))]
+        near = [(i - 1, j), (i + 1, j), (i, j + 1), (i, j - 1) if j > 1 else (0, 0)]
+        return [(m, r) for m, r in near if 0 <= m < len(MEMORY_SHARES) and r <= len(RATIOS)]
 
 
 def log_mean(terms: FloatArray) -> float:

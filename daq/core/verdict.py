@@ -19,6 +19,8 @@ EARLY: Final = 0.08
 least rate at 12 % of life and more, and an expectation is trusted within a factor of two to three."""
 EARLY_RISE: Final = 3.0
 """Unless the rate has risen this much: more than inverse primary creep does (1.2 to 2.5-fold)."""
+LEAST_RISE: Final = 1.03
+"""A rise by less than what one kelvin does to the rate (2 to 10 %) is not worth a word: no furnace is known better."""
 FALL_GAIN: Final = 3.0
 FALL_RATIO: Final = 1.08
 STEADY_SHARE: Final = 0.4
@@ -26,7 +28,7 @@ STEADY_SHARE: Final = 0.4
 
 def judge(e: Evidence, stage: Stage, now_h: float, threshold: float, expected_h: float | None) -> Cue | None:
     """Return the cue that the evidence gives, None for none."""
-    if e.log_ratio < threshold:
+    if e.log_ratio < threshold or e.rise_ratio < LEAST_RISE:
         return None
     fell = e.fall_gain >= FALL_GAIN and e.fall_ratio >= FALL_RATIO
     steady = 1.0 - e.since >= STEADY_SHARE
