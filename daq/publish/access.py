@@ -133,6 +133,17 @@ def check_private(path: Path) -> None:
         raise PublishError(f"{path}: got owner {info.st_uid}, wanted the running user {os.geteuid()} or root")
 
 
+class _ClosingSocket(ssl.SSLSocket):
+    """Closes itself where the handshake fails; the client library leaves that to the collector."""
+
+    def do_handshake(self, block: bool = False) -> None:
+        try:
+            super().do_handshake(block)
+        except BaseException:
+            self.close()
+            raise
+
+
 def tls_context(settings: BrokerSettings) -> ssl.SSLContext:
     """Return a context that checks chain, dates and name; TLS 1.2 or later.
 
@@ -144,6 +155,7 @@ def tls_context(settings: BrokerSettings) -> ssl.SSLContext:
     except (OSError, ssl.SSLError) as error:
         raise PublishError(f"{settings.ca_file}: got {_why(error)}, wanted PEM certificates") from error
     context.minimum_version = ssl.TLSVersion.TLSv1_2
+    context.sslsocket_class = _ClosingSocket
     if settings.cert_file is not None:
         if settings.key_file is not None:
             check_private(settings.key_file)
