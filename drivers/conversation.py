@@ -38,6 +38,8 @@ T = TypeVar("T")
 T_co = TypeVar("T_co", covariant=True)
 GAP_S: Final = 0.05
 """Silence after the last stray byte before it counts as the end of what was being sent."""
+START_S: Final = 1.0
+"""Silence before the first question on a serial port just opened (less if no answer takes that long)."""
 WARM_UP_S: Final = 5.0
 """Time for coming into step with several units of which the first may be dead."""
 FAILED_POLLS: Final = 2
@@ -104,10 +106,16 @@ class Pace:
     guard_s: float
 
 
-def read_pace(options: OptionReader, timeout_s: float, guard_s: float) -> Pace:
-    """Check ``timeout_s``, ``longest_reply_s`` (default: twice the time-out) and ``guard_s``."""
+def read_pace(options: OptionReader, timeout_s: float, guard_s: float, nameless: bool) -> Pace:
+    """Check ``timeout_s``, ``longest_reply_s`` and ``guard_s``.
+
+    ``longest_reply_s`` is the time-out unless given, and twice that for an instrument that cannot say
+    who it is (``nameless``): there the canary's answer is like any other.
+    """
     timeout_s = options.number("timeout_s", timeout_s, least=0.005, most=60.0)
-    longest_s = options.number("longest_reply_s", 2.0 * timeout_s, least=0.005, most=600.0)
+    longest_s = options.number(
+        "longest_reply_s", timeout_s * (2.0 if nameless else 1.0), least=0.005, most=600.0
+    )
     if longest_s < timeout_s:
         options.wrong("longest_reply_s", f"got {longest_s:g}, need at least timeout_s ({timeout_s:g})")
     guard_s = options.number("guard_s", min(guard_s, longest_s), least=0.0, most=600.0)
@@ -144,7 +152,8 @@ class Conversation(Generic[M]):
         """Start anew on a port just opened; an answer to somebody before us may still be on its way."""
         self._codec.reset()
         self._trust = _Trust.QUIET
-        self._quiet_until_s = self.port.clock.now_s() + self.pace.longest_reply_s
+        quiet_s = GAP_S if self.port.fresh else START_S
+        self._quiet_until_s = self.port.clock.now_s() + min(quiet_s, self.pace.longest_reply_s)
         self._sent_s.clear()
         self._failed_polls = 0
 

@@ -291,8 +291,9 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
     registers = [_register(name, own, top) for name, own in top.parts("yields").items()]
     asked = blocks(registers)
     voices = {block.voice for block in asked}
-    pace = read_pace(top, 0.5, 0.0 if tcp or len(voices) == len(asked) else 0.1)
     who, text, equals, declared = _identity(top)
+    guard_s = 0.0 if tcp or len(voices) == len(asked) else 0.1
+    pace = read_pace(top, 0.5, guard_s, nameless=who is None)
     read = _Options(
         make_port, tcp, pace, tuple(r.name for r in registers), tuple(asked), who, text, equals, declared,
         top.number("connect_timeout_s", CONNECT_S, least=0.05, most=60.0),

@@ -36,6 +36,8 @@ class ScriptedClock:
 class ScriptedPort:
     """A transport over a far end. ``say`` lets that speak unasked; ``plugged`` False pulls the plug."""
 
+    fresh = False
+
     def __init__(self, far_end: FarEnd, clock: ScriptedClock | None = None, name: str = "scripted") -> None:
         self.name = name
         self.clock: Clock = ScriptedClock() if clock is None else clock

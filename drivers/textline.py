@@ -9,7 +9,8 @@ A dial gauge that answers ``D`` with ``+01.2345,-00.3210``::
     ask: "D"                  # sent with the terminator behind it
     terminator: "\r\n"        # ends each line; ask_terminator where the question ends differently
     timeout_s: 0.5            # how long to wait for an answer
-    longest_reply_s: 1.0      # after this time no late answer can come any more
+    longest_reply_s: 1.0      # after this time no late answer comes any more; default timeout_s,
+                              # or twice that where the identity is declared
     identity: {ask: "*IDN?", reply: "GAUGE 7.*"}     # or {declared: "gauge 1234, cannot say"}
     yields:
       left: 1                 # the first number between commas
@@ -219,9 +220,9 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
     messages = _messages(top, readings, listen, ";" if comma else ",")
     voices = {m.echo or "" for m in messages}
     guard_s = 0.0 if len(messages) == len(voices) else 0.1
-    pace = read_pace(top, 0.5, guard_s)
     manner = Manner(comma, _words(top), _checksum(top))
     ask, reply, declared = _identity(top, listen)
+    pace = read_pace(top, 0.5, guard_s, bool(declared))
     read = _Options(
         make_port, not top.text("port", "/").startswith("socket:"), tuple(readings), messages, manner, pace,
         terminator.encode("latin-1", "replace"), ask_terminator, encoding,

@@ -67,6 +67,8 @@ class Transport(Protocol):
 
     name: str
     clock: Clock
+    fresh: bool
+    """Whether ``open`` begins a stream of its own, on which no answer to an earlier one can arrive."""
 
     def open(self, until_s: float) -> None: ...
     def close(self) -> None: ...
@@ -97,6 +99,8 @@ class LineSettings:
 
 class _Descriptor:
     """What serial and TCP share: a non-blocking file descriptor and poll(2)."""
+
+    fresh = False
 
     def __init__(self, name: str, clock: Clock | None) -> None:
         self.name = name
@@ -214,6 +218,7 @@ class SerialPort(_Descriptor):
 class TcpPort(_Descriptor):
     """A TCP connection: an instrument with a network socket, or a serial device server in raw mode."""
 
+    fresh = True
     _gone = "the peer closed the connection"
 
     def __init__(self, host: str, port: int, clock: Clock | None = None) -> None:
