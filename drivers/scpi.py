@@ -124,7 +124,8 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
         ignore = []
     read = _Options(
         make_port, read_pace(top, 2.0, 0.0, nameless=False), top.text("terminator", "\n", most=4),
-        top.pattern("identity"), tuple(top.texts("setup")), scan, top.text("error_query", "SYST:ERR?", empty=True),
+        top.pattern("identity"), tuple(top.texts("setup")), scan,
+        top.text("error_query", "SYST:ERR?", empty=True),
         top.number("error_check_s", 0.0, most=86400.0), frozenset(ignore),
         top.number("connect_timeout_s", CONNECT_S, least=0.05, most=60.0), tuple(channels),
     )  # fmt: skip
