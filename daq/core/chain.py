@@ -14,7 +14,7 @@ the looks of the forecast, and at rupture. Since no step depends on cuts, neithe
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 from functools import lru_cache
 from typing import Any, Final
@@ -22,9 +22,11 @@ from typing import Any, Final
 import numpy as np
 
 from daq.codec import state
-from daq.core import alarms, follow, forecast, results, timebase, watch
+from daq.core import alarms, causes, follow, forecast, results, timebase, watch
 from daq.core.alarms import AlarmEntry, AlarmsState
 from daq.core.block import Block, Conclusion, Cue
+from daq.core.catalogue import CATALOGUE
+from daq.core.causes import CausesState
 from daq.core.convert import Plan, convert, prepare
 from daq.core.follow import FollowState
 from daq.core.forecast import ForecastState
@@ -76,6 +78,8 @@ class TestState:
     over: bool = False
     next_forecast_s: float = FORECAST_FIRST_S
     counts: Mapping[str, int] | None = None
+    specimen_c: float | None = None
+    causes: CausesState = field(default_factory=CausesState)
 
 
 @lru_cache(maxsize=1024)
@@ -180,7 +184,7 @@ def _cues_of(c: Conclusion) -> Sequence[Cue]:
         if f.get("from") in _STAGE_ALARMS and f.get("withdraws") is not None:
             cues.append(Cue(c.scan, c.tick, _STAGE_ALARMS[f["from"]], "", False, f.get("why", "")))
         if f["stage"] in _STAGE_ALARMS:
-            figures = {k: v for k, v in f.items() if k not in ("why", "withdraws", "from")}
+            figures = {k: _frozen(v) for k, v in f.items() if k not in ("why", "withdraws", "from")}
             cues.append(
                 Cue(c.scan, c.tick, _STAGE_ALARMS[f["stage"]], "", True, f.get("why", ""), None, figures)
             )
@@ -190,6 +194,17 @@ def _cues_of(c: Conclusion) -> Sequence[Cue]:
             Cue(c.scan, c.tick, "correction", ",".join(c.fields["channels"]), True, c.fields.get("cause", ""))
         ]
     return []
+
+
+def _note(r: ResultsState, c: Conclusion) -> ResultsState:
+    return results.note(r, replace(c, fields=_frozen(c.fields)))
+
+
+def _frozen(v: Any) -> Any:
+    """Return a plain JSON value that nobody can change: what the alarm machine keeps is state."""
+    if isinstance(v, list | tuple):
+        return tuple(_frozen(x) for x in v)
+    return {k: _frozen(x) for k, x in v.items()} if isinstance(v, Mapping) else v
 
 
 # --- scans ------------------------------------------------------------------------------
@@ -254,6 +269,9 @@ def _take_block(
     s: TestState, rules: TestRules, block: Block, out: _Out, utc: Callable[[int], int], utc_tick: IntArray
 ) -> tuple[TestState, int]:
     """Run one converted block through watch and follow; stop after the scan that shows rupture."""
+    known = np.flatnonzero(np.isfinite(block.specimen_c))
+    if known.size:
+        s = replace(s, specimen_c=float(block.specimen_c[known[-1]]))
     if s.over:
         return _conclude(s, (), block, out, utc, utc_tick), len(block)
     stage = follow.stage_of(s.follow)
@@ -290,13 +308,14 @@ def _conclude(
     """Let the alarm machine hear of a block's items, and number everything in the order of scans."""
     said = [i for i in items if isinstance(i, Conclusion)]
     cues = [i for i in items if isinstance(i, Cue)] + [cue for c in said for cue in _cues_of(c)]
+    known, cues = causes.gather(s.causes, sorted(cues, key=lambda cue: cue.scan))
     a, alarmed = alarms.take_block(s.alarms, cues, block.tick, block.first)
     for c in said:
-        s = replace(s, results=results.note(s.results, c))
+        s = replace(s, results=_note(s.results, c))
     for c in sorted((*said, *alarmed), key=lambda c: c.scan):  # stable: what was seen, then its alarm
         own = c.kind != "alarm"
         out.put(c, int(utc_tick[c.scan - block.first]) if own else utc(c.tick))
-    return replace(s, alarms=a)
+    return replace(s, alarms=a, causes=known)
 
 
 def _look_ahead(
@@ -309,9 +328,11 @@ def _look_ahead(
     next_s = s.next_forecast_s
     while next_s <= t_s:
         next_s *= FORECAST_RATIO
+    least_h = follow.status(s.follow, rules)["minimum_time_h"]
     fore, said = forecast.look(
-        s.forecast, rules, follow.curve(s.follow), follow.stage_of(s.follow), t_s / 3600.0
-    )
+        s.forecast, rules, follow.curve(s.follow), follow.stage_of(s.follow), t_s / 3600.0,
+        least_h=least_h,
+    )  # fmt: skip
     scan, tick = block.first + taken - 1, int(block.tick[taken - 1])
     for fields in said:
         out.put(Conclusion(scan, tick, "forecast", fields["of"], fields), utc_tick)
@@ -329,12 +350,15 @@ def _finish(
     for item in (*last, *concluded):
         a = s.alarms
         if isinstance(item, Cue):
-            s = replace(s, alarms=_react(a, item, out, utc, utc_tick))
+            known, heard = causes.gather(s.causes, [item])
+            for event in heard:
+                a = _react(a, event, out, utc, utc_tick)
+            s = replace(s, alarms=a, causes=known)
             continue
         out.put(item, utc_tick)
         for event in _cues_of(item):
             a = _react(a, event, out, utc, utc_tick)
-        s = replace(s, alarms=a, results=results.note(s.results, item))
+        s = replace(s, alarms=a, results=_note(s.results, item))
     return s
 
 
@@ -467,6 +491,7 @@ def status(s: TestState, *, with_curve: bool) -> dict[str, Any]:
         "at_tick": s.clock.latest + lead,
         "test_h": timebase.hours(s.clock.latest, s.start),
         "specimen": rules.specimen.id,
+        "temperature_c": s.specimen_c,
         "set_point_c": rules.set_point_c,
         "below_k": rules.below_k,
         "above_k": rules.above_k,
@@ -485,9 +510,10 @@ def open_alarm(a: alarms.OpenAlarm, lead: int) -> dict[str, Any]:
     return {
         "alarm": a.alarm,
         "subject": a.subject,
-        "state": a.state,
-        "priority": a.priority,
+        "state": a.state.value,
+        "priority": a.priority.value,
         "message": a.message,
+        "to_do": CATALOGUE[a.alarm].to_do,
         "since_tick": a.since_tick + lead,
         "can_wait_until_tick": None if until is None else until + lead,
     }
