@@ -32,7 +32,10 @@ BACKOFF_IDENTITY_S: Final = 60.0
 """Longest pause before a wrong instrument is asked again: only a person can put that right."""
 POLL_SHARE: Final = 0.9
 """Share of the period that one poll may take; the rest is room for the next instant to begin on time."""
+POLL_LEAST_S: Final = 1.0
 POLL_MOST_S: Final = 5.0
+"""Bounds of the time one poll may take [real s]. A slow answer costs instants of its own bus, which are
+then missing; it is not worth calling a link lost for."""
 LOST_AFTER: Final = 2
 """Instants in a row without an answer after which a link counts as lost."""
 
@@ -225,7 +228,7 @@ class Bus:
                 p.driver.open()
                 p.driver.identify()
             real_period = p.period_ticks / TICKS_PER_S / self._clock.speed
-            readings = p.driver.poll(max(0.05, min(POLL_MOST_S, POLL_SHARE * real_period)))
+            readings = p.driver.poll(max(POLL_LEAST_S, min(POLL_MOST_S, POLL_SHARE * real_period)))
         except DriverError as error:
             self._failed(p, instant, error)
             return

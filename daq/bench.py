@@ -48,7 +48,8 @@ class Bench:
         origin = Origin.keep(self._lab.journal / "bench.json", bench.speed)
         if bench.speed != 1.0:
             self.clock = BenchClock(origin)
-        spec = bench.spec | {
+        spec = {
+            **bench.spec,
             "origin_unix_s": origin.utc_ns / 1e9,
             "origin_boot_ns": origin.boot_ns,
             "speed": bench.speed,

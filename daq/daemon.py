@@ -11,12 +11,11 @@ from __future__ import annotations
 import contextlib
 import os
 import signal
-import socket
 import sys
 import threading
 import time
 from collections import defaultdict
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from types import FrameType
@@ -41,6 +40,7 @@ from daq.records import (
     Finding,
     RecordError,
     RulesAdopted,
+    ScansTaken,
     UpturnError,
 )
 from daq.settings import Instrument, Lab
@@ -53,6 +53,8 @@ from drivers import registry
 QUEUE_MOST: Final = 100_000
 """Scans that wait in memory while the disk is full: a day of one frame a second, some 30 MB."""
 LOOK_EVERY_S: Final = 0.5
+LATE_S: Final = 1.0
+"""A scan waits for an instrument at least this long beyond its instant [real s], a period at least."""
 STOP_S: Final = 5.0
 CLOCK_STEP_S: Final = 1.0
 """A change of UTC against the boot clock from which it counts as set, not as slewed [real s]."""
@@ -118,8 +120,8 @@ def run(lab: Lab, *, seconds: float | None = None, view: bool = False) -> int:
         JournalBusy: another daemon holds the journal.
         DaemonError, BenchError, SettingsError: it cannot start as asked.
     """
-    log = _Log(lab.journal / "daemon.log" if view else None)
     with Journal.open(lab.journal, site=lab.site) as journal:
+        log = _Log(lab.journal / "daemon.log" if view else None)
         (lab.journal / SPOOL).mkdir(mode=0o700, exist_ok=True)
         for notice in journal.notices:
             log.line(f"journal: {notice}")
@@ -147,12 +149,15 @@ def _live(lab: Lab, journal: Journal, bench: Bench, log: _Log, seconds: float | 
     def trouble(condition: str, active: bool, message: str) -> None:
         gather.put(ConditionChanged(clock.stamp(), HOST, "broker", condition, active, message))
 
+    def acked(rows: Sequence[int]) -> None:
+        gather.put(Acked(tuple(rows)))
+
+    def arrived(scan: ScansTaken) -> None:
+        gather.put(scan, 0.0)  # a poll loop never waits for the disk: what finds no room is counted and told
+
     publisher = None
     if lab.broker is not None:
-        publisher = Publisher(
-            lab.broker, site=lab.site, host=socket.gethostname(),
-            on_acked=lambda rows: gather.put(Acked(tuple(rows))), on_trouble=trouble,
-        )  # fmt: skip
+        publisher = Publisher(lab.broker, site=lab.site, on_acked=acked, on_trouble=trouble)
     told = {"site": lab.site, "speed": clock.speed, "emulated": lab.bench is not None, "pid": os.getpid()}
     writer = Writer(
         journal, engine, gather, clock, site=lab.site, host_status=told, publisher=publisher, say=log.finding
@@ -161,10 +166,11 @@ def _live(lab: Lab, journal: Journal, bench: Bench, log: _Log, seconds: float | 
     if publisher is not None:
         publisher.start(lambda after, limit: journal.outbox(after=after, limit=limit))
     supervisor = Supervisor()
-    # a poll loop never waits for the disk: what finds no room in memory is counted and told
-    assembler = Assembler(_layouts(lab), lambda scan: gather.put(scan, 0.0))
+    assembler = Assembler(_layouts(lab), arrived)
     house.thread("writer", writer.run)
     supervisor.watch("writer", lambda: writer.beat, 30.0)
+    if publisher is not None:
+        supervisor.watch("publisher", lambda: publisher.beat, 30.0)
     buses = _buses(lab, bench.instruments, clock, assembler, gather)
     for bus in buses:
         house.thread(f"bus {bus.name}", bus.run)
@@ -254,11 +260,10 @@ def _supervise(
     began = time.monotonic()
     first = clock.stamp()
     lead = first.utc_tick - first.boot_tick
-    grace = (
-        int(max(f.scan_every_s for f in house.lab.frames) * TICKS_PER_S) if house.lab.frames else TICKS_PER_S
-    )
+    period = max((f.scan_every_s for f in house.lab.frames), default=1.0)
+    grace = int(max(period, LATE_S * clock.speed) * TICKS_PER_S)
     while not house.stop.is_set():
-        wake.wait(min(LOOK_EVERY_S, max(0.05, grace / TICKS_PER_S / clock.speed / 2)))
+        wake.wait(min(LOOK_EVERY_S, max(0.05, period / clock.speed / 2)))
         now = clock.stamp()
         step = now.utc_tick - now.boot_tick - lead
         if abs(step) / TICKS_PER_S / clock.speed > CLOCK_STEP_S:

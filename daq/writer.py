@@ -53,7 +53,7 @@ class Writer:
         self,
         journal: Journal,
         engine: Engine,
-        gather: Gather,
+        gather: Gather[Any],
         clock: Clock,
         *,
         site: str,
@@ -195,7 +195,8 @@ class Writer:
             except JournalError as error:
                 raise JournalBroken(str(error)) from error
             if told:
-                message = f"recording again; {self._gather.pressure().refused} scans did not fit into memory meanwhile"
+                lost = self._gather.pressure().refused
+                message = f"recording again; {lost} scans did not fit into memory meanwhile"
                 stamp = self._clock.stamp()
                 for active in (True, False):
                     self._gather.put(ConditionChanged(stamp, HOST, "journal", "disk_full", active, message))
