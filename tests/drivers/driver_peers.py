@@ -466,7 +466,10 @@ class Wire:
             with self._lock:
                 fds = self._waiting()
                 wait_s = min(self._due[0][0] - time.monotonic(), 0.5) if self._due else 0.5
-            ready, _, _ = select.select([self._wake_r, *fds], [], [], max(0.0, wait_s))
+            try:
+                ready, _, _ = select.select([self._wake_r, *fds], [], [], max(0.0, wait_s))
+            except OSError:
+                continue  # unplugged between the two lines above
             with self._lock:
                 if self._wake_r in ready:
                     os.read(self._wake_r, 4096)
