@@ -500,3 +500,34 @@ def test_a_read_only_connection_cannot_write(folder: Path) -> None:
     with pytest.raises(sqlite3.OperationalError, match="readonly"):
         connection.execute("DELETE FROM meta")
     connection.close()
+
+
+def test_a_stale_write_ahead_file_never_meets_the_fresh_host_file(folder: Path) -> None:
+    """Killed between the renames: the old file is aside, its write-ahead file is not yet."""
+    with open_journal(folder) as journal:
+        journal.commit(Batch(facts=(scans("H1", 0), scans("H1", 1))))
+    execute(folder / "journal.sqlite", "PRAGMA user_version = 7")
+    with pytest.raises(StoppedError):
+        Journal.open(folder, site="hall-a", hook=stop_at("recover.renamed"))
+    assert not (folder / "journal.sqlite").exists()
+    stale = folder / "journal.sqlite-wal"
+    stale.write_bytes(b"stale" * 2000)
+    with open_journal(folder) as journal:
+        assert any("ended while it replaced" in n for n in journal.notices)
+        assert len(list(journal.facts())) == 2
+        kept = [
+            p
+            for p in (folder / "quarantine").rglob("journal.sqlite-wal")
+            if p.read_bytes() == b"stale" * 2000
+        ]
+        assert len(kept) == 1
+    assert damages(folder) == []
+
+
+def test_a_chunk_that_nobody_names_is_found(folder: Path, small_chunks: int) -> None:
+    """Without its name in the host file its facts are never read."""
+    with open_journal(folder) as journal:
+        journal.commit(Batch(tuple(scans("H1", k) for k in range(20))))
+        journal.seal("H1")
+        journal._connection().execute("DELETE FROM chunk")
+    assert any("does not name" in t for t in damages(folder))
