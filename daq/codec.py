@@ -105,16 +105,18 @@ def _frame(kind: str, head: Mapping[str, Any], body: bytes) -> bytes:
     return struct.pack("<BBI", FACT_VERSION, len(k), len(h)) + k + h + body
 
 
+_KINDS: Final = (np.dtype(np.int64), np.dtype(np.int64), np.dtype(np.float64), np.dtype(np.uint8))
+
+
 def _encode_scans(s: ScansTaken) -> bytes:
     n, c = len(s), len(s.channels)
-    if s.values.shape != (n, c) or s.quality.shape != (n, c) or s.boot_tick.shape != (n,):
-        raise RecordError(
-            f"scans of {s.frame}: got shapes {s.values.shape}, {s.quality.shape}, wanted {(n, c)}"
-        )
+    arrays = (s.utc_tick, s.boot_tick, s.values, s.quality)
+    if [a.shape for a in arrays] != [(n,), (n,), (n, c), (n, c)] or tuple(a.dtype for a in arrays) != _KINDS:
+        got = [f"{a.dtype}{a.shape}" for a in arrays]
+        raise RecordError(f"scans of {s.frame}: got {got}, wanted {n} scans of {c} channels as {_KINDS}")
     head: dict[str, Any] = {"f": s.frame, "c": s.channels, "b": s.boot_id, "n": n}
     if n < COMPRESS_FROM:
-        columns: tuple[np.ndarray[Any, Any], ...] = (s.utc_tick, s.boot_tick, s.values, s.quality)
-        return _frame("ScansTaken", head, b"".join(np.ascontiguousarray(a).tobytes() for a in columns))
+        return _frame("ScansTaken", head, b"".join(np.ascontiguousarray(a).tobytes() for a in arrays))
     parts: list[bytes] = [_pack_ints(s.utc_tick), _pack_ints(s.boot_tick - s.utc_tick)]
     scales: list[int] = []
     for j in range(c):

@@ -51,8 +51,8 @@ from daq.records import (
 )
 
 FORECAST_FIRST_S: Final = 3600.0
-FORECAST_RATIO: Final = 1.05
-"""A forecast is looked at again when test time has grown by a twentieth: about fifty looks a decade."""
+FORECAST_RATIO: Final = 1.08
+"""A forecast is looked at again when test time has grown by this: thirty looks a decade."""
 FULL_LOAD_SHARE: Final = 0.98
 """Share of the nominal force from which ``starts: load_channel`` calls the load full; machines of
 class 1 (ISO 7500-2) are within 1 %, so 2 % leaves room for the load cell's own error."""
@@ -328,10 +328,10 @@ def _look_ahead(
     next_s = s.next_forecast_s
     while next_s <= t_s:
         next_s *= FORECAST_RATIO
-    least_h = follow.status(s.follow, rules)["minimum_time_h"]
+    least = s.follow.minimum
     fore, said = forecast.look(
         s.forecast, rules, follow.curve(s.follow), follow.stage_of(s.follow), t_s / 3600.0,
-        least_h=least_h,
+        least_h=None if least is None else least.time_h,
     )  # fmt: skip
     scan, tick = block.first + taken - 1, int(block.tick[taken - 1])
     for fields in said:

@@ -182,3 +182,11 @@ def test_findings_have_one_text() -> None:
             "fields": {"a": [1.5], "b": None},
         }
     )
+
+
+def test_arrays_of_another_kind_are_refused_when_they_are_written() -> None:
+    """A quality of eight bytes would be written without complaint and never read again."""
+    s = _scans(np.ones((20, 2)))
+    wide = s.quality.astype(np.int64)
+    with pytest.raises(RecordError, match="wanted"):
+        encode_fact(ScansTaken(s.frame, s.channels, s.boot_id, s.utc_tick, s.boot_tick, s.values, wide))  # type: ignore[arg-type]
