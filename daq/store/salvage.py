@@ -20,7 +20,7 @@ import numpy as np
 from daq.records import IntArray
 from daq.store.errors import JournalDamaged, JournalError
 from daq.store.lock import Mark
-from daq.store.reading import HOST, tail_fact
+from daq.store.reading import HOST, check_tail
 from daq.store.rows import checksum
 from daq.store.schema import HOST_FILE, connect
 from daq.store.segments import (
@@ -103,16 +103,17 @@ def carry_over(folder: Path, into: sqlite3.Connection, mark: Mark | None) -> Car
             # rows above the last number that was told prove themselves by their checksums
             rows += source.all(_TAIL, last + 1, UNKNOWN_JUMP << 20, frame)
             lost += failed
+            sound = []
             for row in rows:
                 try:
-                    tail_fact(row, "tail row")
+                    check_tail(row, "tail row")
+                    sound.append(row)
                 except JournalDamaged:
                     lost.append((row[0], row[0]))
-                    continue
-                present.append(row[0])
-                into.execute(
-                    "INSERT INTO tail (seq, frame, kind, checksum, data) VALUES (?, ?, ?, ?, ?)", row
-                )
+            present += [row[0] for row in sound]
+            into.executemany(
+                "INSERT INTO tail (seq, frame, kind, checksum, data) VALUES (?, ?, ?, ?, ?)", sound
+            )
         carried.facts = len(present)
         if present or tops or pieces:
             # numbers above the newest row that is left were given, or may have been
