@@ -92,6 +92,12 @@ def judge(
         if good.size - j < CONFIRM and not final:
             return Judged(spikes, None, 0.0, int(good[j]) - context, now)
         before = slice(max(0, j - 8), j)
+        # the slope of one side of the jump: across it, the jump itself would pass for creep
+        slope = (
+            _slope(tg[max(0, j - CONTEXT) : j], vg[max(0, j - CONTEXT) : j])
+            if j >= 8
+            else _slope(tg[j:], vg[j:])
+        )
         level0 = float(np.median(vg[before] - slope * (tg[before] - tg[j])))
         level1 = float(np.median(vg[after] - slope * (tg[after] - tg[j])))
         jump = level1 - level0

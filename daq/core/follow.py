@@ -36,6 +36,8 @@ STEADY_CHANGE: Final = 0.25
 each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is steady."""
 FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
+CALM: Final = 1.0
+"""Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25
 """Relative s.d. of a handbook activation energy (common practice, no source)."""
 Q_UNKNOWN: Final = 350e3
@@ -123,7 +125,7 @@ def _work(
         if len(s.intake.jerks) >= clean.JERKS:
             fed, rungs = intake.give_back(s.intake, s.rungs)
             s = replace(s, intake=fed, rungs=rungs)
-        if leaf.now_h >= s.next_look_h and s.rungs.shape[0] >= LEAST_RUNGS:
+        if leaf.rung is not None and leaf.now_h >= s.next_look_h and s.rungs.shape[0] >= LEAST_RUNGS:
             s = _look(s, rules, leaf.scan, leaf.tick, out)
     s = replace(s, intake=replace(s.intake, rows=rows[at:].copy()))
     return s, tuple(out)
@@ -151,7 +153,7 @@ def tell(
         out += [replace(c, scan=max(c.scan, scan), tick=max(c.tick, tick)) for c in said]
     time_h = (t_s - s.intake.origin_s) / 3600.0
     if s.rungs.shape[0] >= LEAST_RUNGS:
-        s = _last_words(s, rules, scan, tick, out)
+        s = _last_words(s, rules, scan, tick, cue == "ruptured", out)
     why = {"ruptured": "rupture", "ended": "test ended", "stress_changed": "stress changed"}[cue]
     s = _move(s, Cue(cue), scan, tick, time_h, None, why, out)
     if cue == "stress_changed":
@@ -212,6 +214,16 @@ def _rising(r: FloatArray) -> bool:
     return False
 
 
+def _accelerates(r: FloatArray) -> bool:
+    """Say whether the rate rose about as much from the middle to the last third as from the first to the middle."""
+    t, now = r[:, ladder.T], float(r[-1, ladder.T])
+    thirds = [r[(t > now * a) & (t <= now * b)] for a, b in ((0.0, 0.33), (0.33, 0.67), (0.67, 1.0))]
+    if min(x.shape[0] for x in thirds) < 3:
+        return False
+    (r1, _), (r2, _), (r3, _) = (_slope(x) for x in thirds)
+    return r3 - r2 >= 0.7 * (r2 - r1) and r3 > r2
+
+
 def _slope(r: FloatArray) -> tuple[float, float]:
     """Return the slope of all scans in ``r`` and the sum of squares of their times."""
     w, x, y = r[:, ladder.N], r[:, ladder.T], r[:, ladder.E]
@@ -231,7 +243,7 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
         e = _weigh(s, rules, r)
         threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
         s = replace(s, models=e.noise, model=e.model, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
-        cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h)
+        cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h, _accelerates(r))
         if cue is Cue.RATE_ROSE:
             return _turn(s, rules, e, scan, tick, out)
         if cue is Cue.RATE_ROSE_EARLY:
@@ -242,7 +254,7 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
             s = _move(s, cue, scan, tick, now * (1.0 - e.since), None, why, out)
     if s.stage is Stage.INVERSE_PRIMARY:
         s = _after_inverse(s, scan, tick, out)
-    if s.stage in (Stage.PRIMARY, Stage.INVERSE_PRIMARY) and s.models.shape[0]:
+    if s.stage in (Stage.PRIMARY, Stage.INVERSE_PRIMARY) and s.models.shape[0] and s.log_ratio < CALM:
         s = _steady(s, scan, tick, out)
     spacing = next(share for least, share in LOOKS if s.log_ratio >= least)
     return replace(s, next_look_h=now * (1.0 + spacing))
@@ -327,11 +339,16 @@ def _turn(
         s = replace(s, minimum=m, corrected_per_h=corrected)
     s = _move(s, Cue.RATE_ROSE, scan, tick, onset, interval, why, out)
     s = replace(s, next_look_h=now * (1.0 + LOOK_LATE), falling_looks=0)
-    return _say_rates(s, scan, tick, out, fitted)
+    return _say_rates(s, scan, tick, True, out, fitted)
 
 
 def _say_rates(
-    s: FollowState, scan: int, tick: int, out: list[Conclusion], fitted: tuple[Minimum, float | None] | None
+    s: FollowState,
+    scan: int,
+    tick: int,
+    turned: bool,
+    out: list[Conclusion],
+    fitted: tuple[Minimum, float | None] | None,
 ) -> FollowState:
     if fitted is None:
         return s
@@ -340,7 +357,6 @@ def _say_rates(
     out.append(_minimum(m, corrected, scan, tick))
     rise = estimate.rise_5_percent(r, s.models, m)
     offset = estimate.offset_0p2(r, m)
-    turned = s.stage is Stage.TERTIARY
     for name, when in (
         ("minimum_rate", m.time_h if turned else None),
         ("rate_rise_5_percent", rise if turned else None),
@@ -377,10 +393,13 @@ def _look_late(s: FollowState, rules: TestRules, scan: int, tick: int, out: list
     return replace(s, next_look_h=now * (1.0 + LOOK_LATE))
 
 
-def _last_words(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+def _last_words(
+    s: FollowState, rules: TestRules, scan: int, tick: int, ruptured: bool, out: list[Conclusion]
+) -> FollowState:
     if s.models.shape[0] == 0:
         s = replace(s, models=_weigh(s, rules, s.rungs).noise)
-    return _say_rates(s, scan, tick, out, _fit_least(s, rules))
+    turned = ruptured or s.stage is Stage.TERTIARY
+    return _say_rates(s, scan, tick, turned, out, _fit_least(s, rules))
 
 
 # --- conclusions ------------------------------------------------------------------------

@@ -14,27 +14,43 @@ from daq.core.stages import Cue, Stage
 
 BEYOND_VILLE: Final = 4.0
 """What is asked beyond log(1/alpha), because the noise model and the family of curves are fitted: from campaigns."""
-EARLY: Final = 0.08
+EARLY: Final = 0.12
 """Share of the expected life before which a rise is not yet called tertiary: curves without a plateau have their
-least rate at 12 % of life and more, and an expectation is trusted within a factor of two to three."""
+least rate at 12 % of life and more (open measured curves), and say so by 20 to 30 %: an expectation twice
+too long still leaves them time before their 0.2 % offset."""
 EARLY_RISE: Final = 3.0
 """Unless the rate has risen this much: more than inverse primary creep does (1.2 to 2.5-fold)."""
-LEAST_RISE: Final = 1.03
+LEAST_RISE: Final = 1.02
 """A rise by less than what one kelvin does to the rate (2 to 10 %) is not worth a word: no furnace is known better."""
+OFFSET: Final = 0.002
+"""And the curve has left its tangent by the 0.2 % of the trade's own definition."""
+WELL_ON: Final = 0.2
+"""Share of the expected life from which a rise without a fall before it is called tertiary all the same: inverse
+primary creep is over within the first tenth, and the expectation is trusted within a factor of two."""
 FALL_GAIN: Final = 3.0
+"""Log likelihood that a fall before the onset must gain: one in twenty for one more column."""
 FALL_RATIO: Final = 1.08
+"""And the rate must have fallen by more than a kelvin or two would make it."""
 STEADY_SHARE: Final = 0.4
+"""Share of the elapsed time that a steady stretch before the onset must fill where there was no fall."""
 
 
-def judge(e: Evidence, stage: Stage, now_h: float, threshold: float, expected_h: float | None) -> Cue | None:
-    """Return the cue that the evidence gives, None for none."""
+def judge(
+    e: Evidence, stage: Stage, now_h: float, threshold: float, expected_h: float | None, accelerates: bool
+) -> Cue | None:
+    """Return the cue that the evidence gives, None for none.
+
+    ``accelerates``: the rise of the rate has not slowed down from the middle to the last third of the time;
+    asked for where there was no fall, since incubation saturates and tertiary creep does not.
+    """
     if e.log_ratio < threshold or e.rise_ratio < LEAST_RISE:
         return None
     fell = e.fall_gain >= FALL_GAIN and e.fall_ratio >= FALL_RATIO
     steady = 1.0 - e.since >= STEADY_SHARE
-    overwhelming = e.rise_ratio >= EARLY_RISE and e.offset >= 0.002
+    overwhelming = e.rise_ratio >= EARLY_RISE and e.offset >= OFFSET and (fell or accelerates)
+    well_on = expected_h is not None and now_h >= WELL_ON * expected_h and accelerates
     if expected_h is not None and now_h < EARLY * expected_h and not overwhelming:
         return None if fell or stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
-    if not (fell or steady or overwhelming):
+    if not (fell or steady or overwhelming or well_on):
         return None if stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
     return Cue.RATE_ROSE
