@@ -7,11 +7,12 @@ import socket
 import ssl
 import subprocess
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import pytest
 from mqtt_peers import (
+    FAST,
     Ear,
     Mosquitto,
     Outbox,
@@ -281,6 +282,19 @@ def test_a_denied_topic_keeps_its_rows_and_does_not_hold_up_the_others(tmp_path:
                 assert ids == sorted(ids)
         finally:
             ear.close()
+
+
+def test_a_denied_topic_is_asked_once_a_try_not_once_a_row(tmp_path: Path) -> None:
+    """A thousand refused rows must not become a thousand refusals a minute."""
+    acl = tmp_path / "acl"
+    acl.write_text("topic readwrite upturn/1/s/host/#\ntopic readwrite upturn/1/s/event/H1/#\n")
+    outbox = Outbox()
+    outbox.add(50, "upturn/1/s/event/H2/-")
+    outbox.add(1, "upturn/1/s/event/H1/-")
+    m = Mosquitto(tmp_path, f"allow_anonymous true\nacl_file {acl}\n")
+    with running(m), house(BrokerSettings(port=m.port), replace(FAST, slow_retry_s=60.0), outbox) as h:
+        assert wait_until(lambda: outbox.acked == [51])
+        assert h.publisher.counts.denied == 1
 
 
 def test_the_older_protocol_takes_a_denied_topic_for_a_success(tmp_path: Path) -> None:
