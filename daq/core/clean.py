@@ -4,10 +4,12 @@ Works on a few raw scans beside the ones just before them, one side at a time. A
 predecessor by more than noise and creep explain is *suspected*: it and what follows wait in the
 buffer until five scans have been seen from there on. If the level stays, it was a step; if it
 comes back, a spike. A step is taken out of what follows by an offset, never out of the record,
-and the ladder begins a new segment, whose level the estimator may fit anew: so the neutralisation can be undone.
+and the ladder begins a new segment, whose level the estimator may fit anew: so the neutralisation can be
+undone.
 
 Thresholds are in units of the noise of single scans, measured on the scans themselves as the median of second
-differences (insensitive to creep, drift and steps), never below the resolution seen. Suspected beyond four standard
+differences (insensitive to creep, drift and steps), never below the resolution seen. Suspected beyond four
+standard
 deviations (one Gaussian scan in 16 000: a wrong suspicion only costs a wait of four scans), judged beyond six
 (one in 5e8).
 """
@@ -29,7 +31,8 @@ CONTEXT: Final = 24
 
 
 JERKS: Final = 3
-"""Jumps that look like creep and are then taken as creep: one is an accident, three are a habit of the material."""
+"""Jumps that look like creep and are then taken as creep: one is an accident, three are a habit of the
+material."""
 
 
 class Judged(NamedTuple):
@@ -47,7 +50,8 @@ class Judged(NamedTuple):
 
 
 def scan_noise(v: FloatArray) -> float:
-    """Return the s.d. of single scans from second differences (n,), at least the resolution's; NaN if n < 5."""
+    """Return the s.d. of single scans from second differences (n,), at least the resolution's; NaN if n <
+    5."""
     v = v[np.isfinite(v)]
     if v.size < 5:
         return float("nan")

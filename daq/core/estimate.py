@@ -2,13 +2,16 @@
 
 Local polynomials in time by generalised least squares on block means, once for each noise model that matters
 (``evidence``) and averaged: the interval then carries what is not known about drift. What room and specimen
-temperature do to the extensometer is fitted beside. A polynomial over the stretch in which the rate lies within
-some 20 % of its least beats a straight line over the 2 % stretch: it may use far more of the record, and its bend is
+temperature do to the extensometer is fitted beside. A polynomial over the stretch in which the rate lies
+within
+some 20 % of its least beats a straight line over the 2 % stretch: it may use far more of the record, and
+its bend is
 fitted, not assumed away. Degree three to six by the corrected criterion of Akaike (Hurvich & Tsai 1989).
 """
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 from typing import Final, NamedTuple
 
@@ -25,14 +28,16 @@ STRETCHES: Final = (1.06, 1.12, 1.25, 1.5)
 PRIOR_DOF: Final = 12.0
 """How much the level of noise found on the whole record counts against that of the stretch fitted."""
 BENT: Final = 0.03
-"""Bias of a polynomial of fitting degree, as a share of the bend within its stretch: seen on the theta, damage and
+"""Bias of a polynomial of fitting degree, as a share of the bend within its stretch: seen on the theta,
+damage and
 omega curves of the constructed checks, where it is 1 to 4 %."""
 BENT_LINE: Final = 0.3
 """The same for a straight line, where there are too few blocks for more: a third of a parabola's height."""
 
 
 class Fit(NamedTuple):
-    """A local polynomial: strain(t) = sum c_k z^k with z = (t - at_h) / half_h, one row of ``coefs`` a noise model.
+    """A local polynomial: strain(t) = sum c_k z^k with z = (t - at_h) / half_h, one row of ``coefs`` a
+    noise model.
 
     ``covariances`` (m, p, p) go with ``coefs`` (m, p); ``weights`` (m,).
     """
@@ -102,9 +107,9 @@ def polynomial(
     z = (t - at) / half
     # mean of z^k over a block from its own spread: exact to second order
     spread = r[:, ladder.S_TT] / r[:, ladder.N] / half**2
-    cols = []
-    for k in range(degree + 1):
-        cols.append(z**k + (0.5 * k * (k - 1) * z ** max(k - 2, 0) * spread if k >= 2 else 0.0))
+    cols = [
+        z**k + (0.5 * k * (k - 1) * z ** max(k - 2, 0) * spread if k >= 2 else 0.0) for k in range(degree + 1)
+    ]
     n_poly = len(cols)
     for c, prior_sd in (
         (ladder.TEMP, 30e-6),
@@ -115,8 +120,7 @@ def polynomial(
         v = r[:, c]
         if np.isfinite(v).all() and np.std(v) > 1e-3 and r.shape[0] > 3 * (degree + 3):
             cols.append((v - np.mean(v)) * prior_sd)
-    for s in np.unique(r[:, ladder.SEGMENT])[1:]:
-        cols.append((r[:, ladder.SEGMENT] >= s).astype(np.float64))
+    cols += [(r[:, ladder.SEGMENT] >= s).astype(np.float64) for s in np.unique(r[:, ladder.SEGMENT])[1:]]
     x = np.stack(cols, axis=1)
     precision = np.zeros(x.shape[1])
     nuisance = x.shape[1] - n_poly - (np.unique(r[:, ladder.SEGMENT]).size - 1)
@@ -228,7 +232,8 @@ def rate_now(rungs: FloatArray, models: FloatArray, share: float = 0.1) -> tuple
 
 
 def coarse_rates(rungs: FloatArray, share: float = 0.04) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return (times, rates, scan counts) of groups of rungs that each span about ``share`` of their distance from
+    """Return (times, rates, scan counts) of groups of rungs that each span about ``share`` of their
+    distance from
     either end, by moments alone; cheap."""
     t = rungs[:, ladder.T]
     now = float(rungs[-1, ladder.END])
@@ -244,7 +249,7 @@ def coarse_rates(rungs: FloatArray, share: float = 0.04) -> tuple[FloatArray, Fl
         i = j
     if len(cut) > 2 and cut[-1] - cut[-2] < 2:
         cut.pop(-2)
-    for a, b in zip(cut[:-1], cut[1:], strict=True):
+    for a, b in itertools.pairwise(cut):
         w = rungs[a:b, ladder.N]
         x, y = t[a:b], rungs[a:b, ladder.E]
         total = float(np.sum(w))
@@ -259,7 +264,8 @@ def coarse_rates(rungs: FloatArray, share: float = 0.04) -> tuple[FloatArray, Fl
 
 
 def crossing(t: FloatArray, v: FloatArray, level: float) -> float | None:
-    """Return the time after which ``v`` stays above ``level`` for good, linear between points; None if not so."""
+    """Return the time after which ``v`` stays above ``level`` for good, linear between points; None if not
+    so."""
     above = v > level
     if not above[-1]:
         return None
@@ -271,7 +277,8 @@ def crossing(t: FloatArray, v: FloatArray, level: float) -> float | None:
 
 
 def rise_5_percent(rungs: FloatArray, models: FloatArray, least: Minimum) -> float | None:
-    """Return when the rate had risen by 5 % over the least one for good, from the curve after it; None if not yet."""
+    """Return when the rate had risen by 5 % over the least one for good, from the curve after it; None if
+    not yet."""
     now = float(rungs[-1, ladder.T])
     goal = RISE_5 * least.rate
     high = now

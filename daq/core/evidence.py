@@ -8,11 +8,14 @@ Two families of curves are compared on the block means of the ladder, in tempera
 
 What else bends a curve takes part in both: apparent strain of specimen and room temperature (lagged), an
 error of the activation energy, sizes of slips, the day wave where no room temperature is logged. The noise is
-integrated over a grid (``core.noise``) in both. The evidence is the log of the ratio of the two integrated likelihoods
+integrated over a grid (``core.noise``) in both. The evidence is the log of the ratio of the two integrated
+likelihoods
 (restricted likelihood, scale profiled), the onset averaged over its grid, so that it behaves as a likelihood
-ratio does: at most a share alpha of tests without a rise ever see it above log(1/alpha) (Ville 1939) where the model
+ratio does: at most a share alpha of tests without a rise ever see it above log(1/alpha) (Ville 1939) where
+the model
 is right, and what the threshold must add because the model is fitted was found on simulated rigs.
-A step that nobody saw is a third explanation: evidence is counted only as far as a step at any one time would not do as well.
+A step that nobody saw is a third explanation: evidence is counted only as far as a step at any one time
+would not do as well.
 """
 
 from __future__ import annotations
@@ -70,9 +73,12 @@ class Evidence(NamedTuple):
 
     ``log_ratio``: evidence for a rise against the better of "never rises" and "a step", ``against_falling``
     against the first alone. ``since``: share of the elapsed equivalent time since the most likely onset.
-    ``fall_gain``: log likelihood gained by letting the rate fall before the onset, ``fall_ratio`` first rate over
-    least, ``rise_ratio`` rate now over least, ``offset`` strain above the tangent at the least rate, all on the best
-    fitting curve. ``noise``: (k, 4) memory [h], drift variance, variance of one scan [strain^2], weight, of the
+    ``fall_gain``: log likelihood gained by letting the rate fall before the onset, ``fall_ratio`` first
+    rate over
+    least, ``rise_ratio`` rate now over least, ``offset`` strain above the tangent at the least rate, all on
+    the best
+    fitting curve. ``noise``: (k, 4) memory [h], drift variance, variance of one scan [strain^2], weight, of
+    the
     noise models that matter.
     """
 
@@ -364,8 +370,9 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
 
 
 def _step_gain(d: Design, cells: list[_Cell], like: Callable[[float, FloatArray], FloatArray]) -> float:
-    """Return how much better [log] a falling rate fits with one step at the best place, place averaged over."""
-    f, c = d.free.shape[1], d.concave.shape[1]
+    """Return how much better [log] a falling rate fits with one step at the best place, place averaged
+    over."""
+    f = d.free.shape[1]
     per_cell = []
     for cell in cells:
         idx = np.concatenate((np.arange(f), f + np.flatnonzero(cell.passive)))

@@ -1,6 +1,7 @@
 """Follows one test: scans in, stages, least rate, onsets and steps out.
 
-Scans become leaves (``intake``), leaves the ladder (``ladder``). At *looks*, spaced geometrically in time so that
+Scans become leaves (``intake``), leaves the ladder (``ladder``). At *looks*, spaced geometrically in time
+so that
 their number grows with the logarithm of the test, the evidence for a rising rate is weighed (``evidence``),
 judged (``verdict``) and moves the stage table (``stages``). Rates come from ``estimate``.
 The state is pure and canonical; nothing depends on how scans were cut into blocks.
@@ -25,15 +26,18 @@ from daq.records import FloatArray
 
 LOOKS: Final = ((4.0, 0.008), (1.0, 0.02), (-np.inf, 0.05))
 """Spacing of looks as a share of elapsed time, by the evidence there is at least. Evidence grows with the
-fourth to seventh power of the time since onset, so from 1 to a verdict that time grows by half: looks are never so far
+fourth to seventh power of the time since onset, so from 1 to a verdict that time grows by half: looks are
+never so far
 apart that much is lost."""
 LOOK_LATE: Final = 0.05
 """And in tertiary, where only the onsets still to come and a withdrawal are looked for."""
 LEAST_RUNGS: Final = 24
 """Rungs needed for a look: three times the parameters of the plainest curve with a rise."""
 STEADY_CHANGE: Final = 0.25
-"""Secondary: the rate changed by less than this over the last half of the elapsed time, with 95 % confidence on
-each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is steady."""
+"""Secondary: the rate changed by less than this over the last half of the elapsed time, with 95 %
+confidence on
+each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is
+steady."""
 FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
 CALM: Final = 1.0
@@ -58,7 +62,7 @@ class FollowState:
 
     stage: Stage = Stage.HEATING
     since_h: float | None = None
-    intake: IntakeState = IntakeState()
+    intake: IntakeState = field(default_factory=IntakeState)
     rungs: FloatArray = field(default_factory=ladder.empty)
     leaves: int = 0
     next_look_h: float = 0.0
@@ -159,9 +163,17 @@ def tell(
     if cue == "stress_changed":
         i = s.intake
         fresh = IntakeState(
-            origin_s=t_s, clock_s=t_s, reference_c=i.reference_c, temp_c=i.temp_c, rooms_c=i.rooms_c,
-            offsets=i.offsets, noise=i.noise, half=i.half, scan=i.scan, tick=i.tick,
-        )  # fmt: skip
+            origin_s=t_s,
+            clock_s=t_s,
+            reference_c=i.reference_c,
+            temp_c=i.temp_c,
+            rooms_c=i.rooms_c,
+            offsets=i.offsets,
+            noise=i.noise,
+            half=i.half,
+            scan=i.scan,
+            tick=i.tick,
+        )
         s = FollowState(stage=s.stage, since_h=0.0, intake=fresh, counts=s.counts)
     return s, tuple(out)
 
@@ -215,7 +227,8 @@ def _rising(r: FloatArray) -> bool:
 
 
 def _accelerates(r: FloatArray) -> bool:
-    """Say whether the rate rose about as much from the middle to the last third as from the first to the middle."""
+    """Say whether the rate rose about as much from the middle to the last third as from the first to the
+    middle."""
     t, now = r[:, ladder.T], float(r[-1, ladder.T])
     thirds = [r[(t > now * a) & (t <= now * b)] for a, b in ((0.0, 0.33), (0.33, 0.67), (0.67, 1.0))]
     if min(x.shape[0] for x in thirds) < 3:
@@ -439,12 +452,18 @@ def _move(
 
 def _minimum(m: Minimum, corrected: float | None, scan: int, tick: int) -> Conclusion:
     return Conclusion(
-        scan, tick, "minimum_rate", "",
+        scan,
+        tick,
+        "minimum_rate",
+        "",
         {
-            "rate_per_h": m.rate, "low_per_h": m.low, "high_per_h": m.high,
-            "time_h": m.time_h, "corrected_rate_per_h": corrected,
+            "rate_per_h": m.rate,
+            "low_per_h": m.low,
+            "high_per_h": m.high,
+            "time_h": m.time_h,
+            "corrected_rate_per_h": corrected,
         },
-    )  # fmt: skip
+    )
 
 
 def _onset(definition: str, time_h: float | None, scan: int, tick: int) -> Conclusion:
@@ -457,12 +476,17 @@ def _step(leaf: intake.Leaf, rules: TestRules, jerky: bool) -> Conclusion:
     names = [c.name for c in rules.channels if c.side in step.sides or (not c.side and "A" in step.sides)]
     names = [c.name for c in rules.channels if c.name in names and c.role.value in ("strain", "extension")]
     return Conclusion(
-        leaf.scan, leaf.tick, "step", ",".join(names),
+        leaf.scan,
+        leaf.tick,
+        "step",
+        ",".join(names),
         {
-            "channels": names, "time_h": step.time_h, "size": step.size,
+            "channels": names,
+            "time_h": step.time_h,
+            "size": step.size,
             "cause": JERKY if jerky else clean.cause_of(step.sides, step.sizes, step.both_there),
         },
-    )  # fmt: skip
+    )
 
 
 # --- for screens and forecasts ----------------------------------------------------------
@@ -471,11 +495,23 @@ def _step(leaf: intake.Leaf, rules: TestRules, jerky: bool) -> Conclusion:
 def status(s: FollowState, rules: TestRules) -> Mapping[str, Any]:
     """Return plain values for screens: stage, strain, rate now with interval, least rate, trend."""
     told: dict[str, Any] = {
-        "stage": s.stage.value, "since_h": s.since_h, "strain": None, "rate_per_h": None, "rate_low_per_h": None,
-        "rate_high_per_h": None, "minimum_rate_per_h": None, "minimum_low_per_h": None, "minimum_high_per_h": None,
-        "minimum_time_h": None, "corrected_minimum_rate_per_h": None, "rise_ratio": None, "evidence": s.log_ratio,
-        "trend": "unknown", "onset_rise_5_percent_h": s.rise_5_h, "onset_offset_0p2_h": s.offset_h,
-    }  # fmt: skip
+        "stage": s.stage.value,
+        "since_h": s.since_h,
+        "strain": None,
+        "rate_per_h": None,
+        "rate_low_per_h": None,
+        "rate_high_per_h": None,
+        "minimum_rate_per_h": None,
+        "minimum_low_per_h": None,
+        "minimum_high_per_h": None,
+        "minimum_time_h": None,
+        "corrected_minimum_rate_per_h": None,
+        "rise_ratio": None,
+        "evidence": s.log_ratio,
+        "trend": "unknown",
+        "onset_rise_5_percent_h": s.rise_5_h,
+        "onset_offset_0p2_h": s.offset_h,
+    }
     if s.rungs.shape[0]:
         told["strain"] = float(s.rungs[-1, ladder.E])
     if s.rungs.shape[0] >= 8:
@@ -489,14 +525,19 @@ def status(s: FollowState, rules: TestRules) -> Mapping[str, Any]:
         m = s.minimum
         if m is not None:
             told |= {
-                "minimum_rate_per_h": m.rate, "minimum_low_per_h": m.low, "minimum_high_per_h": m.high,
-                "minimum_time_h": m.time_h, "corrected_minimum_rate_per_h": s.corrected_per_h,
+                "minimum_rate_per_h": m.rate,
+                "minimum_low_per_h": m.low,
+                "minimum_high_per_h": m.high,
+                "minimum_time_h": m.time_h,
+                "corrected_minimum_rate_per_h": s.corrected_per_h,
                 "rise_ratio": rate / m.rate if m.rate > 0 else None,
-            }  # fmt: skip
+            }
         told["trend"] = {
-            Stage.PRIMARY: "falling", Stage.SECONDARY: "steady", Stage.TERTIARY: "rising",
+            Stage.PRIMARY: "falling",
+            Stage.SECONDARY: "steady",
+            Stage.TERTIARY: "rising",
             Stage.INVERSE_PRIMARY: "rising early",
-        }.get(s.stage, "unknown")  # fmt: skip
+        }.get(s.stage, "unknown")
     return told
 
 

@@ -24,7 +24,8 @@ ROOM_LAGS_H: Final = (0.75, 3.0)
 """Time constants of the lagged room temperature: with the room as it is they span the phases of a day's wave
 for lags from minutes to hours."""
 FAR_K: Final = 15.0
-"""Specimen temperature this far off is another test condition or a broken thermocouple: strain left out meanwhile."""
+"""Specimen temperature this far off is another test condition or a broken thermocouple: strain left out
+meanwhile."""
 ABSENT_SCANS: Final = 10
 
 
@@ -39,7 +40,8 @@ def _no_context() -> FloatArray:
 @state
 @dataclass(frozen=True, slots=True)
 class IntakeState:
-    """What the intake carries. ``rows`` is the open leaf, raw; ``context`` clean scans before it (t_h, a, b)."""
+    """What the intake carries. ``rows`` is the open leaf, raw; ``context`` clean scans before it (t_h, a,
+    b)."""
 
     rows: FloatArray = field(default_factory=_no_rows)
     context: FloatArray = field(default_factory=_no_context)
@@ -76,7 +78,8 @@ class Step(NamedTuple):
 
 
 class Leaf(NamedTuple):
-    """One closed leaf: its rung (None where no strain was good), steps before it, and the scan that closed it."""
+    """One closed leaf: its rung (None where no strain was good), steps before it, and the scan that closed
+    it."""
 
     rung: FloatArray | None
     step: Step | None
@@ -210,11 +213,12 @@ def _close(
     has_a, has_b = np.isfinite(a), np.isfinite(b)
     offsets, half = s.offsets, s.half
     # a side that was away for long comes back at an unknown level: joined on where the mean is
-    for side, values, has, other in ((0, a, has_a, b), (1, b, has_b, a)):
+    for side, has in ((0, has_a), (1, has_b)):
+        values, other = (a, b) if side == 0 else (b, a)
         if s.absent[side] >= ABSENT_SCANS and has.any() and np.isfinite(other).any():
             sign = 1.0 if side == 0 else -1.0
             shift = float(np.nanmedian(values) - (np.nanmedian(other) + sign * 2.0 * half))
-            values -= shift
+            np.subtract(values, shift, out=values)
             offsets = (offsets[0] + shift, offsets[1]) if side == 0 else (offsets[0], offsets[1] + shift)
     both = has_a & has_b
     e = np.where(both, 0.5 * (a + b), np.where(has_a, a - half, b + half))

@@ -28,9 +28,11 @@ LEAF_SCANS: Final = 128
 (
     N, T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, S_TT, S_TE, S_EE, START, END, SEGMENT, Q2,
 ) = range(17)  # fmt: skip
-"""Columns. N scans; means of T time [h], U equivalent time [h], Q integral of (T - T0) dU [K h], E strain, H half
+"""Columns. N scans; means of T time [h], U equivalent time [h], Q integral of (T - T0) dU [K h], E strain,
+H half
 difference of the sides, TEMP specimen [degC], ROOM0..2 room as it is and lagged [degC];
-S_.. sums of squares and products about the means; START, END [h]; SEGMENT counts the steps before; Q2 spare."""
+S_.. sums of squares and products about the means; START, END [h]; SEGMENT counts the steps before; Q2
+spare."""
 COLUMNS: Final = 17
 _MEANS: Final = np.array([T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, Q2])
 
@@ -105,7 +107,8 @@ def sweep(rungs: FloatArray, now_h: float) -> FloatArray:
 
 
 def thinned(rungs: FloatArray, now_share: float, floor_share: float, age_share: float) -> FloatArray:
-    """Return the rungs merged further, as far as ``now_share`` of the distance from now plus ``floor_share`` of the
+    """Return the rungs merged further, as far as ``now_share`` of the distance from now plus
+    ``floor_share`` of the
     test, and ``age_share`` of the time of test, allow: for work that grows with the cube of their number."""
     now = float(rungs[-1, END])
     start, end, segment = rungs[:, START].tolist(), rungs[:, END].tolist(), rungs[:, SEGMENT].tolist()
@@ -136,7 +139,8 @@ def thinned(rungs: FloatArray, now_share: float, floor_share: float, age_share: 
 
 
 def slope_and_scatter(rungs: FloatArray) -> tuple[float, float, float]:
-    """Return slope [1/h], value at mean time, and residual s.d. of all scans in ``rungs``, by moments alone."""
+    """Return slope [1/h], value at mean time, and residual s.d. of all scans in ``rungs``, by moments
+    alone."""
     whole = rungs[:1]
     for i in range(1, rungs.shape[0]):
         whole = merge(whole, rungs[i : i + 1])
@@ -147,7 +151,8 @@ def slope_and_scatter(rungs: FloatArray) -> tuple[float, float, float]:
 
 
 def white_sd(rungs: FloatArray) -> float:
-    """Return the s.d. of single scans about a line within each block, pooled; NaN when no block has three scans.
+    """Return the s.d. of single scans about a line within each block, pooled; NaN when no block has three
+    scans.
 
     The scale of the noise model only: what is slower than a block is found by ``core.noise``.
     """

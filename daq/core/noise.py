@@ -2,7 +2,8 @@
 
 The covariance of block means is s^2 (diag(1/n) + r K(tau)): white noise of single scans averaged, and a
 stationary Ornstein-Uhlenbeck drift of memory tau, whose limit for long tau is a random walk. Neither tau
-nor the ratio r can be pinned down while a test runs (a memory near the length of the record cannot be told from
+nor the ratio r can be pinned down while a test runs (a memory near the length of the record cannot be told
+from
 creep), so every likelihood is averaged over a weighted grid of both. For each tau one eigenvalue
 decomposition serves all ratios.
 """
@@ -16,7 +17,8 @@ import numpy as np
 from daq.records import FloatArray
 
 MEMORY_SHARES: Final = (0.01, 0.03, 0.1, 0.25, 0.5)
-"""Memories as shares of the elapsed time: shorter ones act as white noise of a block, longer ones as a random walk."""
+"""Memories as shares of the elapsed time: shorter ones act as white noise of a block, longer ones as a
+random walk."""
 RATIOS: Final = (0.5, 2.0, 8.0, 32.0, 128.0, 512.0, 2048.0)
 """Variance of the drift over that of a typical block mean: a factor of four apart."""
 
@@ -24,7 +26,8 @@ RATIOS: Final = (0.5, 2.0, 8.0, 32.0, 128.0, 512.0, 2048.0)
 DRIFT: Final = 8.0
 """Middle of what drifts extensometers show [microstrain]: 0.2 um on 25 mm (common practice, no source)."""
 DRIFT_SPREAD: Final = 1.3
-"""And the s.d. of its logarithm: a factor of ten either way is hardly seen. A weak opinion, and it must be one: in the
+"""And the s.d. of its logarithm: a factor of ten either way is hardly seen. A weak opinion, and it must be
+one: in the
 first hours no record can tell a drift of hours from creep."""
 
 

@@ -1,7 +1,8 @@
 """The most likely curve whose rate falls to a least value and rises from there: where the least rate lies.
 
 Non-negative least squares on concave columns before a turning point and convex hinges after it, in the metric
-of one noise model, the turning point on a grid. A shape held so strictly cannot be led to a false least rate by the
+of one noise model, the turning point on a grid. A shape held so strictly cannot be led to a false least
+rate by the
 noise of short stretches, as the least of many local slopes always is.
 """
 
@@ -17,7 +18,8 @@ from daq.records import FloatArray
 TURNS: Final = 16
 """Turning points tried, evenly spread over the blocks."""
 FAR: Final = 2.5
-"""The curve is fitted up to where the rate is this many times the least: beyond, a blunt shape would bend the rest."""
+"""The curve is fitted up to where the rate is this many times the least: beyond, a blunt shape would bend
+the rest."""
 
 
 def unimodal(rungs: FloatArray, models: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from ladder_helper import rungs_of
 from scipy.optimize import nnls as reference_nnls
 
-from daq.core import evidence, ladder, noise
-from ladder_helper import rungs_of
+from daq.core import evidence, noise
 
 
 @pytest.mark.parametrize("seed", range(12))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from typing import Any
 
 import numpy as np
@@ -43,7 +44,7 @@ def part(b: Block, lo: int, hi: int) -> Block:
 def run(b: Block, cuts: list[int], rules: TestRules = RULES) -> tuple[follow.FollowState, list[Conclusion]]:
     s, said = follow.begin(rules), []
     edges = [0, *sorted(cuts), len(b)]
-    for lo, hi in zip(edges[:-1], edges[1:], strict=True):
+    for lo, hi in itertools.pairwise(edges):
         s, some = follow.follow(s, rules, part(b, lo, hi))
         said += some
     return s, said

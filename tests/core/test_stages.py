@@ -32,5 +32,13 @@ def test_tertiary_is_entered_by_a_rise_alone_and_left_by_taking_it_back() -> Non
 def test_a_stage_name_is_a_word_of_the_trade() -> None:
     """Outside programs match these names."""
     assert [s.value for s in Stage] == [
-        "heating", "soaking", "loading", "primary", "secondary", "tertiary", "inverse primary", "ruptured", "ended",
-    ]  # fmt: skip
+        "heating",
+        "soaking",
+        "loading",
+        "primary",
+        "secondary",
+        "tertiary",
+        "inverse primary",
+        "ruptured",
+        "ended",
+    ]

@@ -2,7 +2,8 @@
 
     python tests/bench/detection/campaign.py --rigs 300 --seed 1 [--workers 2] [--list]
 
-Prints false detections with their exact (Clopper & Pearson 1934) interval, misses, delay over the best possible
+Prints false detections with their exact (Clopper & Pearson 1934) interval, misses, delay over the best
+possible
 one, detections after the 0.2 % offset, error of the least rate over the best possible standard error, and
 how often its 90 % interval holds the truth. Same seed, same table, on any number of workers.
 """
@@ -21,13 +22,13 @@ from typing import Any
 for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(_name, "1")  # small matrices: threads only get in each other's way
 
-import numpy as np
+import numpy as np  # noqa: E402
 
-from daq.core import follow, limit
-from daq.core.block import Block
-from daq.core.rules import ChannelRules, Loading, Role, Specimen, TestRules
-from simulator import population
-from simulator.rig import Run, simulate
+from daq.core import follow, limit  # noqa: E402
+from daq.core.block import Block  # noqa: E402
+from daq.core.rules import ChannelRules, Loading, Role, Specimen, TestRules  # noqa: E402
+from simulator import population  # noqa: E402
+from simulator.rig import Run, simulate  # noqa: E402
 
 CHUNK = 4000
 
@@ -40,11 +41,18 @@ def rules_of(run: Run) -> TestRules:
     )
     q = frame.get("activation_energy_kj_per_mol")
     return TestRules(
-        "simulated", "H1", "H1", Specimen("S-1"), channels,
-        stress_pa=frame["stress_mpa"] * 1e6, loading=Loading(frame["loading"]), set_point_c=frame["temperature_c"],
-        activation_energy_j_per_mol=None if q is None else q * 1e3, stress_exponent=frame.get("stress_exponent"),
+        "simulated",
+        "H1",
+        "H1",
+        Specimen("S-1"),
+        channels,
+        stress_pa=frame["stress_mpa"] * 1e6,
+        loading=Loading(frame["loading"]),
+        set_point_c=frame["temperature_c"],
+        activation_energy_j_per_mol=None if q is None else q * 1e3,
+        stress_exponent=frame.get("stress_exponent"),
         expected_rupture_h=frame.get("expected_rupture_h"),
-    )  # fmt: skip
+    )
 
 
 def block_of(run: Run, rules: TestRules) -> Block:
@@ -56,18 +64,33 @@ def block_of(run: Run, rules: TestRules) -> Block:
     couples = [c[ch.name] for ch in rules.channels if ch.role is Role.SPECIMEN_TEMPERATURE]
     values = np.zeros((n, 0))
     return Block(
-        0, np.round(c["time_s"] * 1e4).astype(np.int64), c["time_s"] - c["time_s"][0], values,
-        values.astype(np.uint8), sides.get("A", none), sides.get("B", none),
-        np.mean(couples, axis=0) if couples else none, c.get("room", none), c.get("output", none),
-    )  # fmt: skip
+        0,
+        np.round(c["time_s"] * 1e4).astype(np.int64),
+        c["time_s"] - c["time_s"][0],
+        values,
+        values.astype(np.uint8),
+        sides.get("A", none),
+        sides.get("B", none),
+        np.mean(couples, axis=0) if couples else none,
+        c.get("room", none),
+        c.get("output", none),
+    )
 
 
 def cut(b: Block, lo: int, hi: int) -> Block:
     s = slice(lo, hi)
     return Block(
-        b.first + lo, b.tick[s], b.t_s[s], b.values[s], b.quality[s], b.strain_a[s], b.strain_b[s],
-        b.specimen_c[s], b.room_c[s], b.output[s],
-    )  # fmt: skip
+        b.first + lo,
+        b.tick[s],
+        b.t_s[s],
+        b.values[s],
+        b.quality[s],
+        b.strain_a[s],
+        b.strain_b[s],
+        b.specimen_c[s],
+        b.room_c[s],
+        b.output[s],
+    )
 
 
 def run_one(job: tuple[int, int]) -> dict[str, Any]:
@@ -92,17 +115,32 @@ def run_one(job: tuple[int, int]) -> dict[str, Any]:
     spent = time.process_time() - began
     hours = {c: float(block.t_s[c]) / 3600.0 for c in {x.scan for x in said}}
     out: dict[str, Any] = {
-        "index": index, "kind": truth.kind, "rises": truth.rises, "turns": truth.turns_tertiary,
-        "min_h": truth.minimum_h, "first_h": truth.first_rise_h, "end_h": truth.end_h,
-        "offset_h": truth.offset_0p2_h, "rise5_h": truth.rise_5_percent_h, "min_rate": truth.minimum_rate_per_h,
-        "ruptured": truth.rupture_h is not None, "scans": n, "cpu_s": spent,
-        "expected_h": rules.expected_rupture_h, "noise": [truth.noise.white, *truth.noise.drifts],
+        "index": index,
+        "kind": truth.kind,
+        "rises": truth.rises,
+        "turns": truth.turns_tertiary,
+        "min_h": truth.minimum_h,
+        "first_h": truth.first_rise_h,
+        "end_h": truth.end_h,
+        "offset_h": truth.offset_0p2_h,
+        "rise5_h": truth.rise_5_percent_h,
+        "min_rate": truth.minimum_rate_per_h,
+        "ruptured": truth.rupture_h is not None,
+        "scans": n,
+        "cpu_s": spent,
+        "expected_h": rules.expected_rupture_h,
+        "noise": [truth.noise.white, *truth.noise.drifts],
         "events": [(e.kind, round(e.at_h, 2), e.size) for e in truth.events],
-        "stages": [(x.fields["stage"], round(hours[x.scan], 3), x.fields["onset_h"], x.fields["why"])
-                   for x in said if x.kind == "stage"],
-        "steps": [(x.fields["time_h"], x.fields["size"], x.fields["channels"]) for x in said if x.kind == "step"],
+        "stages": [
+            (x.fields["stage"], round(hours[x.scan], 3), x.fields["onset_h"], x.fields["why"])
+            for x in said
+            if x.kind == "stage"
+        ],
+        "steps": [
+            (x.fields["time_h"], x.fields["size"], x.fields["channels"]) for x in said if x.kind == "step"
+        ],
         "onsets": {x.key: x.fields["time_h"] for x in said if x.kind == "onset"},
-    }  # fmt: skip
+    }
     detected = [hours[x.scan] for x in said if x.kind == "stage" and x.key == "tertiary"]
     out["detected_h"] = detected
     least = [x.fields for x in said if x.kind == "minimum_rate"]
@@ -155,8 +193,9 @@ def table(rows: list[dict[str, Any]]) -> str:
     ]
     share = [
         (r["true_h"] - r["min_h"]) / (r["offset_h"] - r["min_h"])
-        for r in turning if r["true_h"] is not None and r["offset_h"]
-    ]  # fmt: skip
+        for r in turning
+        if r["true_h"] is not None and r["offset_h"]
+    ]
     if share:
         lines.append(
             f"detection between least rate (0) and 0.2 % offset (1): median {np.median(share):.2f}, "
@@ -185,7 +224,8 @@ def table(rows: list[dict[str, Any]]) -> str:
             held.append(least["low_per_h"] * share <= r["min_rate"] <= least["high_per_h"] * share)
     if errors:
         lines.append(
-            f"least rate: median error {100 * np.median(errors):.2f} %, 90 % interval holds {100 * np.mean(held):.1f} %"
+            f"least rate: median error {100 * np.median(errors):.2f} %, "
+            f"90 % interval holds {100 * np.mean(held):.1f} %"
         )
     scans, cpu = sum(r["scans"] for r in rows), sum(r["cpu_s"] for r in rows)
     lines.append(f"{1e6 * cpu / scans:.1f} us a scan, {cpu / n:.2f} s a rig")
@@ -217,8 +257,15 @@ def main() -> int:
                 and (r["true_h"] is None or r["true_h"] > (r["offset_h"] or 1e99))
             )
             if r["false"] or late:
-                print("FALSE" if r["false"] else "LATE ", r["index"], r["kind"], f"end {r['end_h']:.0f} min {r['min_h']:.1f}",
-                      f"offset {r['offset_h']}", "told" if r["expected_h"] else "not told", f"n {r['scans']}")  # fmt: skip
+                print(
+                    "FALSE" if r["false"] else "LATE ",
+                    r["index"],
+                    r["kind"],
+                    f"end {r['end_h']:.0f} min {r['min_h']:.1f}",
+                    f"offset {r['offset_h']}",
+                    "told" if r["expected_h"] else "not told",
+                    f"n {r['scans']}",
+                )
                 for stage in r["stages"]:
                     print("      ", *stage)
     print(table(rows))
