@@ -2,7 +2,8 @@
 
 from daq.publish.access import BrokerSettings, PublishError, check_access, is_loopback, parse_url
 from daq.publish.listen import listen
-from daq.publish.publisher import Pace, Publisher
+from daq.publish.outage import Pace
+from daq.publish.publisher import Publisher
 from daq.publish.topics import rows_for
 
 __all__ = [

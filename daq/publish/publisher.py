@@ -30,33 +30,19 @@ from daq.lines import iso_utc
 from daq.publish import topics
 from daq.publish.access import BrokerSettings, check_access
 from daq.publish.link import REFUSED, Answer, Cause, Ended, Link, Up, Will
+from daq.publish.outage import Outage, Pace
 from daq.records import TICKS_PER_S
 from daq.store.rows import OutboxRow
 
 Backlog = Callable[[int, int], list[OutboxRow]]
 """(after sequence number, at most so many) -> rows that nobody has acknowledged, in order."""
-SHORT_MOST: Final = 3
-"""Connections in a row that the broker ended soon after accepting them, until a cause is suspected."""
 RECENT_S: Final = 2.0
 """A row acknowledged this shortly before the broker ended the connection may have died with it [s]."""
 FETCH: Final = 200
 BUFFER_MOST: Final = 2_000
 UNRECORDED_MOST: Final = 100
-
-
-@dataclass(frozen=True, slots=True)
-class Pace:
-    """How fast things are tried and given up [s]. Shorter only in tests."""
-
-    first_retry_s: float = 0.5
-    most_retry_s: float = 30.0
-    slow_retry_s: float = 60.0
-    connect_s: float = 5.0
-    ack_s: float = 8.0
-    heartbeat_s: float = 10.0
-    grace_s: float = 5.0
-    keepalive_s: int = 15
-    states_in_flight: int = 10
+STATUS_EXPIRES_S: Final = 86_400
+"""A status outlives its daemon at the broker for a day (MQTT 5); while the daemon lives it is renewed."""
 
 
 @dataclass(slots=True)
@@ -74,6 +60,7 @@ class _State:
 
     payload: bytes
     expires_s: int | None = None
+    set_at: float = 0.0
 
 
 _NOT_EMPTY: Final = _State(b"?")
@@ -166,25 +153,23 @@ class Publisher:
         self._up_at = 0.0
         self._proven = False
         self._flying: dict[int, _Flight] = {}
-        self._attempt = 0
-        self._short = 0
-        self._head = (0, 0)
         self._latest: tuple[OutboxRow, float] | None = None
         self._repeated = 0
         self._connect_at = 0.0
         self._beat_at = 0.0
-        # trouble
-        self._down_since: float | None = None
-        self._cause: Cause | None = None
-        self._told_down: Cause | None = None
-        self._told_at = 0.0
+        self._outage = Outage(
+            self._pace,
+            broker.place,
+            self._client_id,
+            lambda active, text: self._on_trouble("publisher_down", active, text),
+        )
 
     # --- from any thread -----------------------------------------------------------------
 
     def start(self, backlog: Backlog) -> None:
         """Begin to publish what ``backlog`` gives and what is offered."""
         self._backlog = backlog
-        self._down_since = self._clock()
+        self._outage.begin(self._clock())
         self._set_state(self._online, self._birth("online"))
         self._thread.start()
 
@@ -197,7 +182,7 @@ class Publisher:
         """Set the newest payload of a retained topic; an empty one clears it."""
         self._put(lambda: self._set_state(topic, payload, expires_s))
 
-    def status(self, test: str, told: Mapping[str, Any], expires_s: int | None = None) -> None:
+    def status(self, test: str, told: Mapping[str, Any], expires_s: int | None = STATUS_EXPIRES_S) -> None:
         """Set the retained status of a test (of the host where ``test`` is empty)."""
         self._put(lambda: self._take_status(test, told, expires_s))
 
@@ -261,9 +246,11 @@ class Publisher:
             self._fetch(now)
             self._send(now)
             self._check_answers(now)
-        if self._up and self._down_since is not None:
-            self._tell_up(now)
-        self._tell_down(now)
+            if self._proven:
+                self._outage.proven(now - self._up_at)
+        elif self._link is not None and now >= self._connect_at:
+            self._lose(Cause(f"{self._broker.place}: no answer within {3 * self._pace.connect_s:g} s"))
+        self._outage.look(now)
         self._wait(self._until_next(now))
         for event in self._link.pump() if self._link else ():
             self._hear(event)
@@ -311,10 +298,11 @@ class Publisher:
                 self._last = row.seq
 
     def _set_state(self, topic: str, payload: bytes, expires_s: int | None = None) -> None:
-        known = self._states.get(topic)
-        if known is not None and known.payload == payload:
+        known, now = self._states.get(topic), self._clock()
+        fresh = known is not None and (expires_s is None or now - known.set_at < expires_s / 2)
+        if known is not None and known.payload == payload and fresh:
             return
-        self._states[topic] = _State(payload, expires_s)
+        self._states[topic] = _State(payload, expires_s, now)
         self._dirty[topic] = None
 
     def _take_status(self, test: str, told: Mapping[str, Any], expires_s: int | None) -> None:
@@ -383,7 +371,11 @@ class Publisher:
             self._link.drop()
         rows = sorted((f.row for f in self._flying.values() if f.row is not None), key=lambda r: r.seq)
         if self._up and by_peer:
-            cause = self._ended_by_peer(cause, rows, now)
+            first = rows[0].seq if rows else None
+            cause, choked = self._outage.hung_up(cause, now - self._up_at, first)
+            if choked:
+                row = rows.pop(0)
+                self._refuse(_Flight(row.topic, now, row), f"the broker hangs up on it ({row.id})", now)
         self._link, self._up = None, False
         self._pending.extendleft(reversed(rows))
         if by_peer and self._latest is not None and now - self._latest[1] < RECENT_S:
@@ -391,66 +383,7 @@ class Publisher:
             self._repeated = self._latest[0].seq  # once is enough, however often the broker dies
         self._latest = None
         self._flying.clear()
-        if self._down_since is None:
-            self._down_since = now
-        self._cause = cause
-        if cause.settled:
-            wait = self._pace.slow_retry_s
-        else:
-            wait = min(self._pace.first_retry_s * 2.0 ** min(self._attempt, 20), self._pace.most_retry_s)
-        self._attempt += 1
-        self._connect_at = now + wait * self._random.uniform(0.5, 1.0)
-
-    def _ended_by_peer(self, cause: Cause, rows: list[OutboxRow], now: float) -> Cause:
-        """Suspect what ends one connection after the other; not every broker says why it hangs up."""
-        if now - self._up_at >= self._pace.grace_s:
-            self._short, self._head = 0, (0, 0)
-            return cause
-        self._short += 1
-        if rows:
-            seq, times = self._head
-            self._head = (rows[0].seq, times + 1 if rows[0].seq == seq else 1)
-            if self._head[1] >= SHORT_MOST:
-                # one message that the broker chokes on must not keep the others back for ever
-                row = rows.pop(0)
-                self._refuse(_Flight(row.topic, now, row), f"the broker hangs up on it ({row.id})", now)
-                self._short, self._head = 0, (0, 0)
-                return cause
-        if self._short < SHORT_MOST or cause.settled:
-            return cause
-        text = (
-            f"hangs up soon after accepting: does another client use the same client id {self._client_id!r}?"
-        )
-        return Cause(f"{self._broker.place}: {text}", settled=True)
-
-    def _tell_down(self, now: float) -> None:
-        if self._link is not None and not self._up and now >= self._connect_at:
-            self._lose(Cause(f"{self._broker.place}: no answer within {3 * self._pace.connect_s:g} s"))
-        if self._down_since is None:
-            return
-        cause = self._cause or Cause(f"{self._broker.place}: no answer yet")
-        if not cause.settled and now - self._down_since < self._pace.grace_s:
-            return
-        known = self._told_down
-        if known is None or (
-            cause != known and (cause.settled or now - self._told_at >= self._pace.slow_retry_s)
-        ):
-            self._told_down, self._told_at = cause, now
-            self._on_trouble("publisher_down", True, cause.text)
-
-    def _tell_up(self, now: float) -> None:
-        """The broker has acknowledged something: only that proves a working connection.
-
-        After several that ended soon it must also last a while.
-        """
-        if not self._proven or (self._short >= SHORT_MOST and now - self._up_at < self._pace.grace_s):
-            return
-        self._attempt = 0
-        self._down_since = None
-        self._cause = None
-        if self._told_down is not None:
-            self._told_down = None
-            self._on_trouble("publisher_down", False, f"{self._broker.place} acknowledges again")
+        self._connect_at = now + self._outage.lost(cause, now)
 
     def _check_answers(self, now: float) -> None:
         oldest = min((f.at for f in self._flying.values()), default=now)
@@ -536,7 +469,7 @@ class Publisher:
         if flight is None:
             return
         self._proven = True
-        self._tell_up(now)
+        self._outage.proven(now - self._up_at)
         if answer.code >= REFUSED:
             self._refuse(flight, answer.name, now)
             return

@@ -255,6 +255,22 @@ def test_readings_expire_and_events_do_not(tmp_path: Path) -> None:
             ear.close()
 
 
+def test_a_status_that_does_not_change_is_renewed_before_it_expires(tmp_path: Path) -> None:
+    """A frame at rest must not vanish from the broker while its daemon lives; nor be sent for nothing."""
+    with running(Mosquitto(tmp_path)) as m, house(BrokerSettings(port=m.port)) as h:
+        ear = Ear(m.port, "upturn/1/s/status/#")
+        try:
+            for _ in range(20):
+                h.publisher.status("H1", {"at_tick": 0, "alarms": []}, expires_s=1)
+                h.publisher.status("H2", {"at_tick": 0, "alarms": []})
+                time.sleep(0.1)
+            counts = Counter(topic for topic, _, _ in ear.messages)
+            assert counts["upturn/1/s/status/H2/-"] == 1
+            assert 2 <= counts["upturn/1/s/status/H1/-"] <= 5
+        finally:
+            ear.close()
+
+
 def test_an_exception_in_a_callback_costs_a_connection_and_no_alarm(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
