@@ -311,11 +311,13 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
         np.concatenate((np.flatnonzero(d.knots < 1.0 - s), smooth, [c + j])) for j, s in enumerate(d.since)
     ]
     kept = [at for at in order[:MODELS] if cells[at].log_like > best - KEEP]
+    # shorter stretches have more places: weighted by their length, as scan statistics are
+    prior = np.log(d.since / np.sum(d.since))
     l1 = np.full((len(kept), k), -np.inf)
     rss1 = np.full((len(kept), k), np.nan)
     for i, at in enumerate(kept):
         cell = cells[at]
-        if i and noise.log_mean(l1[0]) - np.log(k) - cells[kept[0]].log_like < QUIET:
+        if i and noise.log_mean(l1[0] + prior) - cells[kept[0]].log_like < QUIET:
             break
         g = cell.rest
         for j, sel in enumerate(sels):
@@ -326,9 +328,9 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
             l1[i, j] = like(cell.const, rss1[i, j])
     per_onset = np.array([noise.log_mean(l1[:, j]) for j in range(k)])
     if np.isfinite(l1).any(axis=1).sum() == 1:
-        against = float(noise.log_mean(l1[0]) - np.log(k) - cells[kept[0]].log_like)
+        against = float(noise.log_mean(l1[0] + prior) - cells[kept[0]].log_like)
     else:
-        against = float(noise.log_mean(per_onset) - np.log(k) - total0)
+        against = float(noise.log_mean(per_onset + prior) - total0)
     step = _step_gain(d, [cells[at] for at in kept[:3]], like) if against > QUIET and steps > 1 else 0.0
     j = int(np.argmax(per_onset))
     i = int(np.argmax(l1[:, j]))

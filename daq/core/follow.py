@@ -40,6 +40,13 @@ each side. Cube-root creep changes by 37 % over any such half, logarithmic creep
 steady."""
 FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
+BRIEF: Final = 0.08
+LASTING: Final = 0.03
+"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what drift of a few
+hours does in so short a stretch goes back in the next, while damage goes on."""
+TAKEN_BACK: Final = -1.0
+BACK_LOOKS: Final = 3
+"""A detection is withdrawn when at this many late looks on end the falling family fits better by a factor e."""
 CALM: Final = 1.0
 """Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25
@@ -70,6 +77,7 @@ class FollowState:
     models: FloatArray = field(default_factory=_no_models)
     log_ratio: float = 0.0
     falling_looks: int = 0
+    rising_h: float | None = None
     rise_ratio: float = 1.0
     model: tuple[float, float] = (0.1, 1.0)
     minimum: Minimum | None = None
@@ -257,6 +265,12 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
         threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
         s = replace(s, models=e.noise, model=e.model, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
         cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h, _accelerates(r))
+        if cue is Cue.RATE_ROSE and e.since < BRIEF:
+            s = replace(s, rising_h=now if s.rising_h is None else s.rising_h)
+            if s.rising_h is not None and now < s.rising_h * (1.0 + LASTING):
+                cue = None
+        else:
+            s = replace(s, rising_h=None)
         if cue is Cue.RATE_ROSE:
             return _turn(s, rules, e, scan, tick, out)
         if cue is Cue.RATE_ROSE_EARLY:
@@ -397,9 +411,9 @@ def _look_late(s: FollowState, rules: TestRules, scan: int, tick: int, out: list
     if s.rise_ratio < 2.0 and s.offset_h is None:
         e = _weigh(s, rules, _windowed(s))
         s = replace(s, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio, models=e.noise, model=e.model)
-        falling = s.falling_looks + 1 if e.against_falling < 0.0 else 0
+        falling = s.falling_looks + 1 if e.against_falling < TAKEN_BACK else 0
         s = replace(s, falling_looks=falling)
-        if falling >= 2:
+        if falling >= BACK_LOOKS:
             why = "the rate has gone back to what it was: the rise was not tertiary creep"
             s = _move(s, Cue.RISE_TAKEN_BACK, scan, tick, now, None, why, out)
             s = replace(s, falling_looks=0, rise_5_h=None, offset_h=None)

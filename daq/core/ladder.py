@@ -22,7 +22,7 @@ from daq.records import FloatArray
 
 LEAF_SHARE: Final = 0.004
 """Greatest span of a leaf as a share of elapsed time."""
-LEAF_SCANS: Final = 128
+LEAF_SCANS: Final = 256
 """Greatest number of scans in a leaf: bounds the raw rows that the state must hold."""
 
 (

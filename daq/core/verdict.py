@@ -14,7 +14,7 @@ from typing import Final
 from daq.core.evidence import Evidence
 from daq.core.stages import Cue, Stage
 
-BEYOND_VILLE: Final = 4.0
+BEYOND_VILLE: Final = 6.0
 """What is asked beyond log(1/alpha), because the noise model and the family of curves are fitted: from
 campaigns."""
 EARLY: Final = 0.12
@@ -24,7 +24,7 @@ least rate at 12 % of life and more (open measured curves), and say so by 20 to 
 too long still leaves them time before their 0.2 % offset."""
 EARLY_RISE: Final = 3.0
 """Unless the rate has risen this much: more than inverse primary creep does (1.2 to 2.5-fold)."""
-LEAST_RISE: Final = 1.02
+LEAST_RISE: Final = 1.03
 """A rise by less than what one kelvin does to the rate (2 to 10 %) is not worth a word: no furnace is known
 better."""
 OFFSET: Final = 0.002
@@ -33,11 +33,14 @@ WELL_ON: Final = 0.2
 """Share of the expected life from which a rise without a fall before it is called tertiary all the same:
 inverse
 primary creep is over within the first tenth, and the expectation is trusted within a factor of two."""
+ABRUPT: Final = 8.0
+"""A rise by more than this where none was seen a look before is a jerk or a slip, unless the evidence is beyond
+all doubt: damage and necking raise the rate by tens of per cent between looks."""
 FALL_GAIN: Final = 3.0
 """Log likelihood that a fall before the onset must gain: one in twenty for one more column."""
 FALL_RATIO: Final = 1.08
 """And the rate must have fallen by more than a kelvin or two would make it."""
-STEADY_SHARE: Final = 0.4
+STEADY_SHARE: Final = 0.6
 """Share of the elapsed time that a steady stretch before the onset must fill where there was no fall."""
 
 
@@ -50,6 +53,8 @@ def judge(
     asked for where there was no fall, since incubation saturates and tertiary creep does not.
     """
     if e.log_ratio < threshold or e.rise_ratio < LEAST_RISE:
+        return None
+    if e.rise_ratio > ABRUPT and e.log_ratio < 2.5 * threshold:
         return None
     fell = e.fall_gain >= FALL_GAIN and e.fall_ratio >= FALL_RATIO
     steady = 1.0 - e.since >= STEADY_SHARE

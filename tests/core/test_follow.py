@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import itertools
 from typing import Any
 
@@ -179,3 +180,79 @@ def test_swapping_the_sides_changes_no_time() -> None:
     )
     _, said = run(swapped, [])
     assert [(c.scan, c.kind) for c in said] == [(c.scan, c.kind) for c in WHOLE[1]]
+
+
+def test_a_furnace_that_drifts_by_three_kelvin_is_no_stage() -> None:
+    """+3 K at 600 C with Q = 300 kJ/mol is a rate x 1.15199 (CHECKVALUES 7.1), and 17.3 microstrain per K apparent."""
+    t = np.linspace(0.0, 800.0, 1600)
+    temp = 600.0 + 3.0 * np.clip((t - 400.0) / 200.0, 0.0, 1.0)
+    factor = np.exp(300e3 / 8.314462618 * (1 / 873.15 - 1 / (temp + 273.15)))
+    assert factor[-1] == pytest.approx(1.15199, abs=1e-5)
+    own = np.concatenate(([0.0], np.cumsum(np.diff(t) * 0.5 * (factor[1:] + factor[:-1]))))
+    rng = np.random.default_rng(2)
+    e = creep(own, 2000.0, 2.0) + 17.3e-6 * (temp - 600.0) + rng.normal(0.0, 1e-5, t.size)
+    _, said = run(block(t, e, temp=temp + rng.normal(0.0, 0.1, t.size)), [])
+    assert {c.key for c in said if c.kind == "stage"} <= {"primary", "secondary"}
+
+
+@pytest.mark.parametrize("expected", [None, 1000.0])
+def test_inverse_primary_is_a_stage_of_its_own(expected: float | None) -> None:
+    """The rate rises 1.7-fold within the first twelfth, then falls to a plateau and stays there."""
+    t = np.linspace(0.0, 1000.0, 2000)
+    x = t / 1000.0
+    rate = 1.0 + 0.7 * np.where(x < 0.08, x / 0.08, np.exp(-(((x - 0.08) / 0.1) ** 2)))
+    e = np.concatenate(([0.0], np.cumsum(np.diff(t) * 0.5 * (rate[1:] + rate[:-1])))) * 3e-5
+    rules = dataclasses.replace(RULES, expected_rupture_h=expected)
+    _, said = run(block(t, e + np.random.default_rng(1).normal(0.0, 1e-5, t.size)), [], rules)
+    stages = [c.key for c in said if c.kind == "stage"]
+    assert "inverse primary" in stages
+    assert "tertiary" not in stages
+
+
+def test_a_slip_of_one_side_is_taken_out_and_named() -> None:
+    """The raw record keeps it, the curve goes on."""
+    t = np.linspace(0.0, 300.0, 900)
+    rng = np.random.default_rng(3)
+    e = creep(t, 1000.0)
+    a, b = e + rng.normal(0.0, 1e-5, t.size), e + rng.normal(0.0, 1e-5, t.size)
+    a[500:] -= 6e-4
+    s, said = run(block(t, a, b), [])
+    steps = [c.fields for c in said if c.kind == "step"]
+    assert len(steps) == 1
+    assert steps[0]["channels"] == ["left"]
+    assert steps[0]["size"] == pytest.approx(-3e-4, abs=1e-5)
+    assert steps[0]["time_h"] == pytest.approx(t[500], abs=0.5)
+    assert follow.status(s, RULES)["strain"] == pytest.approx(e[-1], abs=2e-5)
+
+
+def test_a_side_that_comes_and_goes_leaves_the_mean_where_it_is() -> None:
+    """The half difference of the sides stands in for the missing one."""
+    t = np.linspace(0.0, 300.0, 900)
+    e = creep(t, 1000.0)
+    b = e + 0.003
+    b[400:460] = np.nan
+    s, said = run(block(t, e + np.random.default_rng(0).normal(0, 1e-6, t.size), b), [])
+    assert not [c for c in said if c.kind == "step"]
+    assert follow.status(s, RULES)["strain"] == pytest.approx(e[-1] + 0.0015, abs=1e-5)
+
+
+def test_a_stress_change_begins_a_new_segment() -> None:
+    """Its own primary and its own least rate."""
+    t = np.linspace(0.0, 300.0, 900)
+    e = creep(t, 1000.0)
+    b = block(t, e)
+    s, _ = run(part(b, 0, 600), [])
+    s, said = follow.tell(s, RULES, "stress_changed", int(b.tick[599]), float(b.t_s[599]), 599)
+    assert [c.key for c in said if c.kind == "stage"] == ["primary"]
+    assert follow.curve(s)[0].size == 0
+    s, _ = follow.follow(s, RULES, part(b, 600, 900))
+    assert follow.curve(s)[0].size > 20
+
+
+def test_the_share_of_the_shrinking_section_is_told() -> None:
+    """Under constant load the rate rises by exp(n x strain since the least rate) though the material does not change."""
+    rules = dataclasses.replace(RULES, stress_exponent=5.0)
+    t = np.linspace(0.0, 900.0, 1500)
+    _, said = run(block(t, creep(t, 1000.0) + np.random.default_rng(1).normal(0, 1e-5, t.size)), [], rules)
+    why = next(c.fields["why"] for c in said if c.key == "tertiary")
+    assert "shrinking section alone explains" in why

@@ -126,6 +126,10 @@ def run_one(job: tuple[int, int]) -> dict[str, Any]:
         "rise5_h": truth.rise_5_percent_h,
         "min_rate": truth.minimum_rate_per_h,
         "ruptured": truth.rupture_h is not None,
+        "seen_h": float(
+            block.t_s[:n][np.isfinite(block.strain_a[:n]) | np.isfinite(block.strain_b[:n])].max()
+        )
+        / 3600,
         "scans": n,
         "cpu_s": spent,
         "expected_h": rules.expected_rupture_h,
@@ -184,7 +188,10 @@ def table(rows: list[dict[str, Any]]) -> str:
     n = len(rows)
     false = sum(r["false"] for r in rows)
     lo, hi = clopper_pearson(false, n)
-    turning = [r for r in rows if r["turns"] and r["ruptured"]]
+    # a record whose extensometer was taken off before the 0.2 % offset cannot miss what it does not show
+    turning = [
+        r for r in rows if r["turns"] and r["ruptured"] and r["seen_h"] > (r["offset_h"] or r["end_h"])
+    ]
     missed = [r for r in turning if r["true_h"] is None]
     late = [r for r in turning if r["true_h"] is not None and r["offset_h"] and r["true_h"] > r["offset_h"]]
     lines = [
@@ -203,7 +210,7 @@ def table(rows: list[dict[str, Any]]) -> str:
         )
     ratios = []
     for r in rows:
-        if r["turns"] and r["limit_h"] is not None:
+        if r["turns"] and r["limit_h"] is not None and r["seen_h"] > r["limit_h"]:
             start = r["first_h"] if r["first_h"] is not None else r["min_h"]
             if r["true_h"] is not None and r["limit_h"] > start:
                 ratios.append((r["true_h"] - start) / (r["limit_h"] - start))
@@ -254,6 +261,7 @@ def main() -> int:
             late = (
                 r["turns"]
                 and r["ruptured"]
+                and r["seen_h"] > (r["offset_h"] or r["end_h"])
                 and (r["true_h"] is None or r["true_h"] > (r["offset_h"] or 1e99))
             )
             if r["false"] or late:

@@ -1,0 +1,64 @@
+"""What evidence means for the stage: order, earliness, materiality."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from daq.core import verdict
+from daq.core.evidence import Evidence
+from daq.core.stages import Cue, Stage
+
+NONE = np.zeros((0, 4))
+
+
+def evidence(**changed: float) -> Evidence:
+    """Return a plain case for tertiary, changed where the test wants it."""
+    plain: dict[str, float] = {
+        "log_ratio": 20.0, "against_falling": 20.0, "since": 0.3, "fall_gain": 50.0, "fall_ratio": 3.0,
+        "rise_ratio": 1.2, "offset": 2e-4, "minimum_share": 0.5,
+    }  # fmt: skip
+    return Evidence(**(plain | changed), noise=NONE, x=np.zeros(0), rates=np.zeros(0), model=(0.1, 1.0))
+
+
+def judge(e: Evidence, now_h: float = 500.0, expected_h: float | None = None, **more: object) -> Cue | None:
+    stage = more.get("stage", Stage.SECONDARY)
+    assert isinstance(stage, Stage)
+    return verdict.judge(e, stage, now_h, 11.3, expected_h, bool(more.get("accelerates", True)))
+
+
+def test_a_rise_after_a_fall_is_tertiary() -> None:
+    """The order that counts."""
+    assert judge(evidence()) is Cue.RATE_ROSE
+
+
+@pytest.mark.parametrize("changed", [{"log_ratio": 11.2}, {"rise_ratio": 1.01}, {"rise_ratio": 20.0}])
+def test_weak_small_or_abrupt_rises_are_none(changed: dict[str, float]) -> None:
+    """Noise, a kelvin, a jerk."""
+    assert judge(evidence(**changed)) is None
+
+
+def test_a_rise_from_the_start_is_inverse_primary() -> None:
+    """No fall and no steady stretch before it."""
+    e = evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88)
+    assert judge(e) is Cue.RATE_ROSE_EARLY
+    assert judge(e, stage=Stage.INVERSE_PRIMARY) is None
+
+
+def test_a_steady_stretch_stands_for_a_fall() -> None:
+    """Some materials show no primary creep."""
+    assert judge(evidence(fall_gain=0.0, fall_ratio=1.0, since=0.3)) is Cue.RATE_ROSE
+
+
+def test_early_in_the_expected_life_a_dip_is_not_believed() -> None:
+    """Recovery of an early dip of the rate fooled simpler detectors."""
+    assert judge(evidence(), 50.0, 1000.0) is None
+    assert judge(evidence(), 300.0, 1000.0) is Cue.RATE_ROSE
+    assert judge(evidence(rise_ratio=4.0, offset=0.003), 50.0, 1000.0) is Cue.RATE_ROSE
+
+
+def test_well_into_the_expected_life_a_rise_without_a_fall_counts_if_it_goes_on() -> None:
+    """Damage from the first hour on accelerates; incubation saturates."""
+    e = evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88)
+    assert judge(e, 300.0, 1000.0) is Cue.RATE_ROSE
+    assert judge(e, 300.0, 1000.0, accelerates=False) is Cue.RATE_ROSE_EARLY
