@@ -42,11 +42,13 @@ FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
 BRIEF: Final = 0.08
 LASTING: Final = 0.03
-"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what drift of a few
+"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what drift
+of a few
 hours does in so short a stretch goes back in the next, while damage goes on."""
 TAKEN_BACK: Final = -1.0
 BACK_LOOKS: Final = 3
-"""A detection is withdrawn when at this many late looks on end the falling family fits better by a factor e."""
+"""A detection is withdrawn when at this many late looks on end the falling family fits better by a factor
+e."""
 CALM: Final = 1.0
 """Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25

@@ -34,7 +34,8 @@ WELL_ON: Final = 0.2
 inverse
 primary creep is over within the first tenth, and the expectation is trusted within a factor of two."""
 ABRUPT: Final = 8.0
-"""A rise by more than this where none was seen a look before is a jerk or a slip, unless the evidence is beyond
+"""A rise by more than this where none was seen a look before is a jerk or a slip, unless the evidence is
+beyond
 all doubt: damage and necking raise the rate by tens of per cent between looks."""
 FALL_GAIN: Final = 3.0
 """Log likelihood that a fall before the onset must gain: one in twenty for one more column."""

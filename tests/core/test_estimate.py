@@ -18,7 +18,8 @@ def theta(t: np.ndarray) -> np.ndarray:
 
 
 def kachanov(t: np.ndarray) -> np.ndarray:
-    """Constructed set: least rate 1e-5 /h at once, rupture at 12 500 h, q 0.375 (closed form, CHECKVALUES 5.6)."""
+    """Constructed set: least rate 1e-5 /h at once, rupture at 12 500 h, q 0.375 (closed form, CHECKVALUES
+    5.6)."""
     return 1e-5 * 12_500.0 / 0.375 * (1 - (1 - t / 12_500.0) ** 0.375)
 
 
@@ -31,7 +32,8 @@ def found(t: np.ndarray, strain: np.ndarray) -> tuple[estimate.Minimum, float | 
 
 
 def test_theta_curve_gives_the_three_onsets_within_the_sampling_step() -> None:
-    """326.002 h, 403.644 h, 673.459 h at a least rate of 2.3032597244e-5 /h: computed from the closed form."""
+    """326.002 h, 403.644 h, 673.459 h at a least rate of 2.3032597244e-5 /h: computed from the closed
+    form."""
     t = np.arange(0.0, 1000.0, 1.0)
     m, rise, offset = found(t, theta(t))
     assert m.rate == pytest.approx(2.3032597244e-5, rel=1e-3)

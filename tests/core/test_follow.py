@@ -183,7 +183,8 @@ def test_swapping_the_sides_changes_no_time() -> None:
 
 
 def test_a_furnace_that_drifts_by_three_kelvin_is_no_stage() -> None:
-    """+3 K at 600 C with Q = 300 kJ/mol is a rate x 1.15199 (CHECKVALUES 7.1), and 17.3 microstrain per K apparent."""
+    """+3 K at 600 C with Q = 300 kJ/mol is a rate x 1.15199 (CHECKVALUES 7.1), and 17.3 microstrain per K
+    apparent."""
     t = np.linspace(0.0, 800.0, 1600)
     temp = 600.0 + 3.0 * np.clip((t - 400.0) / 200.0, 0.0, 1.0)
     factor = np.exp(300e3 / 8.314462618 * (1 / 873.15 - 1 / (temp + 273.15)))
@@ -250,7 +251,8 @@ def test_a_stress_change_begins_a_new_segment() -> None:
 
 
 def test_the_share_of_the_shrinking_section_is_told() -> None:
-    """Under constant load the rate rises by exp(n x strain since the least rate) though the material does not change."""
+    """Under constant load the rate rises by exp(n x strain since the least rate) though the material does
+    not change."""
     rules = dataclasses.replace(RULES, stress_exponent=5.0)
     t = np.linspace(0.0, 900.0, 1500)
     _, said = run(block(t, creep(t, 1000.0) + np.random.default_rng(1).normal(0, 1e-5, t.size)), [], rules)
