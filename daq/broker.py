@@ -58,7 +58,7 @@ class EmbeddedBroker:
         return self
 
     def stop(self) -> None:
-        """End its process. Safe to call twice."""
+        """End its process. May be called twice."""
         if self._broker is not None:
             self._broker.stop()
             self._broker = None

@@ -128,7 +128,7 @@ def test_a_broker_absent_at_the_start_is_found_when_it_comes(tmp_path: Path) -> 
 def test_a_broker_killed_in_the_middle_loses_nothing_and_repeats_at_most_one_each_time(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    """Three kills while a backlog drains; the broker keeps its sessions on disk (FAULTS: autosave)."""
+    """Three kills while a backlog drains; the broker keeps its sessions on disk."""
     m = Mosquitto(tmp_path, SURVIVING + "allow_anonymous true\nmax_queued_messages 0\n")
     sent: list[str] = []
     fly = Link.publish

@@ -167,7 +167,7 @@ def test_the_daemon_cannot_read_and_the_viewer_cannot_write(sample: Sample) -> N
 
 
 def test_the_sample_keeps_retained_states_when_the_broker_is_killed(sample: Sample) -> None:
-    """Without the autosave lines a killed mosquitto forgets them (FAULTS measured it)."""
+    """Without the autosave lines a killed mosquitto forgets them."""
     with house(sample.access()) as h:
         h.publisher.offer(h.outbox.put("upturn/1/s/alarm/H1/-/rupture/-", b'{"state":"unacknowledged"}'))
         h.publisher.offer(h.outbox.add(1))
@@ -298,7 +298,7 @@ def test_a_denied_topic_is_asked_once_a_try_not_once_a_row(tmp_path: Path) -> No
 
 
 def test_the_older_protocol_takes_a_denied_topic_for_a_success(tmp_path: Path) -> None:
-    """Why MQTT 5 is the default: 3.1.1 has no word for no, and the row is gone (FAULTS, 1.4)."""
+    """Why MQTT 5 is the default: 3.1.1 has no word for no, and the row is gone (measured with mosquitto 2.0.11)."""
     acl = tmp_path / "acl"
     acl.write_text("topic readwrite upturn/1/s/host/#\n")
     m = Mosquitto(tmp_path, f"allow_anonymous true\nacl_file {acl}\n")
