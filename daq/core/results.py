@@ -40,8 +40,8 @@ def _none() -> FloatArray:
 @dataclass(frozen=True, slots=True)
 class ResultsState:
     """``noted``: fields of findings kept, per kind; ``counts``: how many there were. ``recent`` (k, 2): test
-    time [s] and mean strain of the last scans that had one. ``started_tick``: full load; ``paused_tick``: since
-    when the load is taken off by entry, ``paused_ticks``: how long it was off before."""
+    time [s] and mean strain of the last scans that had one. ``started_tick``: full load; ``paused_tick``:
+    since when the load is taken off by entry, ``paused_ticks``: how long it was off before."""
 
     tallies: Tallies
     mean: MeanState = MeanState()  # noqa: RUF009

@@ -120,6 +120,7 @@ class TestRules:
 
     ``starts``: ``first_scan``, ``entry``, ``load_channel`` or an ISO 8601 instant. ``false_share``
     is the share of tests in which a false tertiary detection is accepted (sets the evidence asked for).
+    ``monkman_grant_constant`` C and exponent m: rupture time [h] = C / (least rate [1/h])^m, where known.
     """
 
     __test__ = False  # not a test class, whatever a collector thinks of its name
@@ -142,6 +143,8 @@ class TestRules:
     scan_every_s: float | None = None
     limits: Limits = Limits()
     false_share: float = 1.0 / 200.0
+    monkman_grant_constant: float | None = None
+    monkman_grant_exponent: float = 1.0
 
 
 def rules_to_json(rules: TestRules) -> str:
