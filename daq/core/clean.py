@@ -7,12 +7,10 @@ comes back, a spike. A step is taken out of what follows by an offset, never out
 and the ladder begins a new segment, whose level the estimator may fit anew: so the neutralisation can be
 undone.
 
-Thresholds are in units of the noise of single scans, measured on the scans themselves as the median of second
-differences (insensitive to creep, drift and steps), never below the resolution seen. Suspected beyond four
-standard
-deviations (one Gaussian scan in 16 000: a wrong suspicion only costs a wait of four scans), judged beyond six
-(one in 5e8).
-"""
+Thresholds are in units of the noise of single scans, measured on the scans themselves as the median of
+second differences (insensitive to creep, drift and steps), never below the resolution seen. Suspected
+beyond four standard deviations (one Gaussian scan in 16 000: a wrong suspicion only costs a wait of four
+scans), judged beyond six (one in 5e8)."""
 
 from __future__ import annotations
 

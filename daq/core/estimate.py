@@ -1,13 +1,11 @@
 """Creep rates from the ladder: the least one with an honest interval, the rate now, the three onsets.
 
-Local polynomials in time by generalised least squares on block means, once for each noise model that matters
-(``evidence``) and averaged: the interval then carries what is not known about drift. What room and specimen
-temperature do to the extensometer is fitted beside. A polynomial over the stretch in which the rate lies
-within
-some 20 % of its least beats a straight line over the 2 % stretch: it may use far more of the record, and
-its bend is
-fitted, not assumed away. Degree three to six by the corrected criterion of Akaike (Hurvich & Tsai 1989).
-"""
+Local polynomials in time by generalised least squares on block means, once for each noise model that
+matters (``evidence``) and averaged: the interval then carries what is not known about drift. What room and
+specimen temperature do to the extensometer is fitted beside. A polynomial over the stretch in which the
+rate lies within some 20 % of its least beats a straight line over the 2 % stretch: it may use far more of
+the record, and its bend is fitted, not assumed away. Degree three to six by the corrected criterion of
+Akaike (Hurvich & Tsai 1989)."""
 
 from __future__ import annotations
 
@@ -29,8 +27,7 @@ PRIOR_DOF: Final = 12.0
 """How much the level of noise found on the whole record counts against that of the stretch fitted."""
 BENT: Final = 0.03
 """Bias of a polynomial of fitting degree, as a share of the bend within its stretch: seen on the theta,
-damage and
-omega curves of the constructed checks, where it is 1 to 4 %."""
+damage and omega curves of the constructed checks, where it is 1 to 4 %."""
 BENT_LINE: Final = 0.3
 """The same for a straight line, where there are too few blocks for more: a third of a parabola's height."""
 
@@ -233,8 +230,7 @@ def rate_now(rungs: FloatArray, models: FloatArray, share: float = 0.1) -> tuple
 
 def coarse_rates(rungs: FloatArray, share: float = 0.04) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return (times, rates, scan counts) of groups of rungs that each span about ``share`` of their
-    distance from
-    either end, by moments alone; cheap."""
+    distance from either end, by moments alone; cheap."""
     t = rungs[:, ladder.T]
     now = float(rungs[-1, ladder.END])
     times, rates, counts = [], [], []

@@ -7,16 +7,13 @@ Two families of curves are compared on the block means of the ladder, in tempera
 * *and then it rises*: the same plus one convex departure (t - onset)^2 for an onset on a grid.
 
 What else bends a curve takes part in both: apparent strain of specimen and room temperature (lagged), an
-error of the activation energy, sizes of slips, the day wave where no room temperature is logged. The noise is
-integrated over a grid (``core.noise``) in both. The evidence is the log of the ratio of the two integrated
-likelihoods
-(restricted likelihood, scale profiled), the onset averaged over its grid, so that it behaves as a likelihood
-ratio does: at most a share alpha of tests without a rise ever see it above log(1/alpha) (Ville 1939) where
-the model
-is right, and what the threshold must add because the model is fitted was found on simulated rigs.
-A step that nobody saw is a third explanation: evidence is counted only as far as a step at any one time
-would not do as well.
-"""
+error of the activation energy, sizes of slips, the day wave where no room temperature is logged. The noise
+is integrated over a grid (``core.noise``) in both. The evidence is the log of the ratio of the two
+integrated likelihoods (restricted likelihood, scale profiled), the onset averaged over its grid, so that
+it behaves as a likelihood ratio does: at most a share alpha of tests without a rise ever see it above
+log(1/alpha) (Ville 1939) where the model is right, and what the threshold must add because the model is
+fitted was found on simulated rigs. A step that nobody saw is a third explanation: evidence is counted only
+as far as a step at any one time would not do as well."""
 
 from __future__ import annotations
 
@@ -71,16 +68,12 @@ class Design(NamedTuple):
 class Evidence(NamedTuple):
     """What one look found.
 
-    ``log_ratio``: evidence for a rise against the better of "never rises" and "a step", ``against_falling``
-    against the first alone. ``since``: share of the elapsed equivalent time since the most likely onset.
-    ``fall_gain``: log likelihood gained by letting the rate fall before the onset, ``fall_ratio`` first
-    rate over
-    least, ``rise_ratio`` rate now over least, ``offset`` strain above the tangent at the least rate, all on
-    the best
-    fitting curve. ``noise``: (k, 4) memory [h], drift variance, variance of one scan [strain^2], weight, of
-    the
-    noise models that matter.
-    """
+    ``log_ratio``: evidence for a rise against the better of "never rises" and "a step",
+    ``against_falling`` against the first alone. ``since``: share of the elapsed equivalent time since the
+    most likely onset. ``fall_gain``: log likelihood gained by letting the rate fall before the onset,
+    ``fall_ratio`` first rate over least, ``rise_ratio`` rate now over least, ``offset`` strain above the
+    tangent at the least rate, all on the best fitting curve. ``noise``: (k, 4) memory [h], drift variance,
+    variance of one scan [strain^2], weight, of the noise models that matter."""
 
     log_ratio: float
     against_falling: float
@@ -187,7 +180,7 @@ def _knots(x: FloatArray) -> FloatArray:
     knots = []
     last = 0.0
     for v in x[2:-2]:
-        if v - last >= min(0.1 * v, 0.03 + 0.1 * (1.0 - v)):
+        if v < 0.999 and v - last >= min(0.1 * v, 0.03 + 0.1 * (1.0 - v)):
             knots.append(float(v))
             last = float(v)
     return np.array(knots)

@@ -1,11 +1,9 @@
 """Follows one test: scans in, stages, least rate, onsets and steps out.
 
 Scans become leaves (``intake``), leaves the ladder (``ladder``). At *looks*, spaced geometrically in time
-so that
-their number grows with the logarithm of the test, the evidence for a rising rate is weighed (``evidence``),
-judged (``verdict``) and moves the stage table (``stages``). Rates come from ``estimate``.
-The state is pure and canonical; nothing depends on how scans were cut into blocks.
-"""
+so that their number grows with the logarithm of the test, the evidence for a rising rate is weighed
+(``evidence``), judged (``verdict``) and moves the stage table (``stages``). Rates come from ``estimate``.
+The state is pure and canonical; nothing depends on how scans were cut into blocks."""
 
 from __future__ import annotations
 
@@ -27,28 +25,27 @@ from daq.records import FloatArray
 LOOKS: Final = ((4.0, 0.008), (1.0, 0.02), (-np.inf, 0.05))
 """Spacing of looks as a share of elapsed time, by the evidence there is at least. Evidence grows with the
 fourth to seventh power of the time since onset, so from 1 to a verdict that time grows by half: looks are
-never so far
-apart that much is lost."""
+never so far apart that much is lost."""
 LOOK_LATE: Final = 0.05
 """And in tertiary, where only the onsets still to come and a withdrawal are looked for."""
 LEAST_RUNGS: Final = 24
 """Rungs needed for a look: three times the parameters of the plainest curve with a rise."""
 STEADY_CHANGE: Final = 0.25
 """Secondary: the rate changed by less than this over the last half of the elapsed time, with 95 %
-confidence on
-each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %: neither is
-steady."""
+confidence on each side. Cube-root creep changes by 37 % over any such half, logarithmic creep by 50 %:
+neither is steady."""
 FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
 BRIEF: Final = 0.08
 LASTING: Final = 0.03
-"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what drift
-of a few
-hours does in so short a stretch goes back in the next, while damage goes on."""
+"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what
+drift of a few hours does in so short a stretch goes back in the next, while damage goes on."""
 TAKEN_BACK: Final = -1.0
 BACK_LOOKS: Final = 3
 """A detection is withdrawn when at this many late looks on end the falling family fits better by a factor
 e."""
+SPARE: Final = 15
+"""Blocks needed beyond the free columns: with fewer, room and specimen temperature are left out."""
 CALM: Final = 1.0
 """Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25
@@ -214,6 +211,8 @@ def _weigh(s: FollowState, rules: TestRules, r: FloatArray) -> evidence.Evidence
         q_error = (Q_ERROR * q if q is not None else Q_UNKNOWN) / (GAS_CONSTANT_J_PER_MOL_K * kelvin**2)
     has_room = bool(np.isfinite(r[:, ladder.ROOM0]).all())
     d = evidence.design(r, has_temperature=has_temp, has_room=has_room, q_error=q_error)
+    if d.x.size < d.free.shape[1] + SPARE:
+        d = evidence.design(r, has_temperature=False, has_room=False, q_error=0.0)
     return evidence.weigh(d, s.model)
 
 
@@ -262,7 +261,11 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
         return _look_late(s, rules, scan, tick, out)
     r = _windowed(s)
     s = replace(s, log_ratio=min(s.log_ratio, 0.0))
-    if r.shape[0] >= LEAST_RUNGS and (_rising(r) or s.models.shape[0] == 0):
+    if (
+        r.shape[0] >= LEAST_RUNGS
+        and r[-1, ladder.T] > r[0, ladder.T]
+        and (_rising(r) or s.models.shape[0] == 0)
+    ):
         e = _weigh(s, rules, r)
         threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
         s = replace(s, models=e.noise, model=e.model, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)

@@ -29,10 +29,8 @@ LEAF_SCANS: Final = 256
     N, T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, S_TT, S_TE, S_EE, START, END, SEGMENT, Q2,
 ) = range(17)  # fmt: skip
 """Columns. N scans; means of T time [h], U equivalent time [h], Q integral of (T - T0) dU [K h], E strain,
-H half
-difference of the sides, TEMP specimen [degC], ROOM0..2 room as it is and lagged [degC];
-S_.. sums of squares and products about the means; START, END [h]; SEGMENT counts the steps before; Q2
-spare."""
+H half difference of the sides, TEMP specimen [degC], ROOM0..2 room as it is and lagged [degC]; S_.. sums
+of squares and products about the means; START, END [h]; SEGMENT counts the steps before; Q2 spare."""
 COLUMNS: Final = 17
 _MEANS: Final = np.array([T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, Q2])
 
@@ -108,8 +106,8 @@ def sweep(rungs: FloatArray, now_h: float) -> FloatArray:
 
 def thinned(rungs: FloatArray, now_share: float, floor_share: float, age_share: float) -> FloatArray:
     """Return the rungs merged further, as far as ``now_share`` of the distance from now plus
-    ``floor_share`` of the
-    test, and ``age_share`` of the time of test, allow: for work that grows with the cube of their number."""
+    ``floor_share`` of the test, and ``age_share`` of the time of test, allow: for work that grows with the
+    cube of their number."""
     now = float(rungs[-1, END])
     start, end, segment = rungs[:, START].tolist(), rungs[:, END].tolist(), rungs[:, SEGMENT].tolist()
     first = [0]

@@ -3,10 +3,8 @@
 The covariance of block means is s^2 (diag(1/n) + r K(tau)): white noise of single scans averaged, and a
 stationary Ornstein-Uhlenbeck drift of memory tau, whose limit for long tau is a random walk. Neither tau
 nor the ratio r can be pinned down while a test runs (a memory near the length of the record cannot be told
-from
-creep), so every likelihood is averaged over a weighted grid of both. For each tau one eigenvalue
-decomposition serves all ratios.
-"""
+from creep), so every likelihood is averaged over a weighted grid of both. For each tau one eigenvalue
+decomposition serves all ratios."""
 
 from __future__ import annotations
 
@@ -25,10 +23,9 @@ RATIOS: Final = (0.5, 2.0, 8.0, 32.0, 128.0, 512.0, 2048.0)
 
 DRIFT: Final = 8.0
 """Middle of what drifts extensometers show [microstrain]: 0.2 um on 25 mm (common practice, no source)."""
-DRIFT_SPREAD: Final = 1.3
+DRIFT_SPREAD: Final = 1.0
 """And the s.d. of its logarithm: a factor of ten either way is hardly seen. A weak opinion, and it must be
-one: in the
-first hours no record can tell a drift of hours from creep."""
+one: in the first hours no record can tell a drift of hours from creep."""
 
 
 def log_prior(drift_microstrain: float, ratio: float) -> float:

@@ -1,10 +1,8 @@
 """The most likely curve whose rate falls to a least value and rises from there: where the least rate lies.
 
-Non-negative least squares on concave columns before a turning point and convex hinges after it, in the metric
-of one noise model, the turning point on a grid. A shape held so strictly cannot be led to a false least
-rate by the
-noise of short stretches, as the least of many local slopes always is.
-"""
+Non-negative least squares on concave columns before a turning point and convex hinges after it, in the
+metric of one noise model, the turning point on a grid. A shape held so strictly cannot be led to a false
+least rate by the noise of short stretches, as the least of many local slopes always is."""
 
 from __future__ import annotations
 

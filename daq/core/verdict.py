@@ -2,10 +2,8 @@
 
 Evidence says that the rate rises. Whether that is tertiary creep depends on what went before: tertiary
 follows a least rate that was reached by a fall or held for a steady stretch. A rise before that, or one
-very early in
-the life that the laboratory expects, is inverse primary creep (incubation): solid solutions, recovery of an
-early dip.
-"""
+very early in the life that the laboratory expects, is inverse primary creep (incubation): solid solutions,
+recovery of an early dip."""
 
 from __future__ import annotations
 
@@ -14,29 +12,27 @@ from typing import Final
 from daq.core.evidence import Evidence
 from daq.core.stages import Cue, Stage
 
-BEYOND_VILLE: Final = 6.0
+BEYOND_VILLE: Final = 5.0
 """What is asked beyond log(1/alpha), because the noise model and the family of curves are fitted: from
 campaigns."""
-EARLY: Final = 0.12
+EARLY: Final = 0.09
 """Share of the expected life before which a rise is not yet called tertiary: curves without a plateau have
-their
-least rate at 12 % of life and more (open measured curves), and say so by 20 to 30 %: an expectation twice
-too long still leaves them time before their 0.2 % offset."""
+their least rate at 12 % of life and more (open measured curves), and say so by 20 to 30 %: an expectation
+twice too long still leaves them time before their 0.2 % offset."""
 EARLY_RISE: Final = 3.0
 """Unless the rate has risen this much: more than inverse primary creep does (1.2 to 2.5-fold)."""
-LEAST_RISE: Final = 1.03
+LEAST_RISE: Final = 1.025
 """A rise by less than what one kelvin does to the rate (2 to 10 %) is not worth a word: no furnace is known
 better."""
 OFFSET: Final = 0.002
 """And the curve has left its tangent by the 0.2 % of the trade's own definition."""
 WELL_ON: Final = 0.2
 """Share of the expected life from which a rise without a fall before it is called tertiary all the same:
-inverse
-primary creep is over within the first tenth, and the expectation is trusted within a factor of two."""
+inverse primary creep is over within the first tenth, and the expectation is trusted within a factor of
+two."""
 ABRUPT: Final = 8.0
 """A rise by more than this where none was seen a look before is a jerk or a slip, unless the evidence is
-beyond
-all doubt: damage and necking raise the rate by tens of per cent between looks."""
+beyond all doubt: damage and necking raise the rate by tens of per cent between looks."""
 FALL_GAIN: Final = 3.0
 """Log likelihood that a fall before the onset must gain: one in twenty for one more column."""
 FALL_RATIO: Final = 1.08

@@ -68,7 +68,7 @@ def look(strain: np.ndarray, t: np.ndarray) -> evidence.Evidence:
     return evidence.weigh(d)
 
 
-@pytest.mark.parametrize("seed", range(4))
+@pytest.mark.parametrize("seed", range(2))
 def test_a_falling_rate_gives_no_evidence(seed: int) -> None:
     """Primary of any form is in the first family."""
     t = np.linspace(1.0, 500.0, 1500)
@@ -77,7 +77,7 @@ def test_a_falling_rate_gives_no_evidence(seed: int) -> None:
         assert look(curve + rng.normal(0, 1e-5, t.size), t).log_ratio < 3.0
 
 
-@pytest.mark.parametrize("seed", range(4))
+@pytest.mark.parametrize("seed", range(2))
 def test_a_rise_gives_evidence_that_grows(seed: int) -> None:
     """The plateau is left at 300 h."""
     t = np.linspace(1.0, 500.0, 1500)

@@ -24,7 +24,7 @@ def evidence(**changed: float) -> Evidence:
 def judge(e: Evidence, now_h: float = 500.0, expected_h: float | None = None, **more: object) -> Cue | None:
     stage = more.get("stage", Stage.SECONDARY)
     assert isinstance(stage, Stage)
-    return verdict.judge(e, stage, now_h, 11.3, expected_h, bool(more.get("accelerates", True)))
+    return verdict.judge(e, stage, now_h, 10.3, expected_h, bool(more.get("accelerates", True)))
 
 
 def test_a_rise_after_a_fall_is_tertiary() -> None:
@@ -32,7 +32,7 @@ def test_a_rise_after_a_fall_is_tertiary() -> None:
     assert judge(evidence()) is Cue.RATE_ROSE
 
 
-@pytest.mark.parametrize("changed", [{"log_ratio": 11.2}, {"rise_ratio": 1.01}, {"rise_ratio": 20.0}])
+@pytest.mark.parametrize("changed", [{"log_ratio": 10.2}, {"rise_ratio": 1.01}, {"rise_ratio": 20.0}])
 def test_weak_small_or_abrupt_rises_are_none(changed: dict[str, float]) -> None:
     """Noise, a kelvin, a jerk."""
     assert judge(evidence(**changed)) is None

@@ -3,9 +3,8 @@
     python tests/bench/detection/campaign.py --rigs 300 --seed 1 [--workers 2] [--list]
 
 Prints false detections with their exact (Clopper & Pearson 1934) interval, misses, delay over the best
-possible
-one, detections after the 0.2 % offset, error of the least rate over the best possible standard error, and
-how often its 90 % interval holds the truth. Same seed, same table, on any number of workers.
+possible one, detections after the 0.2 % offset, error of the least rate over the best possible standard
+error, and how often its 90 % interval holds the truth. Same seed, same table, on any number of workers.
 """
 
 from __future__ import annotations
