@@ -106,11 +106,12 @@ class Pace:
     guard_s: float
 
 
-def read_pace(options: OptionReader, timeout_s: float, guard_s: float, nameless: bool) -> Pace:
+def read_pace(options: OptionReader, timeout_s: float, alike: bool, nameless: bool) -> Pace:
     """Check ``timeout_s``, ``longest_reply_s`` and ``guard_s``.
 
     ``longest_reply_s`` is the time-out unless given, and twice that for an instrument that cannot say
-    who it is (``nameless``): there the canary's answer is like any other.
+    who it is (``nameless``): there the canary's answer is like any other. ``guard_s`` is as long where
+    several questions have answers that look ``alike``, else 0: the polls themselves are apart.
     """
     timeout_s = options.number("timeout_s", timeout_s, least=0.005, most=60.0)
     longest_s = options.number(
@@ -118,7 +119,7 @@ def read_pace(options: OptionReader, timeout_s: float, guard_s: float, nameless:
     )
     if longest_s < timeout_s:
         options.wrong("longest_reply_s", f"got {longest_s:g}, need at least timeout_s ({timeout_s:g})")
-    guard_s = options.number("guard_s", min(guard_s, longest_s), least=0.0, most=600.0)
+    guard_s = options.number("guard_s", longest_s if alike else 0.0, least=0.0, most=600.0)
     return Pace(timeout_s, longest_s, guard_s)
 
 

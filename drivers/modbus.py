@@ -25,8 +25,9 @@ number or an overload.
 
 Protocol after "MODBUS Application Protocol Specification V1.1b3" and "MODBUS over Serial Line V1.02".
 RTU answers name neither register nor request: those to requests for equally many registers of one
-unit's table could be taken for one another and are asked ``guard_s`` apart (see conversation.py). TCP
-answers carry a transaction number.
+unit's table could be taken for one another and are asked ``guard_s`` apart (default
+``longest_reply_s``; less only on a wire that cannot repeat an answer, see conversation.py). TCP answers
+carry a transaction number.
 """
 
 from __future__ import annotations
@@ -292,8 +293,8 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
     asked = blocks(registers)
     voices = {block.voice for block in asked}
     who, text, equals, declared = _identity(top)
-    guard_s = 0.0 if tcp or len(voices) == len(asked) else 0.1
-    pace = read_pace(top, 0.5, guard_s, nameless=who is None)
+    alike = not tcp and len(voices) < len(asked)
+    pace = read_pace(top, 0.5, alike, nameless=who is None)
     read = _Options(
         make_port, tcp, pace, tuple(r.name for r in registers), tuple(asked), who, text, equals, declared,
         top.number("connect_timeout_s", CONNECT_S, least=0.05, most=60.0),

@@ -123,7 +123,7 @@ def _read_options(options: object) -> tuple[_Options, list[tuple[str, str]]]:
         top.wrong("ignore_errors", f"got {ignore!r}, need a list of error numbers like [-410]")
         ignore = []
     read = _Options(
-        make_port, read_pace(top, 2.0, 0.0, nameless=False), top.text("terminator", "\n", most=4),
+        make_port, read_pace(top, 2.0, alike=False, nameless=False), top.text("terminator", "\n", most=4),
         top.pattern("identity"), tuple(top.texts("setup")), scan,
         top.text("error_query", "SYST:ERR?", empty=True),
         top.number("error_check_s", 0.0, most=86400.0), frozenset(ignore),

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Final
 
@@ -47,6 +47,10 @@ class Message:
     length: int
     echo: str
     picks: tuple[Pick, ...]
+
+    def voice(self, among: Sequence[Message]) -> str:
+        """What its answer can be told apart by: the echo, but only if all the messages have one."""
+        return self.echo if all(message.echo for message in among) else ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,11 +154,11 @@ def read_options(options: object) -> tuple[TextOptions, list[tuple[str, str]]]:
         top.has(key)  # may stand outside as the default of all
     readings = top.parts("yields", number="field", text="group")
     messages = _messages(top, readings, listen, ";" if comma else ",")
-    voices = {m.echo or "" for m in messages}
-    guard_s = 0.0 if len(messages) == len(voices) else 0.1
+    echoes = {m.echo for m in messages}
+    alike = len(messages) > 1 and ("" in echoes or len(echoes) < len(messages))
     manner = Manner(comma, _words(top), _checksum(top))
     ask, reply, declared = _identity(top, listen)
-    pace = read_pace(top, 0.5, guard_s, bool(declared))
+    pace = read_pace(top, 0.5, alike, nameless=bool(declared))
     read = TextOptions(
         make_port, not top.text("port", "/").startswith("socket:"), tuple(readings), messages, manner, pace,
         terminator.encode("latin-1", "replace"), ask_terminator, encoding,

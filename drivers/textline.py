@@ -43,7 +43,9 @@ semicolon with ``decimal_comma``; ``fields`` says how many a line has if that is
 ``words: {"------": overload, "EEEE": open_circuit}``. Readings with the same question share one.
 
 A digit that the wire changed into another digit is seen only by parity (``frame``) or a checksum. Where the
-answers do not name their channel, questions are sent ``guard_s`` apart (see conversation.py).
+answers do not name their channel, questions are sent ``guard_s`` apart, by default ``longest_reply_s``:
+an answer that comes twice is then never taken for another's. On a wire that cannot repeat an answer it may
+be less. A poll too short for all questions takes turns.
 """
 
 from __future__ import annotations
@@ -232,7 +234,8 @@ class TextLine:
         def read(line: Line) -> dict[str, Value]:
             return read_line(line.text, message, self._options.manner)
 
-        return Question(self._request(message.ask), read, message.echo, echoed=self._echoed(message.ask))
+        voice = message.voice(self._options.messages)
+        return Question(self._request(message.ask), read, voice, echoed=self._echoed(message.ask))
 
     def _request(self, ask: str) -> bytes:
         o = self._options

@@ -257,6 +257,29 @@ def test_an_instrument_that_cannot_say_who_it_is_must_at_least_answer() -> None:
             driver.identify()
 
 
+@pytest.mark.parametrize(
+    ("yields", "apart"),
+    [
+        ({"a": {"echo": "A"}, "b": {"echo": "B"}}, False),
+        ({"a": {"echo": "A"}, "b": {"reply": "(?P<value>.*)"}}, True),
+        ({"a": {"reply": "(?P<value>.*)"}, "b": {"reply": "B(?P<value>.*)"}}, True),
+        ({"a": {"echo": "A"}, "b": {"echo": "A"}}, True),
+        ({"a": {"echo": "A"}}, False),
+    ],
+)
+def test_questions_whose_answers_look_alike_are_asked_apart(yields: dict[str, Any], apart: bool) -> None:
+    """Only an echo in every answer tells them from one another; a pattern may fit more than it seems."""
+    echoing = {"reply": "(?P<echo>.)(?P<value>.*)"}
+    options = {
+        **NAMED, "ask": "x",
+        "yields": {n: {"ask": n, **({} if "reply" in y else echoing), **y} for n, y in yields.items()},
+    }  # fmt: skip
+    driver = TextLine(options, port=far_end(""))
+    questions = [question.voice for _, question in driver._questions]
+    assert (driver._talk.pace.guard_s > 0.0) == apart
+    assert (len(set(questions)) < len(questions)) == apart
+
+
 # ------------------------------------------------------------------------------------- listening
 
 

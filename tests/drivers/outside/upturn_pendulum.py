@@ -75,7 +75,7 @@ class Pendulum:
     def _read(options: Mapping[str, Any]) -> tuple[OptionReader, Any, Any, int, dict[str, str]]:
         top = OptionReader(options)
         make_port = read_port(top)
-        pace = read_pace(top, 0.3, 0.0, nameless=False)
+        pace = read_pace(top, 0.3, alike=False, nameless=False)
         unit = top.whole("unit", 1, least=0, most=9)
         channels = {}
         for name, own in top.parts("yields", text="channel").items():
