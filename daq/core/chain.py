@@ -23,7 +23,7 @@ import numpy as np
 from daq.core import alarms, causes, entered, follow, forecast, results, timebase, watch
 from daq.core.block import Block, Conclusion, Cue
 from daq.core.convert import Plan, convert, prepare
-from daq.core.hearing import cues_of, finish, note, stamped
+from daq.core.hearing import cues_of, finish, leave, note, stamped
 from daq.core.rules import Role, TestRules
 from daq.core.shown import deadline, open_alarm, status, summary
 from daq.core.teststate import Out, TestState, begin, out_of, rules_of, start_of
@@ -166,7 +166,12 @@ def _conclude(
     a, alarmed = alarms.take_block(s.alarms, cues, block.tick, block.first)
     for c in said:
         s = replace(s, results=note(s.results, c))
-    for c in sorted((*said, *alarmed), key=lambda c: c.scan):  # stable: what was seen, then its alarm
+
+    def place(c: Conclusion) -> tuple[int, bool]:
+        """By scan; what fell due before that scan comes first, as where time was ticked in between."""
+        return c.scan, c.kind != "alarm" or c.tick >= block.tick[c.scan - block.first]
+
+    for c in sorted((*said, *alarmed), key=place):  # stable: what was seen, then its alarm
         own = c.kind != "alarm"
         out.put(c, int(utc_tick[c.scan - block.first]) if own else utc(c.tick))
     return replace(s, alarms=a, causes=known)
@@ -247,6 +252,7 @@ __all__ = [
     "begin",
     "cut",
     "deadline",
+    "leave",
     "open_alarm",
     "rules_of",
     "start_of",

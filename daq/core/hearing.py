@@ -7,11 +7,13 @@ from dataclasses import replace
 from typing import Any, Final
 
 from daq.core import alarms, causes, follow, results, timebase, watch
+from daq.core.alarm_table import State
 from daq.core.alarms import AlarmEntry, AlarmsState
 from daq.core.block import Conclusion, Cue
 from daq.core.results import ResultsState
 from daq.core.rules import TestRules
 from daq.core.teststate import Out, TestState, out_of
+from daq.records import Finding, RulesAdopted
 
 Utc = Callable[[int], int]
 """From a lab tick to the UTC tick beside it."""
@@ -99,3 +101,18 @@ def stamped(s: TestState, fact: Any) -> tuple[TestState, Out, int, int]:
     lead = s.clock.utc_lead
     a = pass_time(s.alarms, tick, s.scans, out, lambda at: at + lead)
     return replace(s, clock=clock, alarms=a), out, tick, fact.stamp.utc_tick
+
+
+def leave(s: TestState, fact: RulesAdopted, next_one: str) -> tuple[list[Finding], Mapping[str, int]]:
+    """Return the last findings of a test whose specimen has left, and how far its findings were counted.
+
+    Its open alarms end: else the broker would keep alarms of a specimen that hangs there no more.
+    """
+    s, out, tick, utc_tick = stamped(s, fact)
+    for a in alarms.open_alarms(s.alarms):
+        message = f"was {a.state.value} when specimen {next_one} took the place: {a.message}"
+        ended = replace(a, state=State.NORMAL, message=message, can_wait_until_tick=None)
+        name = f"{a.alarm}/{a.subject}" if a.subject else a.alarm
+        fields = alarms.fields_of(ended, tick)
+        out.put(Conclusion(s.scans, tick, "alarm", f"{name}#{a.occurrence}", fields), utc_tick)
+    return out.findings, out.counts
