@@ -59,6 +59,8 @@ def judge(
     well_on = expected_h is not None and now_h >= WELL_ON * expected_h and accelerates
     if expected_h is not None and now_h < EARLY * expected_h and not overwhelming:
         return None if fell or stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
+    if stage is Stage.INVERSE_PRIMARY:  # the same early rise, seen a little later, is not another one
+        return Cue.RATE_ROSE if overwhelming or well_on or (fell and steady) else None
     if not (fell or steady or overwhelming or well_on):
-        return None if stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
+        return Cue.RATE_ROSE_EARLY
     return Cue.RATE_ROSE

@@ -62,3 +62,10 @@ def test_well_into_the_expected_life_a_rise_without_a_fall_counts_if_it_goes_on(
     e = evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88)
     assert judge(e, 300.0, 1000.0) is Cue.RATE_ROSE
     assert judge(e, 300.0, 1000.0, accelerates=False) is Cue.RATE_ROSE_EARLY
+
+
+def test_the_rise_that_made_it_inverse_primary_does_not_make_it_tertiary() -> None:
+    """A fit that happens to see a fall a little later is still the fit of the same rise."""
+    e = evidence(since=0.88)
+    assert judge(e, stage=Stage.INVERSE_PRIMARY) is None
+    assert judge(evidence(since=0.3), stage=Stage.INVERSE_PRIMARY) is Cue.RATE_ROSE
