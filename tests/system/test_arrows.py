@@ -16,7 +16,7 @@ EDGES: dict[str, set[str]] = {
     "daq.store": {"daq.store", "daq.records", "daq.codec"},
     "daq.lines": {"daq.records", "daq.codec"},
     "daq.clock": {"daq.records"},
-    "daq.entries": {"daq.records"},
+    "daq.entries": {"daq.core", "daq.records"},
     "daq.supervise": set(),
     "daq.acquire": {"daq.records", "daq.clock", "drivers"},
     "daq.engine": {"daq.core", "daq.records", "daq.codec", "daq"},
