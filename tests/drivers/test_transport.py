@@ -90,7 +90,7 @@ def test_reading_waits_for_the_deadline_and_no_longer(pty: Pty) -> None:
 
 
 def test_bytes_that_trickle_do_not_push_the_deadline_away(pty: Pty) -> None:
-    """A read with a time-out per byte would go on for ever here (FAULTS: a byte each 0.3 s)."""
+    """A read with a time-out per byte would go on for ever here (a byte each 0.3 s)."""
     port = SerialPort(pty.path)
     port.open(soon())
     stop = threading.Event()
