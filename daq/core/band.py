@@ -8,7 +8,7 @@ the settings choose it), so the limits are numbers of the rules here.
   at or above the lower limit. Overshoot therefore counts. A thermocouple that never arrives
   counts half an hour after the mean did, once the specimen is under load.
 * Time out of band must add up to ``excursion_min_s`` (``core.hold``). A spike does not, whatever its size.
-* Nearing: four fifths of the way to a limit for ten minutes or more.
+* Nearing: between four fifths of the way to a limit and the limit, for ten minutes or more.
 * One thermocouple that leaves while the others, and the controller output where it is logged, stay
   where they were is a suspected thermocouple and not a hot specimen. The excursion of the
   *indicated* temperature is still recorded, marked ``suspected_sensor``.
@@ -29,7 +29,18 @@ from daq.codec import state
 from daq.core.block import Block, Conclusion, Cue
 from daq.core.hold import BETWEEN, BEYOND, CLEAR, REST, Codes, Hold, Rows, Turn, hold
 from daq.core.leaves import Closed, Paced
-from daq.core.rules import Role, TestRules
+from daq.core.rules import TestRules
+from daq.core.suspects import (
+    EPS_K,
+    NEAR_ENTER,
+    NEAR_LEAVE,
+    Limits,
+    Look,
+    Reference,
+    columns,
+    follow_references,
+    limits_of,
+)
 from daq.records import TICKS_PER_S, FloatArray, IntArray, Quality
 
 MEAN: Final = "specimen_mean"
@@ -37,19 +48,7 @@ MEAN: Final = "specimen_mean"
 SUSPECTED: Final = "sensor_suspected"
 HYSTERESIS: Final = 0.1
 """Back inside means a tenth of the band inside, so that a furnace sitting on the limit raises once."""
-NEAR_ENTER: Final = 0.8
-NEAR_LEAVE: Final = 0.7
-NEAR_S: Final = 600.0
 SETTLE_TICKS: Final = 1800 * TICKS_PER_S
-STEADY_SHARE: Final = 0.25
-"""Others that moved less than a quarter of the band from their reference are steady."""
-MOVED_SHARE: Final = 0.5
-OUTPUT_STEADY_PERCENT: Final = 1.0
-REFERENCE_LEAVES: Final = 256
-"""Memory of a reference in leaves of 16 scans, once that many are known."""
-KNOWN_LEAVES: Final = 4
-EPS_K: Final = 1e-9
-"""Decimal readings are not exact binary numbers: 603.0 at 600 +- 3 is in the band."""
 _SKIPPED: Final = (int(Quality.SUSPECT_SPIKE), int(Quality.SUSPECT_SENSOR))
 
 
@@ -75,21 +74,11 @@ class Signal:
 
 @state
 @dataclass(frozen=True, slots=True)
-class Reference:
-    """Where a column usually is, and how much its leaf means differ from one to the next."""
-
-    level: float = 0.0
-    scatter: float = 0.0
-    last: float = 0.0
-    leaves: int = 0
-
-
-@state
-@dataclass(frozen=True, slots=True)
 class BandState:
     """Signals in the order of the channels, the mean last; references of the same and of the output.
 
     ``arrived_scan`` and ``arrived_tick`` say when the mean (or the only thermocouple) reached the band.
+    ``calm``: every signal is judged and rests.
     """
 
     signals: tuple[Signal, ...]
@@ -98,14 +87,10 @@ class BandState:
     gradient_missed: int = 0
     arrived_scan: int | None = None
     arrived_tick: int = 0
+    calm: bool = False
 
 
 Item = Conclusion | Cue
-
-
-def columns(rules: TestRules) -> tuple[int, ...]:
-    """Return the columns of the specimen's thermocouples."""
-    return tuple(i for i, c in enumerate(rules.channels) if c.role is Role.SPECIMEN_TEMPERATURE)
 
 
 def begin(rules: TestRules) -> BandState:
@@ -131,52 +116,32 @@ def signals(rules: TestRules, block: Block) -> FloatArray:
     return np.concatenate([*parts, block.output[:, None]], axis=1)
 
 
-@dataclass(frozen=True, slots=True)
-class _Limits:
-    set_point: float
-    below: float
-    above: float
-    wanted: int
-    near_wanted: int
-
-
-def _limits(rules: TestRules) -> _Limits | None:
-    if rules.set_point_c is None or rules.below_k is None or rules.above_k is None:
-        return None
-    least = rules.limits.excursion_min_s
-    return _Limits(
-        rules.set_point_c, rules.below_k, rules.above_k, max(1, round(least * TICKS_PER_S)),
-        round(max(NEAR_S, 10.0 * least) * TICKS_PER_S),
-    )  # fmt: skip
-
-
 def watch_band(
     s: BandState, rules: TestRules, block: Block, x: FloatArray, paced: Paced, closed: Closed | None
 ) -> tuple[BandState, list[Item]]:
     """Judge n scans; ``x`` is :func:`signals` of them and ``closed`` its leaves."""
     m = len(s.signals)
-    lim = _limits(rules)
+    lim = limits_of(rules)
     if not m or not len(block):
         return s, []
-    history, references = _follow_references(s.references, lim, closed)
+    history, references = follow_references(s.references, lim, closed)
     items: list[Item] = []
     if lim is not None:
         dev = x[:, :m] - lim.set_point
-        calm = all(signal.resting for signal in s.signals)
         inside = not (
             (dev > NEAR_LEAVE * lim.above - EPS_K).any() or (dev < -NEAR_LEAVE * lim.below + EPS_K).any()
         )
-        if not (calm and inside):
-            look = _Look(rules, block, x, dev, lim, history, closed)
+        if not (s.calm and inside):
+            look = Look(rules, block, x, dev, lim, history, closed)
             s = _judge(s, look, paced, items)
     s = _judge_gradient(s, rules, block, x, paced, items)
-    return replace(s, references=references), items
+    return (s if references is s.references else replace(s, references=references)), items
 
 
 def end(s: BandState, rules: TestRules, tick: int, scan: int) -> tuple[BandState, list[Item]]:
     """Close what is open when the test ends; excursions are told, alarms let go."""
     items: list[Item] = []
-    lim = _limits(rules)
+    lim = limits_of(rules)
     out = []
     for signal in s.signals:
         sides = [(n, getattr(signal, n)) for n in ("high", "low")]
@@ -193,96 +158,10 @@ def end(s: BandState, rules: TestRules, tick: int, scan: int) -> tuple[BandState
     return replace(s, signals=tuple(out), gradient=REST, gradient_missed=0), items
 
 
-# --- references -------------------------------------------------------------------------
-
-
-def _follow_references(
-    references: tuple[Reference, ...], lim: _Limits | None, closed: Closed | None
-) -> tuple[list[tuple[Reference, ...]], tuple[Reference, ...]]:
-    """Return the references after 0, 1, ... closed leaves, and the last of them."""
-    history = [references]
-    if closed is None:
-        return history, references
-    now = list(references)
-    for row in closed.mean.tolist():
-        for j, value in enumerate(row):
-            if value != value:  # NaN: no reading
-                continue
-            if lim is not None and j < len(row) - 1:
-                dev = value - lim.set_point
-                if not -NEAR_LEAVE * lim.below < dev < NEAR_LEAVE * lim.above:
-                    continue
-            now[j] = _renew(now[j], value)
-        history.append(tuple(now))
-    return history, history[-1]
-
-
-def _renew(r: Reference, value: float) -> Reference:
-    if not r.leaves:
-        return Reference(value, 0.0, value, 1)
-    leaves = r.leaves + 1
-    w = 1.0 / min(leaves, REFERENCE_LEAVES)
-    scatter = r.scatter + w * (abs(value - r.last) - r.scatter)
-    return Reference(r.level + w * (value - r.level), scatter, value, min(leaves, REFERENCE_LEAVES))
-
-
-@dataclass(frozen=True, slots=True)
-class _Look:
-    """What the judgement of one block needs, in one place."""
-
-    rules: TestRules
-    block: Block
-    x: FloatArray
-    dev: FloatArray
-    lim: _Limits
-    history: list[tuple[Reference, ...]]
-    closed: Closed | None
-
-    def references_at(self, row: int) -> tuple[Reference, ...]:
-        if self.closed is None:
-            return self.history[0]
-        return self.history[int(np.searchsorted(self.closed.end, row + 1, "right"))]
-
-    def suspected(self, row: int, i: int) -> bool:
-        """Did thermocouple ``i`` leave alone? Judged on the readings of ``row`` against the references."""
-        sensors = len(columns(self.rules))
-        now, ref = self.x[row], self.references_at(row)
-        band = self.lim.above if self.dev[row, i] > 0 else self.lim.below
-        others = [
-            j for j in range(sensors)
-            if j != i and np.isfinite(now[j]) and ref[j].leaves >= KNOWN_LEAVES
-        ]  # fmt: skip
-        if ref[i].leaves < KNOWN_LEAVES or not others:
-            return False
-        if any(abs(float(now[j]) - ref[j].level) > STEADY_SHARE * band for j in others):
-            return False
-        if abs(float(now[i]) - ref[i].level) < MOVED_SHARE * band:
-            return False
-        out, usual = float(now[-1]), ref[-1]
-        if out == out and usual.leaves >= KNOWN_LEAVES:
-            return abs(out - usual.level) <= max(OUTPUT_STEADY_PERCENT, 5.0 * usual.scatter)
-        return len(others) >= 2
-
-    def explained(self, row: int) -> bool:
-        """Is the mean out only because of a suspected thermocouple?"""
-        sensors = len(columns(self.rules))
-        dev = self.dev[row, :sensors]
-        bad = [
-            i for i in range(sensors)
-            if np.isfinite(dev[i]) and _outside(float(dev[i]), self.lim) and self.suspected(row, i)
-        ]  # fmt: skip
-        rest = [float(dev[i]) for i in range(sensors) if i not in bad and np.isfinite(dev[i])]
-        return bool(bad and rest) and not _outside(sum(rest) / len(rest), self.lim)
-
-
-def _outside(dev: float, lim: _Limits) -> bool:
-    return dev > lim.above + EPS_K or dev < -lim.below - EPS_K
-
-
 # --- judging ----------------------------------------------------------------------------
 
 
-def _judge(s: BandState, look: _Look, paced: Paced, items: list[Item]) -> BandState:
+def _judge(s: BandState, look: Look, paced: Paced, items: list[Item]) -> BandState:
     out: list[Signal] = []
     spent = np.cumsum(paced.step)
     for i in reversed(range(len(s.signals))):  # the mean first: it says when the others must have arrived
@@ -294,10 +173,10 @@ def _judge(s: BandState, look: _Look, paced: Paced, items: list[Item]) -> BandSt
             row = int(usable[first])
             s = replace(s, arrived_scan=look.block.first + row, arrived_tick=int(look.block.tick[row]))
         out.append(_judge_signal(signal, look, i, usable, first, spent, paced, items))
-    return replace(s, signals=tuple(reversed(out)))
+    return replace(s, signals=tuple(reversed(out)), calm=all(signal.resting for signal in out))
 
 
-def _arrive(signal: Signal, look: _Look, i: int, usable: IntArray, s: BandState) -> tuple[Signal, int]:
+def _arrive(signal: Signal, look: Look, i: int, usable: IntArray, s: BandState) -> tuple[Signal, int]:
     """Return the signal and the first of its usable readings that is judged."""
     if signal.judged or not usable.size:
         return signal, 0
@@ -314,7 +193,7 @@ def _arrive(signal: Signal, look: _Look, i: int, usable: IntArray, s: BandState)
 
 
 def _judge_signal(
-    signal: Signal, look: _Look, i: int, usable: IntArray, first: int, spent: IntArray, paced: Paced,
+    signal: Signal, look: Look, i: int, usable: IntArray, first: int, spent: IntArray, paced: Paced,
     items: list[Item],
 ) -> Signal:  # fmt: skip
     lim, block = look.lim, look.block
@@ -330,6 +209,8 @@ def _judge_signal(
     ):
         enter, leave = (NEAR_ENTER, NEAR_LEAVE) if name.startswith("near") else (1.0, 1.0 - HYSTERESIS)
         code = _codes(sign * dev, enter * limit + EPS_K, leave * limit + EPS_K)
+        if name.startswith("near"):  # what is out is no longer near: the other alarm says so
+            code[sign * dev > limit + EPS_K] = BETWEEN
         code[:first] = CLEAR
         h, said = hold(getattr(signal, name), code, sign * x, rows, wanted)
         holds[name] = h
@@ -360,7 +241,7 @@ def _codes(out: FloatArray, enter: float, leave: float) -> Codes:
 
 
 def _tell(
-    signal: Signal, look: _Look, i: int, turns: Sequence[tuple[int, str, Turn]], items: list[Item]
+    signal: Signal, look: Look, i: int, turns: Sequence[tuple[int, str, Turn]], items: list[Item]
 ) -> bool:
     """Turn changes into cues and findings, in order of time; return whether the sensor is suspected."""
     suspected = signal.suspected
@@ -392,7 +273,7 @@ def _tell(
     return suspected
 
 
-def _alone(look: _Look, i: int, row: int) -> bool:
+def _alone(look: Look, i: int, row: int) -> bool:
     """Is it this sensor alone, or for the mean a sensor alone, that is out at ``row``?"""
     if i >= len(columns(look.rules)):
         return look.explained(row)
@@ -403,12 +284,12 @@ def _alarm(side: str, suspected: bool) -> str:
     return SUSPECTED if suspected else f"temperature_{side}"
 
 
-def _limit(lim: _Limits, side: str) -> float:
+def _limit(lim: Limits, side: str) -> float:
     return lim.set_point + lim.above if side == "high" else lim.set_point - lim.below
 
 
 def _excursion_cue(
-    look: _Look, i: int, row: int, name: str, side: str, turn: Turn | None, suspected: bool
+    look: Look, i: int, row: int, name: str, side: str, turn: Turn | None, suspected: bool
 ) -> Cue:
     value, limit = float(look.x[row, i]), _limit(look.lim, side)
     figures: dict[str, Any] = {"limit_c": limit}
@@ -426,7 +307,7 @@ def _excursion_cue(
     return Cue(scan, tick, _alarm(side, suspected), name, True, message, None, figures)
 
 
-def _near_cue(look: _Look, i: int, row: int, name: str, side: str, turn: Turn) -> Cue:
+def _near_cue(look: Look, i: int, row: int, name: str, side: str, turn: Turn) -> Cue:
     scan, tick, alarm = look.block.first + row, int(look.block.tick[row]), f"temperature_nearing_{side}"
     if not turn.active:
         return Cue(scan, tick, alarm, name, False)
@@ -437,7 +318,7 @@ def _near_cue(look: _Look, i: int, row: int, name: str, side: str, turn: Turn) -
 
 
 def _excursion(
-    scan: int, tick: int, name: str, side: str, h: Hold, lim: _Limits, suspected: bool
+    scan: int, tick: int, name: str, side: str, h: Hold, lim: Limits, suspected: bool
 ) -> Conclusion:
     fields: dict[str, Any] = {
         "channel": name,
@@ -461,9 +342,11 @@ def _judge_gradient(
     if limit is None or sensors < 2:
         return s
     t = x[:, :sensors]
-    several = np.isfinite(t).sum(axis=1) >= 2
     spread = np.fmax.reduce(t, axis=1) - np.fmin.reduce(t, axis=1)
-    if _limits(rules) is None:
+    if s.gradient.resting and not (spread > (1.0 - HYSTERESIS) * limit).any():
+        return replace(s, gradient_missed=0) if s.gradient_missed else s
+    several = np.isfinite(t).sum(axis=1) >= 2
+    if limits_of(rules) is None:
         counts = several & (block.t_s >= 0.0)
     elif s.arrived_scan is None:
         return s

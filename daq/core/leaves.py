@@ -118,6 +118,8 @@ def pace(s: Cadence, tick: IntArray, scan_every_s: float | None) -> tuple[Cadenc
     n = tick.shape[0]
     if not n:
         return s, Paced(*(np.empty(0, np.int64) for _ in range(3)))
+    if n == 1 and s.latest is not None and s.open is not None and s.open.shape[0] < LEAF - 1:
+        return _pace_one(s, int(tick[0]), s.latest, s.open, scan_every_s)
     carried = int(tick[0]) if s.latest is None else s.latest
     reached = np.maximum.accumulate(np.concatenate((np.array([carried]), tick)))
     interval = np.diff(reached)
@@ -136,6 +138,18 @@ def pace(s: Cadence, tick: IntArray, scan_every_s: float | None) -> tuple[Cadenc
     gap = _gap_of(np.array(levels), floor)[leaf]
     after = Cadence(usual, int(reached[-1]), opened[whole * LEAF :].copy())
     return after, Paced(interval, gap, np.where(interval < gap, interval, 0))
+
+
+def _pace_one(
+    s: Cadence, tick: int, latest: int, opened: IntArray, scan_every_s: float | None
+) -> tuple[Cadence, Paced]:
+    """Do what :func:`pace` does, for the live scan that closes no leaf."""
+    interval = max(0, tick - latest)
+    level = max(s.usual, 0.0 if scan_every_s is None else scan_every_s * TICKS_PER_S)
+    gap = int(max(GAP_FACTOR * level, float(LEAST_GAP_TICKS))) if level > 0.0 else _NEVER
+    step = interval if interval < gap else 0
+    after = Cadence(s.usual, max(latest, tick), np.append(opened, interval))
+    return after, Paced(*(np.array([x], np.int64) for x in (interval, gap, step)))
 
 
 _NEVER: Final = 1 << 60

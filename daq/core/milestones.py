@@ -46,6 +46,8 @@ class MeanState:
 
 def mean_strain(s: MeanState, a: FloatArray, b: FloatArray) -> tuple[MeanState, FloatArray]:
     """Return the mean strain (n,) of the sides, NaN where neither side has a reading."""
+    if a.size == 1:
+        return _mean_of_one(s, float(a[0]), float(b[0]))
     half, two_sided = s.half, s.two_sided
     have_b = b == b
     if not have_b.any():
@@ -60,6 +62,15 @@ def mean_strain(s: MeanState, a: FloatArray, b: FloatArray) -> tuple[MeanState, 
     there = np.flatnonzero(mean == mean)
     last = float(mean[there[-1]]) if there.size else s.last
     return MeanState(half, two_sided, last), mean
+
+
+def _mean_of_one(s: MeanState, a: float, b: float) -> tuple[MeanState, FloatArray]:
+    if a == a and b == b:
+        half, two_sided, mean = 0.5 * (a - b), True, 0.5 * (a + b)
+    else:
+        half, two_sided = s.half, s.two_sided
+        mean = b + half if b == b else a - half if two_sided else a
+    return MeanState(half, two_sided, mean if mean == mean else s.last), np.array([mean])
 
 
 @state

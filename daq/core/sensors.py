@@ -37,6 +37,8 @@ HARD_TICKS: Final = 60 * TICKS_PER_S
 SOFT_TICKS: Final = 600 * TICKS_PER_S
 HOLE_TIMES: Final = 3
 SCANS: Final = 3
+UNKNOWN_SCANS: Final = 64
+"""Missing scans that count as a hole while it is not known how often a channel is read at all."""
 SOFT: Final = (int(Quality.BAD_MISSING), int(Quality.BAD_GARBLED))
 AWAY: Final = (int(Quality.BAD_LINK), int(Quality.BAD_IDENTITY))
 _WHY: Final = {
@@ -181,7 +183,8 @@ def _follow_hole(
         codes = q[rows[begin_at:end_at]]
         soft = (codes == SOFT[0]) | (codes == SOFT[1])
         wanted = np.where(soft, max(SOFT_TICKS, HOLE_TIMES * h.longest), HARD_TICKS)
-        long = (tick[begin_at:end_at] - since >= wanted) & (scans + 1 + np.arange(n) >= SCANS)
+        enough = np.where(soft & (h.longest == 0), UNKNOWN_SCANS, SCANS)
+        long = (tick[begin_at:end_at] - since >= wanted) & (scans + 1 + np.arange(n) >= enough)
         if long.any():
             k = int(np.argmax(long))
             row, why = int(rows[begin_at + k]), _WHY.get(int(codes[k]), "bad readings")

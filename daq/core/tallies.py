@@ -20,6 +20,7 @@ from daq.core import band, leaves
 from daq.core.block import Block
 from daq.core.leaves import Cadence, Paced
 from daq.core.rules import TestRules
+from daq.core.suspects import EPS_K
 from daq.records import BAD, TICKS_PER_S, FloatArray
 
 HOUR_TICKS: Final = 3600 * TICKS_PER_S
@@ -185,7 +186,7 @@ def _far(v: FloatArray, rules: TestRules) -> Any:
     if rules.set_point_c is None or rules.below_k is None or rules.above_k is None:
         return np.zeros(v.size, np.int64)
     dev = v - rules.set_point_c
-    return (dev > rules.above_k + band.EPS_K).astype(np.int64) - (dev < -rules.below_k - band.EPS_K)
+    return (dev > rules.above_k + EPS_K).astype(np.int64) - (dev < -rules.below_k - EPS_K)
 
 
 def _onward(carry: float, x: FloatArray) -> float:

@@ -24,8 +24,9 @@ from daq.core.block import Block, Conclusion, Cue
 from daq.core.leaves import LEAF, Cadence, Closed, Leaves
 from daq.core.milestones import MeanState, MilestoneState
 from daq.core.rules import Role, TestRules
-from daq.core.rupture import STILL, Context, Motion, RuptureState
+from daq.core.rupture import Context, RuptureState
 from daq.core.sensors import SensorState
+from daq.core.torn import STILL, Motion
 from daq.records import TICKS_PER_S, FloatArray, IntArray
 
 LEAST_POINTS: Final = 14

@@ -131,7 +131,7 @@ def test_the_end_tells_open_excursions_and_lets_conditions_go() -> None:
     top[120:] = 610.0
     block = block_of(rules, {"a": np.linspace(0, 1e-4, n), "top": top})
     state, items = watch.watch(watch.begin(rules), rules, block)
-    assert [i.alarm for i in items if isinstance(i, Cue)] == ["temperature_high", "temperature_nearing_high"]
+    assert [i.alarm for i in items if isinstance(i, Cue)] == ["temperature_high"]
     state, last = watch.end(state, rules, int(block.tick[-1]), float(block.t_s[-1]), n - 1)
     (excursion,) = [i for i in last if isinstance(i, Conclusion)]
     assert excursion.fields == {
@@ -142,7 +142,7 @@ def test_the_end_tells_open_excursions_and_lets_conditions_go() -> None:
         "limit_c": 603.0,
     }
     gone = {(c.alarm, c.active) for c in last if isinstance(c, Cue)}
-    assert gone == {("temperature_high", False), ("temperature_nearing_high", False)}
+    assert gone == {("temperature_high", False)}
     assert watch.end(state, rules, 0, 0.0, n) == (state, ())
     assert watch.watch(state, rules, block) == (state, ())
 
