@@ -124,6 +124,8 @@ def next_leaf(
         first_step = min((j.step_at for j in judged if j.step_at is not None), default=None)
         if first_step == 0:
             s2, step = _step(s, part, judged)
+            if part[-1, SCAN] > s2.scan:  # the step was not known before this scan, however short the leaf
+                s2 = replace(s2, scan=int(part[-1, SCAN]), tick=int(part[-1, TICK]))
             s2, used, leaf = next_leaf(s2, rules, rows, clock, at, final)
             if leaf is None:  # what follows is not yet clear: decide again when it is
                 return s, at, None
