@@ -40,6 +40,22 @@ FALL_RATIO: Final = 1.08
 STEADY_SHARE: Final = 0.6
 """Share of the elapsed time that a steady stretch before the onset must fill where there was no fall."""
 
+DEEP_FALL: Final = 2.0
+CLEAR_RISE: Final = 1.5
+CLEAR_OFFSET: Final = 0.0005
+"""An expectation may be wrong by an order of magnitude. However early it says a rise is, one that follows a
+fall to half, by half, a quarter of the 0.2 % offset high and on twice the evidence is believed."""
+
+
+def _settled(e: Evidence, threshold: float) -> bool:
+    return (
+        e.fall_gain >= FALL_GAIN
+        and e.fall_ratio >= DEEP_FALL
+        and e.rise_ratio >= CLEAR_RISE
+        and e.offset >= CLEAR_OFFSET
+        and e.log_ratio >= 2.0 * threshold
+    )
+
 
 def judge(
     e: Evidence, stage: Stage, now_h: float, threshold: float, expected_h: float | None, accelerates: bool
@@ -57,7 +73,7 @@ def judge(
     steady = 1.0 - e.since >= STEADY_SHARE
     overwhelming = e.rise_ratio >= EARLY_RISE and e.offset >= OFFSET and (fell or accelerates)
     well_on = expected_h is not None and now_h >= WELL_ON * expected_h and accelerates
-    if expected_h is not None and now_h < EARLY * expected_h and not overwhelming:
+    if expected_h is not None and now_h < EARLY * expected_h and not (overwhelming or _settled(e, threshold)):
         return None if fell or stage is Stage.INVERSE_PRIMARY else Cue.RATE_ROSE_EARLY
     if stage is Stage.INVERSE_PRIMARY:  # the same early rise, seen a little later, is not another one
         return Cue.RATE_ROSE if overwhelming or well_on or (fell and steady) else None

@@ -49,7 +49,9 @@ def _lines(findings: list[Finding]) -> list[str]:
 
 
 @pytest.mark.parametrize("index", RIGS)
-@settings(max_examples=3, deadline=None, phases=[Phase.generate], suppress_health_check=[HealthCheck.too_slow])
+@settings(
+    max_examples=3, deadline=None, phases=[Phase.generate], suppress_health_check=[HealthCheck.too_slow]
+)
 @given(data=st.data())
 def test_findings_and_state_do_not_depend_on_cuts(index: int, data: st.DataObject) -> None:
     """Live the core gets one scan at a time, in a replay thousands: it must be the same test."""

@@ -57,6 +57,14 @@ def test_early_in_the_expected_life_a_dip_is_not_believed() -> None:
     assert judge(evidence(rise_ratio=4.0, offset=0.003), 50.0, 1000.0) is Cue.RATE_ROSE
 
 
+def test_an_expectation_ten_times_too_long_does_not_hide_a_clear_turn() -> None:
+    """A laboratory's idea of the life may be wrong by an order of magnitude; a clear curve is not."""
+    clear = {"fall_ratio": 2.5, "fall_gain": 60.0, "rise_ratio": 1.6, "offset": 0.0007, "log_ratio": 25.0}
+    assert judge(evidence(**clear), 25.0, 900.0) is Cue.RATE_ROSE
+    for name, less in (("fall_ratio", 1.5), ("rise_ratio", 1.3), ("offset", 0.0002), ("log_ratio", 15.0)):
+        assert judge(evidence(**{**clear, name: less}), 25.0, 900.0) is None
+
+
 def test_well_into_the_expected_life_a_rise_without_a_fall_counts_if_it_goes_on() -> None:
     """Damage from the first hour on accelerates; incubation saturates."""
     e = evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88)
