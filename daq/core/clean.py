@@ -14,6 +14,7 @@ scans), judged beyond six (one in 5e8)."""
 
 from __future__ import annotations
 
+import math
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -57,7 +58,7 @@ def scan_noise(v: FloatArray) -> float:
     first = np.abs(np.diff(v))
     seen = first[first > 1e-12]
     resolution = float(seen.min()) if seen.size else 0.0
-    return max(1.4826 * float(np.median(second)) / np.sqrt(1.5), 0.3 * resolution)
+    return max(1.4826 * float(np.median(second)) / math.sqrt(1.5), 0.3 * resolution)
 
 
 def judge(

@@ -52,11 +52,13 @@ class Fit(NamedTuple):
         """Return the mean fitted rate [1/h] at ``t_h``."""
         c = self.weights @ self.coefs
         z = (np.asarray(t_h) - self.at_h) / self.half_h
-        return np.polynomial.polynomial.polyval(z, np.polynomial.polynomial.polyder(c)) / self.half_h
+        slope = np.polynomial.polynomial.polyval(z, np.polynomial.polynomial.polyder(c))
+        return np.asarray(slope / self.half_h, np.float64)
 
     def strain(self, t_h: FloatArray) -> FloatArray:
         c = self.weights @ self.coefs
-        return np.polynomial.polynomial.polyval((np.asarray(t_h) - self.at_h) / self.half_h, c)
+        z = (np.asarray(t_h) - self.at_h) / self.half_h
+        return np.asarray(np.polynomial.polynomial.polyval(z, c), np.float64)
 
     def rate_sd(self, t_h: float) -> float:
         """Return the s.d. of the rate at ``t_h``, noise models mixed."""

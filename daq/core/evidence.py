@@ -23,7 +23,7 @@ from typing import Final, NamedTuple
 import numpy as np
 
 from daq.core import ladder, noise
-from daq.records import FloatArray
+from daq.records import FloatArray, IntArray
 
 FLOOR: Final = 0.2e-6
 """Systematic error of a block mean [strain] that no extensometer can be trusted beyond: 5 nm on 25 mm."""
@@ -231,10 +231,10 @@ def nnls(h: FloatArray, b: FloatArray, start: FloatArray | None = None) -> tuple
     return z, passive
 
 
-def _solve(h: FloatArray, b: FloatArray, idx: FloatArray) -> FloatArray:
+def _solve(h: FloatArray, b: FloatArray, idx: IntArray) -> FloatArray:
     g = h[idx[:, None], idx]
     g.flat[:: idx.size + 1] *= 1.0 + 1e-11
-    return np.linalg.solve(g, b[idx])
+    return np.asarray(np.linalg.solve(g, b[idx]), np.float64)
 
 
 class _Cell(NamedTuple):
@@ -305,12 +305,12 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
     ]
     kept = [at for at in order[:MODELS] if cells[at].log_like > best - KEEP]
     # shorter stretches have more places: weighted by their length, as scan statistics are
-    prior = np.log(d.since / np.sum(d.since))
+    by_length = np.log(d.since / np.sum(d.since))
     l1 = np.full((len(kept), k), -np.inf)
     rss1 = np.full((len(kept), k), np.nan)
     for i, at in enumerate(kept):
         cell = cells[at]
-        if i and noise.log_mean(l1[0] + prior) - cells[kept[0]].log_like < QUIET:
+        if i and noise.log_mean(l1[0] + by_length) - cells[kept[0]].log_like < QUIET:
             break
         g = cell.rest
         for j, sel in enumerate(sels):
@@ -321,9 +321,9 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
             l1[i, j] = like(cell.const, rss1[i, j])
     per_onset = np.array([noise.log_mean(l1[:, j]) for j in range(k)])
     if np.isfinite(l1).any(axis=1).sum() == 1:
-        against = float(noise.log_mean(l1[0] + prior) - cells[kept[0]].log_like)
+        against = float(noise.log_mean(l1[0] + by_length) - cells[kept[0]].log_like)
     else:
-        against = float(noise.log_mean(per_onset + prior) - total0)
+        against = float(noise.log_mean(per_onset + by_length) - total0)
     step = _step_gain(d, [cells[at] for at in kept[:3]], like) if against > QUIET and steps > 1 else 0.0
     j = int(np.argmax(per_onset))
     i = int(np.argmax(l1[:, j]))

@@ -119,7 +119,7 @@ def thinned(rungs: FloatArray, now_share: float, floor_share: float, age_share: 
     at = np.array(first)
     if at.size == rungs.shape[0]:
         return rungs
-    out = rungs[at].copy()
+    out: FloatArray = rungs[at].copy()
     n = rungs[:, N]
     total = np.add.reduceat(n, at)
     group = np.repeat(np.arange(at.size), np.diff(np.append(at, rungs.shape[0])))
