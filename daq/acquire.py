@@ -62,12 +62,17 @@ class Polled:
 
 @dataclass(frozen=True, slots=True)
 class Layout:
-    """How a frame's scan is put together: column by column, (instrument, reading)."""
+    """How a frame's scan is put together: column by column, (instrument, reading).
+
+    ``late_ticks``: how long beyond its instant a scan waits for an instrument. It must cover a whole turn of
+    the slowest bus: what came later would be left out of every scan, with the link in perfect order.
+    """
 
     frame: str
     columns: tuple[str, ...]
     sources: tuple[tuple[str, str], ...]
     period_ticks: int
+    late_ticks: int = 0
 
     @property
     def instruments(self) -> frozenset[str]:
@@ -104,10 +109,11 @@ class Assembler:
                 if len(waiting[polled.instant]) == len(layout.instruments):
                     self._close(layout, polled.instant)
 
-    def overdue(self, before: int, stamp: Stamp) -> None:
-        """Close every instant up to ``before`` [boot ticks]; what is not there is missing."""
+    def overdue(self, now: int, stamp: Stamp) -> None:
+        """Close what has waited long enough at ``now`` [boot ticks]; what is not there is missing."""
         with self._lock:
             for layout in self._layouts:
+                before = now - layout.late_ticks
                 waiting = self._open[layout.frame]
                 late = [instant for instant in sorted(waiting) if instant <= before]
                 if late:
@@ -116,7 +122,8 @@ class Assembler:
                 due = before - before % layout.period_ticks
                 if not waiting and due > self._closed[layout.frame] >= 0:
                     # no bus of this frame said a word for a whole period: that is a fact as well
-                    waiting[due] = {"": Polled("", due, stamp, None)}
+                    at = Stamp(stamp.utc_tick - (stamp.boot_tick - due), due, stamp.boot_id)
+                    waiting[due] = {"": Polled("", due, at, None)}
                     self._close(layout, due)
 
     def _close(self, layout: Layout, instant: int) -> None:
@@ -184,8 +191,9 @@ class Bus:
     ) -> None:
         self.name = name
         self.beat = 0
+        self.abandoned = False
         self.worst_late_s = 0.0
-        self._polled = list(polled)
+        self.polled = list(polled)
         self._clock = clock
         self._deliver = deliver
         self._news = news
@@ -194,24 +202,38 @@ class Bus:
     @property
     def longest_turn_s(self) -> float:
         """Real seconds after which a turn of this loop is overdue beyond doubt."""
-        period = max(p.period_ticks for p in self._polled) / TICKS_PER_S / self._clock.speed
-        return period + len(self._polled) * (POLL_MOST_S + 1.0) + 5.0
+        period = max(p.period_ticks for p in self.polled) / TICKS_PER_S / self._clock.speed
+        return period + len(self.polled) * (POLL_MOST_S + 1.0) + 5.0
+
+    @property
+    def polls_s(self) -> float:
+        """Real seconds that a turn may take while every link is in order."""
+        return sum(self._most_s(p) for p in self.polled)
+
+    def _most_s(self, p: Polling) -> float:
+        return max(
+            POLL_LEAST_S, min(POLL_MOST_S, POLL_SHARE * p.period_ticks / TICKS_PER_S / self._clock.speed)
+        )
+
+    def abandon(self) -> None:
+        """Say no more, whatever a call that hangs may yet return; the thread ends when it does."""
+        self.abandoned = True
 
     def run(self, stop: threading.Event) -> None:
         """Poll until ``stop`` is set; drivers are closed on the way out, whatever happens."""
         try:
-            while not stop.is_set():
+            while not (stop.is_set() or self.abandoned):
                 now = self._clock.stamp().boot_tick
-                instant = min(now - now % p.period_ticks + p.period_ticks for p in self._polled)
+                instant = min(now - now % p.period_ticks + p.period_ticks for p in self.polled)
                 if self._clock.wait_until(instant, stop):
                     break
                 self.worst_late_s = max(self.worst_late_s, self._late_s(instant))
-                for p in self._polled:
-                    if instant % p.period_ticks == 0 and not stop.is_set():
+                for p in self.polled:
+                    if instant % p.period_ticks == 0 and not (stop.is_set() or self.abandoned):
                         self._turn(p, instant)
                 self.beat += 1
         finally:
-            for p in self._polled:
+            for p in self.polled:
                 _close(p)
 
     def _late_s(self, instant: int) -> float:
@@ -221,16 +243,20 @@ class Bus:
         if instant < p.retry_at:
             self._missed(p, instant, Quality.BAD_LINK, "not tried again yet")
             return
-        before = self._clock.stamp()
         try:
             if p.driver is None:
                 p.driver = p.make()
                 p.driver.open()
                 p.driver.identify()
-            real_period = p.period_ticks / TICKS_PER_S / self._clock.speed
-            readings = p.driver.poll(max(POLL_LEAST_S, min(POLL_MOST_S, POLL_SHARE * real_period)))
+            before = self._clock.stamp()
+            readings = p.driver.poll(self._most_s(p))
         except DriverError as error:
             self._failed(p, instant, error)
+            return
+        except Exception as error:  # a driver's bug must not end the thread of all that share its bus
+            self._failed(p, instant, LinkError(f"fault of the driver: {type(error).__name__}: {error}"))
+            return
+        if self.abandoned:
             return
         after = self._clock.stamp()
         if p.lost:
@@ -243,6 +269,8 @@ class Bus:
         self._deliver(Polled(p.name, instant, stamp, readings))
 
     def _failed(self, p: Polling, instant: int, error: DriverError) -> None:
+        if self.abandoned:
+            return
         p.failures += 1
         wrong = isinstance(error, IdentityError)
         if wrong or isinstance(error, LinkError) or p.failures >= LOST_AFTER:
@@ -267,8 +295,6 @@ class Bus:
 
 def _close(p: Polling) -> None:
     if p.driver is not None:
-        with contextlib.suppress(
-            DriverError
-        ):  # a port that cannot be closed is gone; the next open will say so
+        with contextlib.suppress(Exception):  # a port that cannot be closed is gone; the next open says so
             p.driver.close()
         p.driver = None

@@ -7,13 +7,13 @@ that mixes emulated and real instruments is refused when it also asks for speed.
 
 from __future__ import annotations
 
+import contextlib
 import json
-import os
 import subprocess
 import sys
 import threading
+from collections.abc import Callable
 from dataclasses import replace
-from pathlib import Path
 from typing import Any, Final
 
 from daq.clock import BenchClock, Clock, Origin, RealClock
@@ -30,8 +30,9 @@ class BenchError(UpturnError):
 class Bench:
     """The emulators of one lab file. ``instruments`` are the lab's with their real ports filled in."""
 
-    def __init__(self, lab: Lab) -> None:
+    def __init__(self, lab: Lab, line: Callable[[str], None] = print) -> None:
         self._lab = lab
+        self._line = line
         self._process: subprocess.Popen[str] | None = None
         self.instruments: tuple[Instrument, ...] = lab.instruments
         self.clock: Clock = RealClock()
@@ -87,15 +88,21 @@ class Bench:
         if missing:
             raise BenchError(f"emulated instruments: no port for {', '.join(missing)}")
         # what it says later is for the log of whoever looks; it must never fill the pipe
-        threading.Thread(target=_drain, args=(process,), daemon=True, name="bench-stderr").start()
+        threading.Thread(target=self._drain, args=(process,), daemon=True, name="bench-stderr").start()
         return ports
+
+    def _drain(self, process: subprocess.Popen[str]) -> None:
+        with contextlib.suppress(OSError, ValueError):  # closed at the end
+            for line in process.stderr or ():
+                self._line(f"emulated instruments: {line.rstrip()}")
 
     def stop(self) -> None:
         """Close the child's stdin, on which it ends; end it by force after two seconds."""
         if self._process is None:
             return
         assert self._process.stdin is not None
-        self._process.stdin.close()
+        with contextlib.suppress(OSError):  # it has ended already
+            self._process.stdin.close()
         try:
             self._process.wait(2.0)
         except subprocess.TimeoutExpired:
@@ -105,17 +112,3 @@ class Bench:
             if pipe is not None:
                 pipe.close()
         self._process = None
-
-
-def _drain(process: subprocess.Popen[str]) -> None:
-    try:
-        for line in process.stderr or ():
-            sys.stderr.write(f"emulated instruments: {line}")
-    except (OSError, ValueError):
-        return
-
-
-def fresh_folder(path: Path) -> None:
-    """Make the journal folder of a bench, private to this user."""
-    path.mkdir(parents=True, exist_ok=True)
-    os.chmod(path, 0o700)

@@ -97,9 +97,9 @@ class BenchClock:
 
     def stamp(self) -> Stamp:
         lab = self._lab_ns()
-        return Stamp(
-            (self._origin.utc_ns + lab) // NS_PER_TICK, lab // NS_PER_TICK, f"bench-{self._origin.boot_id}"
-        )
+        # another origin is another boot: its count begins at zero again
+        boot = f"bench-{self._origin.boot_id}-{self._origin.boot_ns}"
+        return Stamp((self._origin.utc_ns + lab) // NS_PER_TICK, lab // NS_PER_TICK, boot)
 
     def wait_until(self, boot_tick: int, stop: threading.Event) -> bool:
         """Sleep (in real time) until lab time is ``boot_tick``; return True if ``stop`` was set."""

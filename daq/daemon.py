@@ -10,107 +10,50 @@ from __future__ import annotations
 
 import contextlib
 import os
-import signal
+import subprocess
 import sys
 import threading
 import time
 from collections import defaultdict
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from pathlib import Path
-from types import FrameType
 from typing import Any, Final
 
-from daq import __version__
-from daq.acquire import Assembler, Bus, Layout, Polling
+from daq.acquire import Assembler, Bus, Layout, Polled, Polling
 from daq.bench import Bench
 from daq.broker import EmbeddedBroker
 from daq.clock import Clock
-from daq.core.rules import rules_to_json
-from daq.engine import HOST, Engine
+from daq.engine import HOST
 from daq.entries import SPOOL
+from daq.inlet import Acked, Inlet
 from daq.lines import plain_line
 from daq.publish import Publisher
-from daq.records import (
-    TICKS_PER_S,
-    ClockStepped,
-    ConditionChanged,
-    EngineStarted,
-    Fact,
-    Finding,
-    RecordError,
-    RulesAdopted,
-    ScansTaken,
-    UpturnError,
-)
+from daq.records import TICKS_PER_S, ClockStepped, ConditionChanged, Finding, Stamp, UpturnError
 from daq.settings import Instrument, Lab
-from daq.store.committer import Gather
+from daq.startup import first_facts, recover, standing
 from daq.store.journal import Journal
-from daq.supervise import Supervisor, notify
-from daq.writer import Acked, Writer
+from daq.supervise import Signals, Supervisor, notify
+from daq.writer import Writer
 from drivers import registry
+
+__all__ = ["DaemonError", "House", "recover", "run"]
 
 QUEUE_MOST: Final = 100_000
 """Scans that wait in memory while the disk is full: a day of one frame a second, some 30 MB."""
 LOOK_EVERY_S: Final = 0.5
 LATE_S: Final = 1.0
 """A scan waits for an instrument at least this long beyond its instant [real s], a period at least."""
-STOP_S: Final = 5.0
+BUSES_S, WRITER_S, PUBLISHER_S = 1.5, 2.0, 0.5
+"""How long each is waited for at the end, in this order [s]; together less than five seconds."""
+HUNG_MOST: Final = 3
+"""How often a bus that hangs is begun anew; each time leaves a thread behind."""
 CLOCK_STEP_S: Final = 1.0
 """A change of UTC against the boot clock from which it counts as set, not as slewed [real s]."""
 
 
 class DaemonError(UpturnError):
     """The daemon cannot start as asked; the message says what to change."""
-
-
-def recover(journal: Journal, say: Callable[[str], None]) -> tuple[Engine, int | None]:
-    """Rebuild the engine from the newest valid snapshot and the facts after it.
-
-    Returns the engine and the UTC tick at which the record ended (None in a new journal). With
-    another version's snapshots, or a damaged one, everything is rebuilt from the facts.
-    """
-    engine = Engine()
-    after = 0
-    host = journal.snapshot(HOST, __version__)
-    if host is not None and host.seq is not None:
-        try:
-            engine.restore(HOST, host.data)
-            for name in engine.wanted:
-                own = journal.snapshot(name, __version__)
-                if own is None or own.seq != host.seq:
-                    raise RecordError(f"snapshot {name!r}: wanted one of fact {host.seq}")
-                engine.restore(name, own.data)
-            after = host.seq
-        except RecordError as error:
-            say(f"rebuilding from the first fact: {error}")
-            engine, after = Engine(), 0
-    new: list[Finding] = []
-    for _, fact in journal.facts(after=after, on_damage=lambda trouble: say(f"left out: {trouble}")):
-        new += [f for f in engine.take(fact) if not journal.has_finding(f.id)]
-    if new:
-        # a later version may conclude more from the same facts: kept as findings, never published again
-        from daq.store.rows import Batch
-
-        journal.commit(Batch(findings=tuple(new)))
-        say(f"version {__version__} concludes {len(new)} findings more; they are kept, not published")
-    ends = [s.clock.latest + s.clock.utc_lead for s in engine.tests.values()]
-    return engine, max(ends, default=None)
-
-
-@dataclass
-class House:
-    """Everything that runs, so that it can be stopped in order."""
-
-    lab: Lab
-    clock: Clock
-    stop: threading.Event = field(default_factory=threading.Event)
-    threads: list[threading.Thread] = field(default_factory=list)
-
-    def thread(self, name: str, target: Callable[[threading.Event], None]) -> None:
-        t = threading.Thread(target=target, args=(self.stop,), name=name, daemon=True)
-        self.threads.append(t)
-        t.start()
 
 
 def run(lab: Lab, *, seconds: float | None = None, view: bool = False) -> int:
@@ -121,185 +64,246 @@ def run(lab: Lab, *, seconds: float | None = None, view: bool = False) -> int:
         DaemonError, BenchError, SettingsError: it cannot start as asked.
     """
     with Journal.open(lab.journal, site=lab.site) as journal:
+        _make_spool(lab.journal / SPOOL)
         log = _Log(lab.journal / "daemon.log" if view else None)
-        (lab.journal / SPOOL).mkdir(mode=0o700, exist_ok=True)
         for notice in journal.notices:
             log.line(f"journal: {notice}")
-        bench = Bench(lab)
+        bench = Bench(lab, log.line)
         broker = None
         try:
             bench.start()
             if lab.broker is not None and lab.broker.embedded:
                 broker = EmbeddedBroker(lab.broker.port)
                 broker.start()
-            return _live(lab, journal, bench, log, seconds, view)
+            house = House(lab, journal, bench, log)
+            code = house.live(seconds, view)
         finally:
             bench.stop()
             if broker is not None:
                 broker.stop()
             log.close()
+        if house.stuck:  # a write that hangs would hold up the journal's end for ever; a kill is as good
+            print("upturn: the disk does not answer; ended without it", file=sys.stderr, flush=True)
+            os._exit(74)
+        return code
 
 
-def _live(lab: Lab, journal: Journal, bench: Bench, log: _Log, seconds: float | None, view: bool) -> int:
-    clock = bench.clock
-    house = House(lab, clock)
-    gather: Gather[Fact | Acked] = Gather(QUEUE_MOST)
-    engine, ended = recover(journal, log.line)
-
-    def trouble(condition: str, active: bool, message: str) -> None:
-        gather.put(ConditionChanged(clock.stamp(), HOST, "broker", condition, active, message))
-
-    def acked(rows: Sequence[int]) -> None:
-        gather.put(Acked(tuple(rows)))
-
-    def arrived(scan: ScansTaken) -> None:
-        gather.put(scan, 0.0)  # a poll loop never waits for the disk: what finds no room is counted and told
-
-    publisher = None
-    if lab.broker is not None:
-        publisher = Publisher(lab.broker, site=lab.site, on_acked=acked, on_trouble=trouble)
-    told = {"site": lab.site, "speed": clock.speed, "emulated": lab.bench is not None, "pid": os.getpid()}
-    writer = Writer(
-        journal, engine, gather, clock, site=lab.site, host_status=told, publisher=publisher, say=log.finding
-    )
-    writer.take_now(_first_facts(lab, engine, clock, ended))
-    if publisher is not None:
-        publisher.start(lambda after, limit: journal.outbox(after=after, limit=limit))
-    supervisor = Supervisor()
-    assembler = Assembler(_layouts(lab), arrived)
-    house.thread("writer", writer.run)
-    supervisor.watch("writer", lambda: writer.beat, 30.0)
-    if publisher is not None:
-        supervisor.watch("publisher", lambda: publisher.beat, 30.0)
-    buses = _buses(lab, bench.instruments, clock, assembler, gather)
-    for bus in buses:
-        house.thread(f"bus {bus.name}", bus.run)
-        supervisor.watch(f"bus {bus.name}", lambda bus=bus: bus.beat, bus.longest_turn_s)  # type: ignore[misc]
-    notify(f"READY=1\nSTATUS=watching {len(lab.frames)} frames")
-    child = _start_view(lab) if view else None
-    code = _supervise(house, supervisor, assembler, gather, seconds, log, child)
-    notify("STOPPING=1")
-    house.stop.set()
-    end = time.monotonic() + STOP_S - 1.0
-    for t in reversed(house.threads):  # buses first, then the writer with what they left
-        t.join(max(0.1, end - time.monotonic()))
-    if publisher is not None:
-        publisher.stop(1.0)
-    return 74 if writer.broken is not None else code
+def _make_spool(spool: Path) -> None:
+    try:
+        spool.mkdir(mode=0o700, exist_ok=True)
+    except OSError as error:
+        raise DaemonError(f"{spool}: got {error.strerror}, wanted to make the folder for entries") from error
 
 
-def _first_facts(lab: Lab, engine: Engine, clock: Clock, ended: int | None) -> Iterator[Fact]:
-    stamp = clock.stamp()
-    yield EngineStarted(stamp, __version__, ended)
-    for frame in lab.frames:
-        for rules in frame.tests:
-            text = rules_to_json(rules)
-            known = engine.tests.get(rules.test)
-            if known is None or known.rules != text:
-                yield RulesAdopted(stamp, frame.name, rules.test, text)
+@dataclass
+class Line:
+    """One bus and its thread, and how to begin anew when it hangs."""
+
+    bus: Bus
+    hung: int = 0
+    stalled: bool = False
+    begun_at: float = 0.0
 
 
-def _layouts(lab: Lab) -> list[Layout]:
-    return [
-        Layout(
-            f.name,
-            f.columns,
-            tuple(f.sources[c] for c in f.columns),
-            max(1, round(f.scan_every_s * TICKS_PER_S)),
+class House:
+    """Everything that runs, from the first fact to the last, so that it can be stopped in order."""
+
+    def __init__(self, lab: Lab, journal: Journal, bench: Bench, log: _Log) -> None:
+        self._lab = lab
+        self._log = log
+        self._clock = clock = bench.clock
+        self._inlet = inlet = Inlet(QUEUE_MOST)
+        self._stop, self._drain = threading.Event(), threading.Event()
+        self._bus_threads: list[threading.Thread] = []
+        self.stuck = False
+        engine, ended = recover(journal, log.line)
+
+        def trouble(condition: str, active: bool, message: str) -> None:
+            inlet.news(ConditionChanged(clock.stamp(), HOST, "broker", condition, active, message))
+
+        def acked(rows: Sequence[int]) -> None:
+            inlet.news(Acked(rows))
+
+        self._publisher = None
+        if lab.broker is not None:
+            self._publisher = Publisher(lab.broker, site=lab.site, on_acked=acked, on_trouble=trouble)
+        told = {"site": lab.site, "speed": clock.speed, "emulated": lab.bench is not None, "pid": os.getpid()}
+        self._writer = Writer(
+            journal, engine, inlet, clock, site=lab.site, host_status=told, publisher=self._publisher,
+            say=log.finding, line=log.line,
+        )  # fmt: skip
+        self._writer_thread = threading.Thread(
+            target=self._writer.run, args=(self._drain,), name="writer", daemon=True
         )
-        for f in lab.frames
-    ]
+        self._lines = self._make_lines(bench.instruments, lambda name: standing(engine, name))
+        self._writer.take_now(first_facts(lab, engine, clock, ended))
+        self._backlog = lambda after, limit: journal.outbox(after=after, limit=limit)
 
+    # --- buses ---------------------------------------------------------------------------
 
-def _buses(
-    lab: Lab,
-    instruments: tuple[Instrument, ...],
-    clock: Clock,
-    assembler: Assembler,
-    gather: Gather[Fact | Acked],
-) -> list[Bus]:
-    """One bus for each port; instruments that share a port take turns on it."""
+    def _make_lines(self, instruments: Sequence[Instrument], lost: Callable[[str], bool]) -> dict[str, Line]:
+        """One bus for each port; instruments that share a port take turns on it."""
+        by_port: dict[str, list[Polling]] = defaultdict(list)
+        for i in instruments:
+            period = max(1, round(i.poll_s * TICKS_PER_S))
+            by_port[i.port or i.name].append(Polling(i.name, _maker(i), period, lost=lost(i.name)))
+        buses = {
+            port: Bus(port, polled, self._clock, self._deliver, self._news)
+            for port, polled in by_port.items()
+        }
+        self._assembler = Assembler(_layouts(self._lab, list(buses.values()), self._clock), self._inlet.scan)
+        return {port: Line(bus) for port, bus in buses.items()}
 
-    def news(instrument: str, condition: str, active: bool, message: str) -> None:
-        frames = sorted({f.name for f in lab.frames if any(i == instrument for i, _ in f.sources.values())})
+    def _deliver(self, polled: Polled) -> None:
+        self._assembler.deliver(polled)
+
+    def _news(self, instrument: str, condition: str, active: bool, message: str) -> None:
+        frames = sorted(
+            {f.name for f in self._lab.frames if any(i == instrument for i, _ in f.sources.values())}
+        )
         text = f"{instrument} ({', '.join(frames)}): {message}"
-        gather.put(ConditionChanged(clock.stamp(), HOST, instrument, condition, active, text))
+        self._inlet.news(ConditionChanged(self._clock.stamp(), HOST, instrument, condition, active, text))
 
-    by_port: dict[str, list[Polling]] = defaultdict(list)
-    for i in instruments:
-        period = max(1, round(i.poll_s * TICKS_PER_S))
-        make = _maker(i)
-        by_port[i.port or i.name].append(Polling(i.name, make, period))
-    return [Bus(port, polled, clock, assembler.deliver, news) for port, polled in by_port.items()]
+    def _start_bus(self, bus: Bus) -> None:
+        thread = threading.Thread(target=bus.run, args=(self._stop,), name=f"bus {bus.name}", daemon=True)
+        self._bus_threads.append(thread)
+        thread.start()
+
+    def _begin_anew(self, line: Line) -> None:
+        """Leave a hung thread to itself and poll the same port from a fresh one."""
+        line.hung += 1
+        line.begun_at = time.monotonic()
+        old = line.bus
+        old.abandon()
+        self._log.line(f"bus {old.name}: begun anew ({line.hung} of {HUNG_MOST} times)")
+        fresh = [Polling(p.name, p.make, p.period_ticks, lost=p.lost) for p in old.polled]
+        line.bus = Bus(old.name, fresh, self._clock, self._deliver, self._news, seed=line.hung)
+        self._start_bus(line.bus)
+
+    # --- life ----------------------------------------------------------------------------
+
+    def live(self, seconds: float | None, view: bool) -> int:
+        """Start everything, look after it until it is time to stop, stop it; return the exit code."""
+        child = None
+        with Signals() as signals:
+            try:
+                if self._publisher is not None:
+                    self._publisher.start(self._backlog)
+                self._writer_thread.start()
+                for line in self._lines.values():
+                    self._start_bus(line.bus)
+                notify(f"READY=1\nSTATUS=watching {len(self._lab.frames)} frames")
+                child = _start_view(self._lab) if view else None
+                self._supervise(signals, seconds, child)
+            finally:
+                notify("STOPPING=1")
+                self._end(child)
+        return 74 if self._writer.broken is not None else 0
+
+    def _end(self, child: Any) -> None:
+        """Buses first, then the writer with what they left, then the publisher with what that made."""
+        self._stop.set()
+        if child is not None:
+            child.terminate()
+        end = time.monotonic() + BUSES_S
+        for thread in self._bus_threads:  # one that hangs is left behind; it ends with the process
+            thread.join(max(0.0, end - time.monotonic()))
+        self._drain.set()
+        if self._writer_thread.ident is not None:
+            self._writer_thread.join(WRITER_S)
+            self.stuck = self._writer_thread.is_alive()
+        if self._publisher is not None:
+            self._publisher.stop(PUBLISHER_S)
+        if child is not None:
+            try:
+                child.wait(1.0)
+            except subprocess.TimeoutExpired:  # stopped from the keyboard, say
+                child.kill()
+                child.wait()
+
+    def _supervise(self, signals: Signals, seconds: float | None, child: Any) -> None:
+        """Look after everything about twice a second until it is time to stop."""
+        supervisor = Supervisor()
+        supervisor.watch("writer", lambda: self._writer.beat, 30.0)
+        if self._publisher is not None:
+            publisher = self._publisher
+            supervisor.watch("publisher", lambda: publisher.beat, 30.0)
+        lines = {f"bus {port}": line for port, line in self._lines.items()}
+        for name, line in lines.items():
+            longest_s = line.bus.longest_turn_s
+            supervisor.watch(name, lambda line=line: line.bus.beat, longest_s, vital=False)  # type: ignore[misc]
+        clock = self._clock
+        began = time.monotonic()
+        lead = _lead(clock.stamp())
+        period = min((f.scan_every_s for f in self._lab.frames), default=1.0)
+        while self._writer.broken is None:
+            if signals.wait(min(LOOK_EVERY_S, max(0.05, period / clock.speed / 2))):
+                return
+            now = clock.stamp()
+            step = _lead(now) - lead
+            lead += step  # a clock that is slewed moves by little from look to look, one that is set by much
+            if abs(step) / TICKS_PER_S / clock.speed > CLOCK_STEP_S:
+                self._inlet.news(ClockStepped(now, step))
+            self._assembler.overdue(now.boot_tick, now)
+            for name, stalled in supervisor.look():
+                self._log.line(f"{name}: {'no progress for too long' if stalled else 'moves again'}")
+                if name in lines:
+                    message = f"{name} hangs" if stalled else f"{name} moves again"
+                    self._inlet.news(ConditionChanged(now, HOST, name, "link_lost", stalled, message))
+                    lines[name].stalled = stalled
+            for line in lines.values():
+                waited_s = time.monotonic() - line.begun_at
+                if line.stalled and line.hung < HUNG_MOST and waited_s > line.bus.longest_turn_s:
+                    self._begin_anew(line)
+            if child is not None and child.poll() is not None:
+                child = None
+                self._log.to_terminal(
+                    f"The view is closed; recording goes on. Ctrl-C stops it; "
+                    f"`upturn watch {self._lab.journal}` opens the view again."
+                )
+            if seconds is not None and time.monotonic() - began >= seconds:
+                return
+
+
+def _lead(stamp: Stamp) -> int:
+    return stamp.utc_tick - stamp.boot_tick
+
+
+def _layouts(lab: Lab, buses: Sequence[Bus], clock: Clock) -> list[Layout]:
+    slowest = {p.name: bus.polls_s for bus in buses for p in bus.polled}
+    layouts = []
+    for f in lab.frames:
+        sources = tuple(f.sources[c] for c in f.columns)
+        turn_s = max((slowest.get(instrument, 0.0) for instrument, _ in sources), default=0.0)
+        late_s = max(f.scan_every_s, max(LATE_S, turn_s) * clock.speed)
+        period = max(1, round(f.scan_every_s * TICKS_PER_S))
+        layouts.append(Layout(f.name, f.columns, sources, period, round(late_s * TICKS_PER_S)))
+    return layouts
 
 
 def _maker(i: Instrument) -> Callable[[], Any]:
     return lambda: registry.create(i.driver, i.options)
 
 
-def _supervise(
-    house: House,
-    supervisor: Supervisor,
-    assembler: Assembler,
-    gather: Gather[Fact | Acked],
-    seconds: float | None,
-    log: _Log,
-    child: Any,
-) -> int:
-    """Look after everything about twice a second until it is time to stop."""
-    wake = threading.Event()
-
-    def on_signal(number: int, frame: FrameType | None) -> None:
-        house.stop.set()
-        wake.set()
-
-    for number in (signal.SIGTERM, signal.SIGINT):
-        signal.signal(number, on_signal)
-    signal.signal(signal.SIGHUP, signal.SIG_IGN)  # a closed terminal must not end a six-month test
-    clock = house.clock
-    began = time.monotonic()
-    first = clock.stamp()
-    lead = first.utc_tick - first.boot_tick
-    period = max((f.scan_every_s for f in house.lab.frames), default=1.0)
-    grace = int(max(period, LATE_S * clock.speed) * TICKS_PER_S)
-    while not house.stop.is_set():
-        wake.wait(min(LOOK_EVERY_S, max(0.05, period / clock.speed / 2)))
-        now = clock.stamp()
-        step = now.utc_tick - now.boot_tick - lead
-        if abs(step) / TICKS_PER_S / clock.speed > CLOCK_STEP_S:
-            lead += step
-            gather.put(ClockStepped(now, step))
-        assembler.overdue(now.boot_tick - grace, now)
-        for name, stalled in supervisor.look():
-            log.line(f"{name}: {'no progress for too long' if stalled else 'moves again'}")
-            if name.startswith("bus "):
-                message = f"{name} hangs" if stalled else f"{name} moves again"
-                gather.put(ConditionChanged(now, HOST, name, "link_lost", stalled, message))
-        if child is not None and child.poll() is not None:
-            child = None
-            log.to_terminal(
-                f"The view is closed; recording goes on. Ctrl-C stops it; "
-                f"`upturn watch {house.lab.journal}` opens the view again."
-            )
-        if seconds is not None and time.monotonic() - began >= seconds:
-            break
-    if child is not None:
-        child.terminate()
-        child.wait(2.0)
-    return 0
-
-
 def _start_view(lab: Lab) -> Any:
-    import subprocess
-
     return subprocess.Popen([sys.executable, "-m", "daq.cli", "watch", str(lab.journal)])
 
 
 class _Log:
-    """Plain lines: to stdout, or to a file in the journal folder while the view has the terminal."""
+    """Plain lines: to stdout, or to a file in the journal folder while the view has the terminal.
+
+    Lines come from several threads. No trouble with them may stop the recording: a full log disk, a
+    closed pipe, a terminal that cannot show a letter.
+    """
 
     def __init__(self, path: Path | None) -> None:
-        self._file = None if path is None else path.open("a", encoding="utf-8")
+        self._lock = threading.Lock()
+        self._file = None
+        if path is not None:
+            try:
+                self._file = path.open("a", encoding="utf-8")
+            except OSError as error:
+                raise DaemonError(f"{path}: got {error.strerror}, wanted to write the log there") from error
 
     def line(self, text: str) -> None:
         self._write(f"{time.strftime('%Y-%m-%dT%H:%M:%SZ', time.gmtime())} upturn: {text}")
@@ -313,11 +317,11 @@ class _Log:
         self.line(text)
 
     def _write(self, text: str) -> None:
-        out = self._file or sys.stdout
-        with contextlib.suppress(OSError):  # a full log disk or a closed pipe must not stop the recording
-            print(text, file=out, flush=True)
+        with self._lock, contextlib.suppress(OSError, ValueError):
+            print(text, file=self._file or sys.stdout, flush=True)
 
     def close(self) -> None:
-        if self._file is not None:
-            self._file.close()
-            self._file = None
+        with self._lock, contextlib.suppress(OSError):
+            if self._file is not None:
+                file, self._file = self._file, None
+                file.close()

@@ -6,11 +6,16 @@ every critical loop and pings only when each has moved within the time it is all
 
 from __future__ import annotations
 
+import contextlib
 import os
+import select
+import signal
 import socket
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
+from types import FrameType, TracebackType
+from typing import Any, Self
 
 
 def notify(text: str) -> bool:
@@ -36,6 +41,7 @@ class Loop:
     name: str
     beat: Callable[[], int]
     longest_s: float
+    vital: bool = True
     last: int = -1
     moved_at: float = 0.0
     stalled: bool = False
@@ -48,12 +54,12 @@ class Supervisor:
         self._clock = clock
         self._loops: list[Loop] = []
 
-    def watch(self, name: str, beat: Callable[[], int], longest_s: float) -> None:
-        """Add a loop to those that must move."""
-        self._loops.append(Loop(name, beat, longest_s, moved_at=self._clock()))
+    def watch(self, name: str, beat: Callable[[], int], longest_s: float, *, vital: bool = True) -> None:
+        """Add a loop to those that must move. One that is not ``vital`` is told, but stops no ping."""
+        self._loops.append(Loop(name, beat, longest_s, vital, moved_at=self._clock()))
 
     def look(self) -> list[tuple[str, bool]]:
-        """Return news as (loop, stalled), and ping the watchdog when every loop has moved in time."""
+        """Return news as (loop, stalled), and ping the watchdog when every vital loop has moved in time."""
         now = self._clock()
         news = []
         for loop in self._loops:
@@ -64,6 +70,50 @@ class Supervisor:
             if stalled != loop.stalled:
                 loop.stalled = stalled
                 news.append((loop.name, stalled))
-        if not any(loop.stalled for loop in self._loops):
+        if not any(loop.stalled and loop.vital for loop in self._loops):
             notify("WATCHDOG=1")
         return news
+
+
+class Signals:
+    """SIGTERM and SIGINT as a flag that can be waited for; SIGHUP is ignored. For the main thread.
+
+    The handler takes no lock: one that sets an event would block for ever when it interrupts the
+    wait for that event, or itself, as happens when signals come in a storm.
+    """
+
+    def __init__(self) -> None:
+        self.came = False
+
+    def __enter__(self) -> Self:
+        self._read, self._write = os.pipe()
+        os.set_blocking(self._read, False)
+        os.set_blocking(self._write, False)
+        self._fd = signal.set_wakeup_fd(self._write, warn_on_full_buffer=False)
+        self._before: dict[int, Any] = {}
+        for number in (signal.SIGTERM, signal.SIGINT):
+            self._before[number] = signal.signal(number, self._on)
+        # a closed terminal must not end a six-month test
+        self._before[signal.SIGHUP] = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+        return self
+
+    def _on(self, number: int, frame: FrameType | None) -> None:
+        self.came = True
+
+    def wait(self, timeout_s: float) -> bool:
+        """Wait for a signal for at most ``timeout_s``; return whether one ever came."""
+        if not self.came:
+            select.select([self._read], [], [], timeout_s)
+            with contextlib.suppress(BlockingIOError):
+                os.read(self._read, 4096)
+        return self.came
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        for number, handler in self._before.items():
+            # once the end was asked for, asking again must not cut it short
+            signal.signal(number, signal.SIG_IGN if self.came else handler)
+        signal.set_wakeup_fd(self._fd)
+        os.close(self._read)
+        os.close(self._write)

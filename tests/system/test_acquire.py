@@ -175,3 +175,81 @@ def test_a_stranger_on_the_port_is_refused_and_named() -> None:
     assert news[0] == ("identity_wrong", True)
     assert all(p.readings is None and p.why is Quality.BAD_IDENTITY for p in got[:1])
     assert all(p.readings is None for p in got)
+
+
+def test_a_bug_of_a_driver_is_a_lost_link_not_the_end_of_its_bus() -> None:
+    """The thread once died, and with it every instrument on the same line."""
+    moods = {0: "well", 5: "bug", 9: "well"}
+    real = Gauge.poll
+
+    def poll(self: Gauge, deadline_s: float) -> list[RawReading]:
+        if self._mood() == "bug":
+            raise IndexError("list index out of range")
+        return real(self, deadline_s)
+
+    with pytest.MonkeyPatch.context() as patched:
+        patched.setattr(Gauge, "poll", poll)
+        got, news = _run(moods)
+    assert len(got) == 60
+    assert news[:2] == [("link_lost", True), ("link_lost", False)]
+    assert got[-1].readings is not None
+
+
+def test_a_link_that_was_lost_before_the_start_is_told_when_it_answers() -> None:
+    """The alarm in the record would else stand for ever: the new thread never saw the link lost."""
+    news: list[tuple[str, bool]] = []
+    stop = threading.Event()
+    polling = Polling("gauge", lambda: Gauge(lambda: "well"), PERIOD, lost=True)
+    Bus(
+        "port", [polling], FastClock(), lambda p: stop.set(), lambda n, c, active, m: news.append((c, active))
+    ).run(stop)
+    assert ("link_lost", False) in news
+
+
+def test_what_a_hung_call_returns_after_its_bus_was_abandoned_is_not_taken() -> None:
+    """A fresh thread polls the same instrument by then; one number must not enter twice."""
+    got: list[Polled] = []
+    hangs, goes_on = threading.Event(), threading.Event()
+
+    class Hung(Gauge):
+        def poll(self, deadline_s: float) -> list[RawReading]:
+            hangs.set()
+            goes_on.wait(5.0)
+            return [RawReading("d1", 1.0, GOOD)]
+
+    bus = Bus(
+        "port", [Polling("gauge", lambda: Hung(lambda: "well"), PERIOD)], FastClock(), got.append,
+        lambda *news: None,
+    )  # fmt: skip
+    thread = threading.Thread(target=bus.run, args=(threading.Event(),))
+    thread.start()
+    assert hangs.wait(5.0)
+    bus.abandon()
+    goes_on.set()
+    thread.join(5.0)
+    assert not thread.is_alive()
+    assert got == []
+    assert Gauge.open_now == 0
+
+
+def test_a_scan_waits_for_the_last_instrument_of_a_slow_bus_and_no_longer(scans: list[ScansTaken]) -> None:
+    """Three slow instruments on one line take longer than a period: the third was left out of every scan."""
+    layout = Layout("H1", LAYOUT.columns, LAYOUT.sources, PERIOD, late_ticks=2 * PERIOD)
+    slow = Assembler([layout], scans.append)
+    slow.deliver(_polled("gauge", PERIOD, RawReading("d1", 1.0)))
+    slow.overdue(3 * PERIOD - 1, Stamp(3 * PERIOD, 3 * PERIOD, "b"))
+    assert scans == []
+    slow.deliver(_polled("scanner", PERIOD, RawReading("101", 980.0)))
+    assert scans[0].values.tolist() == [[1.0, 980.0]]
+    slow.deliver(_polled("gauge", 2 * PERIOD, RawReading("d1", 2.0)))
+    slow.overdue(4 * PERIOD, Stamp(4 * PERIOD, 4 * PERIOD, "b"))
+    assert len(scans) == 2
+
+
+def test_a_scan_of_silence_is_dated_by_its_instant(assembler: Assembler, scans: list[ScansTaken]) -> None:
+    """Dated by when it was noticed it could come after the scan that follows it."""
+    assembler.deliver(_polled("gauge", PERIOD, RawReading("d1", 1.0)))
+    assembler.deliver(_polled("scanner", PERIOD, RawReading("101", 980.0)))
+    assembler.overdue(2 * PERIOD + 777, Stamp(10**6 + 2 * PERIOD + 777, 2 * PERIOD + 777, "b"))
+    assert scans[1].boot_tick.tolist() == [2 * PERIOD]
+    assert scans[1].utc_tick.tolist() == [10**6 + 2 * PERIOD]

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import os
+import signal
 import socket
+import threading
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
 
-from daq.supervise import Supervisor, notify
+from daq.supervise import Signals, Supervisor, notify
 
 
 @pytest.fixture
@@ -69,3 +72,39 @@ def test_the_watchdog_is_fed_only_while_every_loop_moves(manager: socket.socket)
     now[0] = 12.0
     assert supervisor.look() == [("b", False)]
     assert _heard(manager) == b"WATCHDOG=1"
+
+
+def test_a_loop_that_is_not_vital_is_told_but_stops_no_ping(manager: socket.socket) -> None:
+    """One hung port is no reason to restart the polling of all others."""
+    now = [0.0]
+    supervisor = Supervisor(lambda: now[0])
+    supervisor.watch("bus", lambda: 0, 10.0, vital=False)
+    supervisor.look()
+    _heard(manager)
+    now[0] = 11.0
+    assert supervisor.look() == [("bus", True)]
+    assert _heard(manager) == b"WATCHDOG=1"
+
+
+def test_a_storm_of_signals_is_one_word_to_stop_and_blocks_nothing() -> None:
+    """A handler that takes a lock may interrupt itself while it holds it, and then waits for ever."""
+    before = {n: signal.getsignal(n) for n in (signal.SIGTERM, signal.SIGINT, signal.SIGHUP)}
+    try:
+        with Signals() as signals:
+            assert not signals.wait(0.01)
+            storm = threading.Thread(
+                target=lambda: [os.kill(os.getpid(), signal.SIGTERM) for _ in range(2000)]
+            )
+            storm.start()
+            began = time.monotonic()
+            while not signals.wait(0.5):
+                assert time.monotonic() - began < 5.0
+            storm.join()
+            assert signals.wait(10.0)
+        os.kill(os.getpid(), signal.SIGTERM)  # while the house is put in order: changes nothing
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+    with Signals():
+        pass
+    assert {n: signal.getsignal(n) for n in before} == before

@@ -1,0 +1,91 @@
+"""A start on a record that is there: what stood, what no longer stands, what is new."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pytest
+
+from daq import settings
+from daq.clock import BenchClock, Origin
+from daq.engine import Engine
+from daq.records import ConditionChanged, RulesAdopted, Stamp
+from daq.startup import first_facts, standing
+
+LAB = """\
+site: test
+journal: record
+instruments:
+  gauge:
+    driver: textline
+    port: /dev/null
+    ask: D
+    identity: {declared: g}
+    yields: {left: 1, mid: 2}
+frames:
+  H1:
+    specimen: {id: T-1, extensometer_length_mm: 25.0, diameter_mm: 6.0}
+    stress_mpa: 200
+    temperature_c: 980
+    tolerance: iso204
+    channels:
+      left: {role: extension, side: A, source: gauge.left}
+      mid: {role: specimen_temperature, source: gauge.mid}
+"""
+
+
+class Still:
+    speed = 1.0
+
+    def stamp(self) -> Stamp:
+        return Stamp(17 * 10**12, 10_000, "boot")
+
+
+@pytest.fixture
+def lab(tmp_path: Path) -> settings.Lab:
+    path = tmp_path / "lab.yaml"
+    path.write_text(LAB)
+    return settings.load(path)
+
+
+def test_conditions_whose_watcher_forgot_them_end_with_the_start(lab: settings.Lab) -> None:
+    """They would stand in the record, on the broker and on the screen for ever."""
+    engine = Engine()
+    at = Still().stamp()
+    for subject, condition in (
+        ("bus /dev/ttyUSB0", "link_lost"), ("gauge", "link_lost"), ("gone", "identity_wrong"),
+        ("broker", "publisher_down"), ("H1", "quarantined"),
+    ):  # fmt: skip
+        engine.take(ConditionChanged(at, "", subject, condition, True, "so it was"))
+    ended = {
+        (f.condition, f.subject)
+        for f in first_facts(lab, engine, Still(), None)  # type: ignore[arg-type]
+        if isinstance(f, ConditionChanged) and not f.active
+    }
+    assert ended == {
+        ("link_lost", "bus /dev/ttyUSB0"),
+        ("identity_wrong", "gone"),
+        ("publisher_down", "broker"),
+    }
+    assert standing(engine, "gauge")
+    assert not standing(engine, "scanner")
+
+
+def test_rules_are_adopted_when_they_are_new_and_not_again(lab: settings.Lab) -> None:
+    """A restart is no change of rules."""
+    engine = Engine()
+    first = list(first_facts(lab, engine, Still(), None))  # type: ignore[arg-type]
+    for fact in first:
+        engine.take(fact)
+    again = list(first_facts(lab, engine, Still(), None))  # type: ignore[arg-type]
+    assert sum(isinstance(f, RulesAdopted) for f in first) == 1
+    assert not any(isinstance(f, RulesAdopted) for f in again)
+
+
+def test_a_bench_that_begins_anew_is_another_boot(tmp_path: Path) -> None:
+    """With another speed its time begins at zero again; under the same boot it would run backwards."""
+    path = tmp_path / "bench.json"
+    one = Origin.keep(path, 3600.0)
+    assert Origin.keep(path, 3600.0) == one
+    two = Origin.keep(path, 60.0)
+    assert BenchClock(one).stamp().boot_id != BenchClock(two).stamp().boot_id
