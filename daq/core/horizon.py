@@ -21,8 +21,10 @@ BEFORE_LEFT: Final = 0.3
 """Rupture comes before the law's end: at phi = 7 a critical damage of 0.4 leaves (1 - 0.4)^8 = 2 % of
 life (Kachanov-Rabotnov). Uniform between none and that, at most this share of the time left."""
 INEXACT: Final = 0.1
-"""Relative s.d. added to every time left: no law is exact, and rates of weeks to come are not those past."""
-EARLY: Final = 0.35
+"""Relative s.d. added to times left to rupture: no law is exact, and weeks to come are not those past."""
+INEXACT_STRAIN: Final = 0.05
+"""The same for a strain: it asks for less of a law than its end does."""
+EARLY: Final = 0.25
 """Before tertiary creep the early edge of a milestone is moved up by this share of the time left, times time
 left over age (at most one): the rate may begin to rise."""
 OFFSET_0P2: Final = 0.002
@@ -60,15 +62,15 @@ def interval(s: Sample, coverage: float) -> Interval:
     return Interval(*(float(left[i]) for i in at))
 
 
-def spread(s: Sample) -> Sample:
+def spread(s: Sample, relative_sd: float) -> Sample:
     """Return the sample widened by what laws do not know."""
-    left = (s.left_h[:, None] * np.exp(INEXACT * NODES)).ravel()
+    left = (s.left_h[:, None] * np.exp(relative_sd * NODES)).ravel()
     return Sample(left, (s.weight[:, None] * NODE_WEIGHTS).ravel())
 
 
 def ends(post: Posterior, age_h: float) -> Sample:
     """Return times left to rupture by the singular law: its end, less what rupture comes before it."""
-    s = spread(Sample(post.first, post.weight))
+    s = spread(Sample(post.first, post.weight), INEXACT)
     before = np.minimum(BEFORE_END * (s.left_h + age_h), BEFORE_LEFT * s.left_h)
     left = s.left_h[:, None] - SHARES * before[:, None]
     return Sample(left.ravel(), np.repeat(s.weight, SHARES.size))
@@ -161,16 +163,17 @@ def strain_sample(
         if post.law == SINGULAR:
             t = np.where(_bounded(post, p, least_h) < level, np.inf, t)
         parts.append(Sample(t, weight * post.weight))
-    return spread(Sample(*(np.concatenate(x) for x in zip(*parts, strict=True))))
+    return spread(Sample(*(np.concatenate(x) for x in zip(*parts, strict=True))), INEXACT_STRAIN)
 
 
 def _bounded(post: Posterior, p: Points, least_h: float) -> FloatArray:
     """Return the strain at the end of a singular law: finite where p < 1."""
     now, start = float(p.t_h[-1]), float(p.t_h[0])
-    with np.errstate(divide="ignore"):
-        shape = np.where(post.second < 1.0 - 1e-6, 1.0 / np.maximum(1.0 - post.second, 1e-6), np.inf)
+    finite = post.second < 1.0 - 1e-6
+    shape = 1.0 / np.where(finite, 1.0 - post.second, 1.0)
     base = laws.base_columns(np.array([now]), post.law, start, least_h, now)
-    return np.asarray((post.coefs[:, :-1] @ base)[:, 0] + post.coefs[:, -1] * shape)
+    end = (post.coefs[:, :-1] @ base)[:, 0] + post.coefs[:, -1] * shape
+    return np.where(finite, end, np.inf)
 
 
 def offset_sample(posts: Sequence[tuple[Posterior, float]], p: Points, least_h: float) -> Sample:
@@ -187,7 +190,7 @@ def offset_sample(posts: Sequence[tuple[Posterior, float]], p: Points, least_h: 
         away = np.where(t >= past[j][:, None], strain - tangent, -np.inf)
         end = post.first + now if post.law == SINGULAR else np.full(post.first.size, np.inf)
         parts.append(Sample(crossings(away, t, OFFSET_0P2, end) - now, weight * post.weight))
-    return spread(Sample(*(np.concatenate(x) for x in zip(*parts, strict=True))))
+    return spread(Sample(*(np.concatenate(x) for x in zip(*parts, strict=True))), INEXACT_STRAIN)
 
 
 # --- before tertiary creep ---------------------------------------------------------------
@@ -240,5 +243,5 @@ def reach(o: Onward, level: float, age_h: float) -> Interval | None:
         return None
     if not math.isfinite(high):
         high = float(o.left_h[-1])
-    low *= math.exp(-INEXACT * Z90) * (1.0 - EARLY * min(1.0, median / age_h))
-    return Interval(low, median, high * math.exp(INEXACT * Z90))
+    low *= math.exp(-INEXACT_STRAIN * Z90) * (1.0 - EARLY * min(1.0, median / age_h))
+    return Interval(low, median, high * math.exp(INEXACT_STRAIN * Z90))
