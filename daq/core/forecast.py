@@ -49,6 +49,9 @@ SCORE_MOST: Final = 2.0
 """Scores fade by a tenth a look, and one look counts for at most exp(2): a slip must not decide for good."""
 SAY_AGAIN: Final = 0.05
 """A forecast is said again when its median or an edge has moved by this share of the time left."""
+LOOK: Final = 0.05
+LOOK_LEFT: Final = 0.1
+LOOK_LEAST: Final = 0.005
 LAWS: Final = (SINGULAR, EXPONENTIAL, STEADY_EXPONENTIAL)
 
 
@@ -80,6 +83,16 @@ def begin() -> ForecastState:
 def status(s: ForecastState) -> list[dict[str, Any]]:
     """Return the last words on each event still ahead."""
     return [dict(fields) for fields in (s.said or {}).values()]
+
+
+def next_look_h(s: ForecastState, now_h: float) -> float:
+    """Return when to look again: a twentieth of the age on, or a tenth of the time left to rupture, not below
+    half a per cent of the age."""
+    rupture = (s.said or {}).get("rupture", {})
+    step = LOOK * now_h
+    if "median_h" in rupture:
+        step = min(step, max(LOOK_LEFT * (rupture["median_h"] - now_h), LOOK_LEAST * now_h))
+    return now_h + step
 
 
 def look(

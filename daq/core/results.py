@@ -65,6 +65,8 @@ def observe(s: ResultsState, rules: TestRules, block: Block) -> ResultsState:
         return s
     mean_state, mean = milestones.mean_strain(s.mean, block.strain_a, block.strain_b)
     s = replace(s, tallies=tallies.add(s.tallies, rules, block), mean=mean_state)
+    if len(block) == 1 and s.started_tick is not None and s.first_strain == s.first_strain:
+        return _observe_one(s, float(block.t_s[0]), float(mean[0]))
     rows = np.flatnonzero((mean == mean) & (block.t_s >= 0.0))
     if s.started_tick is None and block.t_s[-1] >= 0.0:
         row = int(np.argmax(block.t_s >= 0.0))
@@ -75,6 +77,15 @@ def observe(s: ResultsState, rules: TestRules, block: Block) -> ResultsState:
     last = rows[-RECENT:]
     recent = np.concatenate((s.recent, np.stack((block.t_s[last], mean[last]), axis=1)))[-RECENT:]
     return replace(s, recent=recent.copy(), first_strain=first)
+
+
+def _observe_one(s: ResultsState, t_s: float, strain: float) -> ResultsState:
+    if strain != strain or t_s < 0.0:
+        return s
+    recent = np.empty((min(RECENT, s.recent.shape[0] + 1), 2))
+    recent[:-1] = s.recent[s.recent.shape[0] + 1 - recent.shape[0] :]
+    recent[-1] = t_s, strain
+    return replace(s, recent=recent)
 
 
 def note(s: ResultsState, c: Conclusion) -> ResultsState:

@@ -97,6 +97,8 @@ def add(s: Tallies, rules: TestRules, block: Block) -> Tallies:
     if not n:
         return s
     cadence, paced = leaves.pace(s.cadence, block.tick, rules.scan_every_s)
+    if n == 1 and s.first_s == s.first_s and paced.step[0]:
+        return _add_one(replace(s, cadence=cadence), rules, block, int(paced.step[0]))
     loaded = block.t_s >= 0.0
     s = replace(s, cadence=cadence, scans=s.scans + n)
     if not loaded.any():
@@ -121,6 +123,53 @@ def add(s: Tallies, rules: TestRules, block: Block) -> Tallies:
     )
     s = _add_gaps(s, block, paced, loaded, began)
     return replace(s, temperatures=_add_temperatures(s.temperatures, rules, block, step, loaded))
+
+
+def _add_one(s: Tallies, rules: TestRules, block: Block, step: int) -> Tallies:
+    """Do what :func:`add` does, to the same bits, for the live scan that comes in its turn."""
+    t_s = float(block.t_s[0])
+    if t_s < 0.0:
+        return replace(s, scans=s.scans + 1)
+    q = block.quality[0].tolist()
+    x = band.signals(rules, block)[0].tolist()
+    return Tallies(
+        s.cadence,
+        tuple(_add_reading(t, rules, t_s, v, step) for t, v in zip(s.temperatures, x[:-1], strict=True)),
+        tuple(k + (c == 0) for k, c in zip(s.good, q, strict=True)),
+        tuple(k + (0 < c < BAD) for k, c in zip(s.suspect, q, strict=True)),
+        tuple(k + (c >= BAD) for k, c in zip(s.bad, q, strict=True)),
+        s.scans + 1,
+        s.loaded_scans + 1,
+        s.first_s,
+        t_s,
+        s.seen_ticks + step,
+        s.gap_count,
+        s.gap_ticks,
+        s.gaps,
+    )
+
+
+def _add_reading(t: Temperature, rules: TestRules, t_s: float, v: float, w: int) -> Temperature:
+    if v != v:
+        return t
+    base = t.base if t.base == t.base else v
+    dev, far = v - base, 0
+    if rules.set_point_c is not None and rules.below_k is not None and rules.above_k is not None:
+        away = v - rules.set_point_c
+        far = int(away > rules.above_k + EPS_K) - int(away < -rules.below_k - EPS_K)
+    return Temperature(
+        t.ticks + w,
+        base,
+        t.sum + w * dev,
+        t.squares + w * dev * dev,
+        min(t.least, v),
+        max(t.most, v),
+        t_s if v < t.least else t.least_s,
+        t_s if v > t.most else t.most_s,
+        t.below + w * ((far < 0) + (t.far < 0)) // 2,
+        t.above + w * ((far > 0) + (t.far > 0)) // 2,
+        far,
+    )
 
 
 def _plus(a: tuple[int, ...], b: Any) -> tuple[int, ...]:

@@ -203,6 +203,15 @@ def test_the_same_words_are_not_said_twice_and_the_state_keeps() -> None:
     assert encode_state(kept) == encode_state(again)
 
 
+def test_looks_come_closer_as_rupture_does() -> None:
+    """A twentieth of the age is half of the time left when nine tenths of life are gone."""
+    assert forecast.next_look_h(forecast.begin(), 100.0) == pytest.approx(105.0)
+    state, _ = forecast.look(forecast.begin(), RULES, curve_of(omega, 1800.0), "tertiary", 1800.0)
+    assert 1815.0 < forecast.next_look_h(state, 1800.0) < 1825.0
+    state, _ = forecast.look(forecast.begin(), RULES, curve_of(omega, 1990.0), "tertiary", 1990.0)
+    assert forecast.next_look_h(state, 1990.0) == pytest.approx(1990.0 * 1.005)
+
+
 @pytest.mark.parametrize("scale", [0.01, 100.0])
 def test_scaling_time_scales_the_answer(scale: float) -> None:
     """Nothing in a forecast may be tuned in hours."""
