@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import argparse
+import io
+import math
 import os
 import signal
 import sys
@@ -33,6 +35,24 @@ Upturn advises. Never wire it as the only protection of people, furnaces or spec
 """
 
 
+def seconds(text: str) -> float:
+    """Return a number of seconds given on the command line."""
+    try:
+        x = float(text)
+    except ValueError:
+        x = math.nan
+    if not 0.0 < x < math.inf:
+        raise argparse.ArgumentTypeError(f"got {text!r}, wanted a number of seconds above 0")
+    return x
+
+
+def count(text: str) -> int:
+    """Return a number of things given on the command line."""
+    if not text.isascii() or not text.isdigit() or int(text[:18]) == 0:
+        raise argparse.ArgumentTypeError(f"got {text!r}, wanted a whole number above 0")
+    return int(text[:18])
+
+
 def parser() -> argparse.ArgumentParser:
     """Return the parser of all commands."""
     try:
@@ -61,7 +81,7 @@ def parser() -> argparse.ArgumentParser:
     p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the settings of this host")
     p.add_argument("--plain", action="store_true", help="log lines even on a terminal, instead of the view")
     p.add_argument(
-        "--for", dest="seconds", type=float, metavar="SECONDS", help="stop by itself after this time"
+        "--for", dest="seconds", type=seconds, metavar="SECONDS", help="stop by itself after this time"
     )
 
     p = add("watch", "look at a running daemon, or at the record it left (read-only)")
@@ -134,8 +154,8 @@ def parser() -> argparse.ArgumentParser:
     )
     p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the lab file that names the broker")
     p.add_argument("--topic", default="", help="another topic filter than all of this site")
-    p.add_argument("--count", type=int, help="stop after so many messages")
-    p.add_argument("--for", dest="seconds", type=float, metavar="SECONDS", help="stop after this time")
+    p.add_argument("--count", type=count, help="stop after so many messages")
+    p.add_argument("--for", dest="seconds", type=seconds, metavar="SECONDS", help="stop after this time")
     return top
 
 
@@ -145,19 +165,38 @@ def main(argv: Sequence[str] | None = None) -> int:
     # and one thread keeps its sums in one order whatever the machine
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     os.environ.setdefault("OMP_NUM_THREADS", "1")
-    args = parser().parse_args(argv)
-    from daq import commands  # late, so that --help costs nothing
-
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):  # a terminal without a letter must not end a command
+            stream.reconfigure(errors="backslashreplace")
+    name = "upturn"
     try:
-        return commands.RUN[args.command](args)
-    except UpturnError as error:
-        print(f"upturn {args.command}: {error}", file=sys.stderr)
-        return commands.exit_code(error)
+        args = parser().parse_args(argv)
+        name = f"upturn {args.command}"
+        from daq import commands  # late, so that --help costs nothing
+
+        try:
+            code = commands.RUN[args.command](args)
+            if sys.stdout is not None:
+                sys.stdout.flush()  # here, where what goes wrong can still be said
+            return code
+        except UpturnError as error:
+            print(f"{name}: {error}", file=sys.stderr)
+            return commands.exit_code(error)
     except KeyboardInterrupt:
         return 128 + signal.SIGINT
     except BrokenPipeError:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _to_nowhere()
         return OK
+    except OSError as error:
+        where = "output" if error.filename is None else os.fsdecode(error.filename)
+        print(f"{name}: {where}: got {error.strerror or error}", file=sys.stderr)
+        _to_nowhere()
+        return BROKEN
+
+
+def _to_nowhere() -> None:
+    """What is still in the buffer of stdout cannot be written; it must not be tried again at the exit."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 if __name__ == "__main__":

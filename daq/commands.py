@@ -7,10 +7,15 @@ import time
 from argparse import Namespace
 from collections.abc import Callable, Iterator
 from pathlib import Path
-from typing import Final, TypeVar
+from typing import TYPE_CHECKING, Final, TypeVar
 
 from daq.cli import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
-from daq.records import Finding, UpturnError
+from daq.records import Fact, Finding, UpturnError
+
+if TYPE_CHECKING:  # a command imports what it needs when it runs, so that --help costs nothing
+    from daq.lines import HowAt
+    from daq.recording import Recording
+    from daq.settings import Frame, Lab
 
 T = TypeVar("T")
 
@@ -45,22 +50,23 @@ def watch(args: Namespace) -> int:
 
 def tell(args: Namespace) -> int:
     """Make an operator entry through the spool folder."""
-    from daq.entries import write_entry
+    from daq.entries import REFUSED, check_place, write_entry
     from daq.store.journal import JournalReader
 
     folder = journal_of(args.lab)
     frame, _, position = args.frame.partition("/")
-    with JournalReader(folder) as reader:
-        known = reader.frames()
     if frame == "host":
         frame = ""
-    elif frame not in known:
-        raise CommandError(f"frame: got {frame!r}, wanted one of {', '.join(known)}, or host")
+    with JournalReader(folder) as reader:
+        tests = [name for name in reader.status() if name] or reader.frames()
+    check_place(frame, position, tests)
     values: dict[str, object] = {}
     if position:
         values["position"] = position
     if args.alarm:
-        values |= {"alarm": args.alarm} | ({"subject": args.subject} if args.subject else {})
+        values["alarm"] = args.alarm
+    if args.subject:
+        values["subject"] = args.subject
     if args.hours is not None:
         values["hours"] = args.hours
     if args.minutes_ago:
@@ -68,6 +74,12 @@ def tell(args: Namespace) -> int:
     path = write_entry(folder, frame, args.entry, args.initials, values, args.note)
     for _ in range(20):  # say whether the daemon took it, when it is running
         if not path.exists():
+            aside = path.with_name(f"{REFUSED}{path.name}")
+            if aside.exists():
+                raise CommandError(
+                    f"{args.frame}: {args.entry} was refused by the daemon; its alarm entry_refused says why"
+                    f" (the entry is kept in {aside})"
+                )
             print(f"{args.frame}: {args.entry} entered by {args.initials}")
             return OK
         time.sleep(0.1)
@@ -82,24 +94,17 @@ def replay(args: Namespace) -> int:
     from daq.lines import iso_utc, json_line, plain_line
 
     tally, engine = replay.Tally(), Engine()
+    how_at: HowAt = iso_utc
+    plain_at: HowAt | None = None
+    total: Callable[[], float] | None = None
     if args.source.is_dir():
-        if not args.source.joinpath("journal.sqlite").exists():
-            raise CommandError(
-                f"{args.source}: got a folder without a journal, wanted a journal folder or a CSV file"
-            )
-        facts, how_at, whole = replay.journal_facts(args.source, args.frame), iso_utc, True
-        total: Callable[[], float] | None = None
+        facts, whole = _journal_to_replay(args), True
     else:
-        if args.rules is None or args.frame is None:
-            raise CommandError("replay of a recording: wanted --rules LAB.yaml and --frame NAME")
-        from daq import settings
-        from daq.recording import Recording
-
-        frame = _frame(settings.load(args.rules), args.frame)
-        recording = Recording(args.source, frame.name, frame.columns)
+        frame, recording = _recording_to_replay(args)
         for note in recording.notes:
             print(f"upturn replay: {note}", file=sys.stderr)
-        facts, how_at, whole = replay.recording_facts(recording, frame), recording.how_at, False  # type: ignore[assignment]
+        facts, whole = replay.recording_facts(recording, frame), False
+        how_at = plain_at = recording.how_at
         total = lambda: recording.done / max(recording.size, 1)  # noqa: E731
     if args.cut is not None:
         facts = replay.cut_at_random(facts, args.cut)
@@ -107,9 +112,9 @@ def replay(args: Namespace) -> int:
     shown = _with_progress(found, total)
     if args.findings is None:
         for finding in shown:
-            print(plain_line(finding))
+            print(plain_line(finding, plain_at))
     else:
-        with export.open_out(args.findings) as out:
+        with export.open_out(args.findings, keep=args.source) as out:
             if whole:  # a journal: by time, as ``export --findings`` writes them; the tables last
                 everything = list(shown)
                 export.write_findings((f for f in everything if f.kind != "summary"), out)
@@ -117,9 +122,49 @@ def replay(args: Namespace) -> int:
             else:
                 out.writelines(json_line(finding, how_at) + "\n" for finding in shown)
     print(f"upturn replay: {tally.say()}", file=sys.stderr)
+    for line in replay.never_began(engine):
+        print(f"upturn replay: {line}", file=sys.stderr)
     for test, why in engine.quarantined.items():
         print(f"upturn replay: {test}: quarantined: {why}", file=sys.stderr)
     return TROUBLE if engine.quarantined else OK
+
+
+def _journal_to_replay(args: Namespace) -> Iterator[Fact]:
+    from daq import replay
+    from daq.store.journal import JournalReader
+
+    if not args.source.joinpath("journal.sqlite").exists():
+        raise CommandError(
+            f"{args.source}: got a folder without a journal, wanted a journal folder or a CSV file"
+        )
+    if args.rules is not None:
+        raise CommandError(
+            "--rules: got it with a journal, wanted it with a recording only: a journal has its own"
+        )
+    if args.frame is not None:
+        with JournalReader(args.source) as reader:
+            known = reader.frames()
+        if args.frame not in known:
+            raise CommandError(f"--frame: got {args.frame!r}, wanted one of {', '.join(known)}")
+    return replay.journal_facts(args.source, args.frame)
+
+
+def _recording_to_replay(args: Namespace) -> tuple[Frame, Recording]:
+    from daq import replay, settings
+    from daq.recording import Recording, RecordingError
+
+    if not args.source.exists():
+        raise RecordingError(
+            f"{args.source}: got no such file or folder, wanted a CSV recording or a journal"
+        )
+    if args.source.name == "journal.sqlite":
+        raise CommandError(f"{args.source}: got a file of a journal, wanted its folder: {args.source.parent}")
+    if args.rules is None or args.frame is None:
+        raise CommandError("replay of a recording: wanted --rules LAB.yaml and --frame NAME")
+    frame = _frame(settings.load(args.rules), args.frame)
+    recording = Recording(args.source, frame.name, frame.columns)
+    replay.check_starts(recording, frame)
+    return frame, recording
 
 
 def export_(args: Namespace) -> int:
@@ -131,16 +176,21 @@ def export_(args: Namespace) -> int:
         raise CommandError("export: wanted --csv OUT.csv or --findings OUT.jsonl")
     if args.csv is not None and args.frame is None:
         raise CommandError("export --csv: wanted --frame NAME, a recording is of one frame")
-    with JournalReader(journal_of(args.journal)) as reader:
+    folder = journal_of(args.journal)
+    with JournalReader(folder) as reader:
+        known = reader.frames()
+        if args.frame is not None and args.frame not in known:
+            raise CommandError(f"--frame: got {args.frame!r}, wanted one of {', '.join(known)}")
         if args.csv is not None:
-            with export.open_out(args.csv) as out:
-                scans = export.write_recording(reader, args.frame, out)
+            columns = export.columns_of(reader, args.frame)  # before a file is begun, or written over
+            with export.open_out(args.csv, keep=folder) as out:
+                scans = export.write_recording(reader, args.frame, columns, out)
             print(f"upturn export: {scans} scans of {args.frame} to {args.csv}", file=sys.stderr)
         if args.findings is not None:
             mine = (
                 f for _, f in reader.findings() if args.frame is None or f.frame.split("/")[0] == args.frame
             )
-            with export.open_out(args.findings) as out:
+            with export.open_out(args.findings, keep=folder) as out:
                 count = export.write_findings(mine, out)
             print(f"upturn export: {count} findings to {args.findings}", file=sys.stderr)
     return OK
@@ -164,17 +214,14 @@ def journal_of(path: Path) -> Path:
     """Return the journal folder that ``path`` is, or that the lab file ``path`` names."""
     if path.is_dir():
         return path
-    if path.suffix in (".yaml", ".yml"):
+    if path.suffix in (".yaml", ".yml") or path.is_file():
         from daq import settings
 
         return settings.load(path).journal
     raise CommandError(f"{path}: got no such folder, wanted a journal folder or a lab file")
 
 
-def _frame(lab: object, name: str):  # type: ignore[no-untyped-def]
-    from daq.settings import Lab
-
-    assert isinstance(lab, Lab)
+def _frame(lab: Lab, name: str) -> Frame:
     for frame in lab.frames:
         if frame.name == name:
             return frame
@@ -211,13 +258,14 @@ def exit_code(error: UpturnError) -> int:
     from daq.export import ExportError
     from daq.recording import RecordingError
     from daq.settings import SettingsError
-    from daq.store.errors import JournalBroken, JournalBusy, JournalError
+    from daq.store.errors import JournalBroken, JournalBusy, JournalError, JournalFull
 
     table: tuple[tuple[type[UpturnError], int], ...] = (
         (SettingsError, USAGE),
         (CommandError, USAGE),
         (JournalBusy, BUSY),
         (JournalBroken, BROKEN),
+        (JournalFull, BROKEN),
         (RecordingError, INPUT),
         (ExportError, INPUT),
         (JournalError, INPUT),

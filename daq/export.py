@@ -10,8 +10,20 @@ from typing import TextIO
 
 import numpy as np
 
+from daq.core import timebase
+from daq.core.timebase import TimeState
 from daq.lines import iso_utc, json_line
-from daq.records import Finding, RulesAdopted, ScansTaken, UpturnError
+from daq.records import (
+    BAD,
+    TICKS_PER_S,
+    BurstTaken,
+    ClockStepped,
+    Finding,
+    IntArray,
+    RulesAdopted,
+    ScansTaken,
+    UpturnError,
+)
 from daq.store.journal import JournalReader
 
 
@@ -19,12 +31,8 @@ class ExportError(UpturnError):
     """What was asked for is not in the record, or cannot be written."""
 
 
-def write_recording(reader: JournalReader, frame: str, out: TextIO) -> int:
-    """Write the raw readings of ``frame`` in the recording format; return the number of scans.
-
-    A bad reading is an empty cell. Numbers are written so that reading them gives the same
-    double. Where the channels changed, the file has the columns of the last layout only for the
-    scans that had them; others are empty.
+def columns_of(reader: JournalReader, frame: str) -> list[str]:
+    """Return the names of all channels that scans of ``frame`` ever had.
 
     Raises:
         ExportError: the journal has no scans of that frame.
@@ -37,25 +45,46 @@ def write_recording(reader: JournalReader, frame: str, out: TextIO) -> int:
         raise ExportError(
             f"{reader.folder}: no scans of frame {frame!r}; frames here: {', '.join(reader.frames())}"
         )
+    return columns
+
+
+def write_recording(reader: JournalReader, frame: str, columns: list[str], out: TextIO) -> int:
+    """Write the raw readings of ``frame`` in the recording format; return the number of scans.
+
+    A bad reading is an empty cell. Numbers are written so that reading them gives the same
+    double. Where the channels changed, a scan has empty cells for those it had not. Time is lab time: UTC
+    when the test began, from there on the boot clock, so that a clock that was set bends no curve.
+    """
     out.write(f"# raw readings of frame {frame}; instrument units, before any conversion\n")
+    out.write("# time: UTC at the first fact, intervals by the boot clock, reboots bridged by UTC\n")
+    clock, began = TimeState(), False
+    scans = 0
     for _, fact in reader.facts(frame=frame):
         if isinstance(fact, RulesAdopted):
             out.write(f"# rules of {fact.test}: {fact.rules}\n")
-    out.write(",".join(["time", *columns]) + "\n")
-    scans = 0
-    for _, fact in reader.facts(frame=frame):
-        if isinstance(fact, ScansTaken) and fact.frame == frame:
+            began = True
+        if isinstance(fact, ScansTaken):
+            if fact.frame != frame:
+                continue
+            if not scans:
+                out.write(",".join(["time", *columns]) + "\n")
+            began = True
+            clock, tick = timebase.place(clock, fact)
             scans += len(fact)
-            out.writelines(_rows(fact, columns))
+            out.writelines(_rows(fact, tick, columns))
+        elif began and not isinstance(fact, BurstTaken):
+            clock, tick_now = timebase.place_stamp(clock, fact.stamp)
+            if isinstance(fact, ClockStepped):
+                out.write(f"# {iso_utc(tick_now)}: UTC was set by {fact.by_ticks / TICKS_PER_S:+.4f} s\n")
     return scans
 
 
-def _rows(fact: ScansTaken, columns: list[str]) -> Iterator[str]:
+def _rows(fact: ScansTaken, tick: IntArray, columns: list[str]) -> Iterator[str]:
     at = [fact.channels.index(c) if c in fact.channels else -1 for c in columns]
-    usable = ~np.isnan(fact.values) & (fact.quality < 64)
-    for i, tick in enumerate(fact.utc_tick.tolist()):
+    usable = ~np.isnan(fact.values) & (fact.quality < BAD)
+    for i, t in enumerate(tick.tolist()):
         cells = [repr(float(fact.values[i, j])) if j >= 0 and usable[i, j] else "" for j in at]
-        yield ",".join([iso_utc(tick), *cells]) + "\n"
+        yield ",".join([iso_utc(t), *cells]) + "\n"
 
 
 def in_order(findings: Iterable[Finding]) -> list[Finding]:
@@ -77,18 +106,26 @@ def write_findings(findings: Iterable[Finding], out: TextIO) -> int:
 
 
 @contextmanager
-def open_out(path: Path) -> Iterator[TextIO]:
+def open_out(path: Path, *, keep: Path | None = None) -> Iterator[TextIO]:
     """Open ``path`` for writing text, '-' for stdout, which stays open.
 
+    Args:
+        keep: The source, a file or a journal folder: nothing there may be written over.
+
     Raises:
-        ExportError: it cannot be written.
+        ExportError: it cannot be written, is part of the source, or the disk is full.
     """
     if str(path) == "-":
         yield sys.stdout
         return
     try:
-        out = path.open("w", encoding="utf-8", newline="\n")
+        if keep is not None:
+            real, source = path.resolve(), keep.resolve()
+            if real == source or (source.is_dir() and source in real.parents):
+                raise ExportError(f"{path}: got a place in the source {keep}, wanted another file to write")
+        with path.open("w", encoding="utf-8", newline="\n") as out:
+            yield out
+    except BrokenPipeError:
+        raise
     except OSError as error:
-        raise ExportError(f"{path}: cannot write: {error.strerror}") from error
-    with out:
-        yield out
+        raise ExportError(f"{path}: cannot write: {error.strerror or error}") from error

@@ -29,10 +29,14 @@ def json_line(f: Finding, how_at: HowAt) -> str:
     return canonical_json(line)
 
 
-def plain_line(f: Finding) -> str:
-    """Return one line for a log or a terminal: when, where, what, in the words of the trade."""
+def plain_line(f: Finding, how_at: HowAt | None = None) -> str:
+    """Return one line for a log or a terminal: when, where, what, in the words of the trade.
+
+    ``how_at`` says how a recording dates its scans; a recording may count seconds from any origin.
+    """
     at = "        -" if f.test_h is None else f"{f.test_h:9.2f}"
-    return f"{iso_utc(f.at_tick)[:19]}Z {at} h  {f.frame or 'host':<10} {say(f)}"
+    when = f"{iso_utc(f.at_tick)[:19]}Z" if how_at is None else f"{how_at(f.at_tick):>20}"
+    return f"{when} {at} h  {f.frame or 'host':<10} {say(f)}"
 
 
 def say(f: Finding) -> str:

@@ -16,8 +16,7 @@ from pathlib import Path
 from daq.core import chain
 from daq.core.rules import rules_to_json
 from daq.engine import Engine
-from daq.lines import HowAt, iso_utc
-from daq.recording import Recording
+from daq.recording import Recording, RecordingError
 from daq.records import Fact, Finding, RulesAdopted, ScansTaken, Stamp
 from daq.settings import Frame
 from daq.store.journal import JournalReader
@@ -44,6 +43,20 @@ class Tally:
             f"{self.readings / core_s:,.0f} readings/s through the chain "
             f"(and {self.reading_s:.2f} s to read the source)"
         )
+
+
+def check_starts(recording: Recording, frame: Frame) -> None:
+    """Check that test time can begin in a recording.
+
+    Raises:
+        RecordingError: full load is a moment of the calendar, and the recording counts seconds.
+    """
+    for rules in frame.tests:
+        if recording.time_column == "time_s" and chain.start_of(rules) is not None:
+            raise RecordingError(
+                f"{recording.path}: column time_s: got seconds from some origin, wanted a column time "
+                f"(ISO 8601 with zone), since {rules.test} starts at {rules.starts}"
+            )
 
 
 def recording_facts(recording: Recording, frame: Frame) -> Iterator[Fact]:
@@ -97,12 +110,16 @@ def run(facts: Iterable[Fact], tally: Tally | None = None, engine: Engine | None
             tally.findings += 1
             tally.seconds = time.perf_counter() - began
             yield finding
-    for state in engine.tests.values():
-        tally.findings += 1
-        yield chain.summary(state)
+    for name, state in engine.tests.items():
+        if name not in engine.quarantined:  # of a state that stands still a table would mislead
+            tally.findings += 1
+            yield chain.summary(state)
     tally.seconds = time.perf_counter() - began
 
 
-def journal_how_at() -> HowAt:
-    """Return how a journal's findings are dated: ISO 8601, UTC."""
-    return iso_utc
+def never_began(engine: Engine) -> Iterator[str]:
+    """Yield a sentence for each test whose time never began, so that no findings are no riddle."""
+    for name, state in engine.tests.items():
+        if state.start is None:
+            starts = chain.rules_of(state.rules).starts
+            yield f"{name}: test time never began (starts: {starts}): nothing is said of strain and rate"
