@@ -50,6 +50,8 @@ from daq.records import CoreError, FloatArray, IntArray, Quality
 
 BoolArray = npt.NDArray[np.bool_]
 FORCE_GONE: Final = 0.2
+SWITCH: Final = "break_switch"
+"""Subject of the word that a break switch is doubted."""
 _RANGE: Final = (int(Quality.BAD_RANGE), int(Quality.BAD_OVERLOAD))
 
 
@@ -58,13 +60,15 @@ _RANGE: Final = (int(Quality.BAD_RANGE), int(Quality.BAD_OVERLOAD))
 class RuptureState:
     """``last``: the scan before, sides as last read. ``intact``, ``free``: a break switch, a limit switch was
     seen off. ``off``: the load is off. ``vanished``: all strain is lost, and it was said that it may be
-    rupture. ``happened``: the test is broken, nothing more is judged."""
+    rupture. ``doubted``: the break switch is open without reason. ``happened``: the test is broken, nothing
+    more is judged."""
 
     last: After = NOTHING
     intact: bool = False
     free: bool = False
     off: bool = False
     vanished: bool = False
+    doubted: bool = False
     pending: Pending | None = None
     happened: bool = False
 
@@ -147,7 +151,7 @@ def watch_rupture(
         if s.pending is None:
             later = int(np.searchsorted(marks, row, "right"))
             ahead = int(marks[later]) if later < marks.size else n
-            if s.off or s.vanished:
+            if s.off or s.vanished or s.doubted:
                 row, s = _return(s, block, seen, row, ahead, cues)
                 if row < ahead:
                     continue
@@ -169,7 +173,7 @@ def watch_rupture(
 def _one_quiet(s: RuptureState, ch: _Channels, block: Block, c: Context) -> RuptureState | None:
     """Return the state after a live scan in which nothing happened, None where that needs a closer look."""
     last, a, b = s.last, float(block.strain_a[0]), float(block.strain_b[0])
-    if s.pending is not None or s.off or s.vanished or ch.switches or ch.stops or ch.force:
+    if s.pending is not None or s.off or s.vanished or s.doubted or ch.switches or ch.stops or ch.force:
         return None
     if (a != a and b != b) or last.lost or abs(a - last.a) >= TEAR or abs(b - last.b) >= TEAR:
         return None
@@ -186,11 +190,12 @@ def _one_quiet(s: RuptureState, ch: _Channels, block: Block, c: Context) -> Rupt
 def _return(
     s: RuptureState, block: Block, seen: _Seen, row: int, ahead: int, cues: list[Cue]
 ) -> tuple[int, RuptureState]:
-    """Return the first row after ``row`` in which load or strain is back, else ``ahead``."""
+    """Return the first row after ``row`` in which load, strain or the switch is back, else ``ahead``."""
     span = slice(row + 1, ahead)
     load = ~(seen.gone | seen.stop)[span] if s.off else np.zeros(max(0, ahead - row - 1), np.bool_)
     strain = ~seen.lost[span] if s.vanished else np.zeros_like(load)
-    back = np.flatnonzero(load | strain)
+    closed = ~seen.open[span] if s.doubted else np.zeros_like(load)
+    back = np.flatnonzero(load | strain | closed)
     if not back.size:
         return ahead, s
     k = int(back[0])
@@ -202,6 +207,9 @@ def _return(
     if strain[k]:
         s = replace(s, vanished=False)
         cues.append(Cue(scan, tick, "sensor_broken", ALL_STRAIN, False))
+    if closed[k]:
+        s = replace(s, doubted=False)
+        cues.append(Cue(scan, tick, "sensor_suspected", SWITCH, False))
     return row, s
 
 
@@ -291,8 +299,9 @@ def _append(s: RuptureState, ch: _Channels, after: After, stage: str, cues: list
         why, wait = judge(p, bool(ch.strain), stage)
         if why == SWITCH_DOUBTED:
             text = "the break switch is open while strain goes on as before: suspect the switch"
-            cues.append(Cue(after.scan, after.tick, "sensor_suspected", "break_switch", True, text))
-            return replace(s, pending=None)
+            if not s.doubted:
+                cues.append(Cue(after.scan, after.tick, "sensor_suspected", SWITCH, True, text))
+            return replace(s, pending=None, doubted=True)
         if why == LOAD_OFF:
             if not s.off:
                 cues.append(_load_off(p, after))

@@ -77,6 +77,13 @@ def test_an_open_switch_while_strain_goes_on_is_the_switch() -> None:
     for side in ("a", "b"):
         columns[side][AT + 20 :] += 0.2
     assert [c.alarm for c in said(columns)][-1] == "rupture"
+    columns = creep()
+    columns["switch"] = np.zeros(N)
+    columns["switch"][AT : AT + 30] = 1.0
+    assert [(c.alarm, c.active, c.scan) for c in said(columns)] == [
+        ("sensor_suspected", True, AT + 1),
+        ("sensor_suspected", False, AT + 30),
+    ]
 
 
 @pytest.mark.parametrize("then", [0.1, np.nan])
