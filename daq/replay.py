@@ -16,6 +16,7 @@ from pathlib import Path
 from daq.core import chain
 from daq.core.rules import rules_to_json
 from daq.engine import Engine
+from daq.joining import joined
 from daq.recording import Recording, RecordingError
 from daq.records import Fact, Finding, RulesAdopted, ScansTaken, Stamp
 from daq.settings import Frame
@@ -68,11 +69,10 @@ def recording_facts(recording: Recording, frame: Frame) -> Iterator[Fact]:
 
 
 def journal_facts(folder: Path, frame: str | None = None) -> Iterator[Fact]:
-    """Yield every fact of a journal in order."""
+    """Yield every fact of a journal, in order within each frame; scans in blocks."""
     reader = JournalReader(folder)
     try:
-        for _, fact in reader.facts(frame=frame):
-            yield fact
+        yield from joined(fact for _, fact in reader.facts(frame=frame))
     finally:
         reader.close()
 

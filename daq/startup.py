@@ -8,6 +8,7 @@ from daq import __version__
 from daq.clock import Clock
 from daq.core.rules import rules_to_json
 from daq.engine import HOST, Engine
+from daq.joining import joined
 from daq.records import ConditionChanged, EngineStarted, Fact, Finding, RecordError, RulesAdopted
 from daq.settings import Lab
 from daq.store.journal import Journal
@@ -38,7 +39,8 @@ def recover(journal: Journal, say: Callable[[str], None]) -> tuple[Engine, int |
             say(f"rebuilding from the first fact: {error}")
             engine, after = Engine(), 0
     new: list[Finding] = []
-    for _, fact in journal.facts(after=after, on_damage=lambda trouble: say(f"left out: {trouble}")):
+    stored = journal.facts(after=after, on_damage=lambda trouble: say(f"left out: {trouble}"))
+    for fact in joined(fact for _, fact in stored):
         new += [f for f in engine.take(fact) if not journal.has_finding(f.id)]
     if new:
         # a later version may conclude more from the same facts: kept as findings, never published again

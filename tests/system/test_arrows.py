@@ -15,6 +15,7 @@ EDGES: dict[str, set[str]] = {
     "daq.core": CORE_MAY,
     "daq.store": {"daq.store", "daq.records", "daq.codec"},
     "daq.lines": {"daq.records", "daq.codec"},
+    "daq.joining": {"daq.records"},
     "daq.clock": {"daq.records"},
     "daq.entries": {"daq.core", "daq.records"},
     "daq.door": {"daq.entries", "daq.clock", "daq.core", "daq.records"},
@@ -30,6 +31,7 @@ EDGES: dict[str, set[str]] = {
     "daq.broker": {"daq.records"},
     "daq.view": {"daq.view", "daq.store", "daq.records", "daq.lines"},
     "daq.replay": {
+        "daq.joining",
         "daq.engine",
         "daq.core",
         "daq.store",
