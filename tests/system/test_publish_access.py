@@ -298,7 +298,7 @@ def test_a_denied_topic_is_asked_once_a_try_not_once_a_row(tmp_path: Path) -> No
 
 
 def test_the_older_protocol_takes_a_denied_topic_for_a_success(tmp_path: Path) -> None:
-    """Why MQTT 5 is the default: 3.1.1 has no word for no, and the row is gone (measured with mosquitto 2.0.11)."""
+    """Why MQTT 5 is the default: 3.1.1 has no word for no, and the row is gone (measured)."""
     acl = tmp_path / "acl"
     acl.write_text("topic readwrite upturn/1/s/host/#\n")
     m = Mosquitto(tmp_path, f"allow_anonymous true\nacl_file {acl}\n")
