@@ -21,9 +21,10 @@ from typing import Any, Final
 import numpy as np
 
 from daq.core import alarms, causes, entered, follow, forecast, results, timebase, watch
+from daq.core.adopt import adopt
 from daq.core.block import Block, Conclusion, Cue
 from daq.core.convert import Plan, convert, prepare
-from daq.core.hearing import cues_of, finish, leave, note, stamped
+from daq.core.hearing import cues_of, finish, leave, note, react, stamped
 from daq.core.rules import Role, TestRules
 from daq.core.shown import deadline, open_alarm, status, summary
 from daq.core.teststate import Out, TestState, begin, out_of, rules_of, start_of
@@ -227,9 +228,17 @@ def _take_rules(s: TestState, fact: RulesAdopted) -> tuple[TestState, list[Findi
     """Adopt rules; those that began the test are in force already, and in a recording they have no time."""
     if fact.test != s.test or (fact.rules == s.rules and not fact.stamp.boot_id):
         return s, []
-    s, findings = _take_stamped(s, fact)
-    start = s.start if s.start is not None else start_of(rules_of(fact.rules))
-    return replace(s, rules=fact.rules, start=start), findings
+    s, out, tick, utc_tick = stamped(s, fact)
+    new = rules_of(fact.rules)
+    seen, told, gone = adopt(s.watch, s.results, out.rules, new)
+    ends = [Cue(s.scans, tick, alarm, subject, False) for alarm, subject in gone]
+    known, ends = causes.gather(s.causes, ends)
+    a = s.alarms
+    for cue in ends:
+        a = react(a, cue, out, lambda at: at + utc_tick - tick, utc_tick)
+    start = s.start if s.start is not None else start_of(new)
+    s = replace(s, rules=fact.rules, start=start, watch=seen, results=told, alarms=a, causes=known)
+    return replace(s, counts=out.counts), out.findings
 
 
 def _take_nothing(s: TestState, fact: Any) -> tuple[TestState, list[Finding]]:
