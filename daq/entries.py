@@ -26,6 +26,7 @@ ENTRIES = {
     "loaded": "the full load is on; test time begins",
     "ended": "the test was ended by hand (unloaded, stopped, or taken out)",
     "acknowledge": "the open alarms of the frame, or the one named, have been seen by a person",
+    "reset": "an alarm that stays until a person lets it go (load off, journal trouble): its cause is gone",
     "shelve": "put one alarm aside for a stated time",
     "unshelve": "take a shelved alarm back",
     "note": "a remark for the record",

@@ -18,7 +18,7 @@ from daq.core.hearing import finish, react, stamped
 from daq.core.teststate import TestState
 from daq.records import TICKS_PER_S, EntryMade, Finding
 
-ON_ALARMS: Final = ("acknowledge", "shelve", "unshelve")
+ON_ALARMS: Final = ("acknowledge", "reset", "shelve", "unshelve")
 HOURS_MOST: Final = SHELVE_MOST_S / 3600.0
 MINUTES_MOST: Final = 60.0 * 24.0 * 366.0
 """A full load that has been on for longer than a year [min] was meant for another test."""

@@ -110,3 +110,18 @@ def test_a_clock_that_was_set_is_no_fault_of_the_test() -> None:
     )
     assert said == []
     assert (state.start, state.clock.latest) == (before.start, before.clock.latest + 10_000)
+
+
+def test_an_alarm_that_latches_can_be_let_go() -> None:
+    """Without a word for it the alarm stood for the rest of the test."""
+    from daq.engine import Engine
+    from daq.records import ConditionChanged
+
+    engine = Engine()
+    for t, active in ((1.0, True), (2.0, False)):
+        engine.take(ConditionChanged(_stamp(t), "", "journal", "journal_trouble", active, "disk"))
+    states = []
+    for t, entry in ((3.0, "acknowledge"), (4.0, "reset")):
+        (said,) = engine.take(EntryMade(_stamp(t), "", entry, "mk", {"alarm": "journal_trouble"}))
+        states.append(said.fields["state"])
+    assert states == ["latched_acknowledged", "normal"]
