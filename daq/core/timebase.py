@@ -6,6 +6,9 @@ machine was away; that step is taken once, at the first stamp of the new boot, n
 backwards, and the doubt is that of the two UTC clocks. Setting the clock therefore cannot
 bend a rate: the least-squares slope of a test is the same before and after.
 
+A machine without a battery for its clock may boot in the past. Then that step is owed until UTC has
+been set, and taken at the first stamp that shows it: late, but the hours of the test are right again.
+
 A recording knows no boot: its stamps are its time.
 """
 
@@ -25,13 +28,15 @@ class TimeState:
     """Where lab time stands. ``shift`` turns boot ticks into lab ticks.
 
     ``latest`` is the greatest lab tick so far, ``utc_lead`` what UTC was ahead of lab time at
-    the last stamp. ``boot_id`` None means: nothing has been stamped yet.
+    the last stamp. ``boot_id`` None means: nothing has been stamped yet. ``owed`` is what UTC was ahead
+    of lab time before a boot that began in the past, until UTC can tell how long the machine was away.
     """
 
     boot_id: str | None = None
     shift: int = 0
     latest: int = 0
     utc_lead: int = 0
+    owed: int | None = None
 
 
 def _anchor(s: TimeState, boot_id: str, utc: int, boot: int) -> TimeState:
@@ -40,8 +45,10 @@ def _anchor(s: TimeState, boot_id: str, utc: int, boot: int) -> TimeState:
         return s
     if s.boot_id is None:
         return TimeState(boot_id, utc - boot, utc, 0)
-    away = max(0, utc - (s.latest + s.utc_lead))
-    return replace(s, boot_id=boot_id, shift=s.latest + away - boot)
+    lead = s.utc_lead if s.owed is None else s.owed
+    away = utc - (s.latest + lead)
+    owed = lead if away < 0 else None
+    return replace(s, boot_id=boot_id, shift=s.latest + max(0, away) - boot, owed=owed)
 
 
 def place(s: TimeState, scans: ScansTaken) -> tuple[TimeState, IntArray]:
@@ -50,6 +57,12 @@ def place(s: TimeState, scans: ScansTaken) -> tuple[TimeState, IntArray]:
         return s, scans.boot_tick
     s = _anchor(s, scans.boot_id, int(scans.utc_tick[0]), int(scans.boot_tick[0]))
     tick = scans.boot_tick + s.shift
+    if s.owed is not None:
+        ahead = scans.utc_tick - s.owed - tick  # UTC was set: from that row on it tells more than we counted
+        if (set_at := np.flatnonzero(ahead > 0)).size:
+            row = int(set_at[0])
+            tick[row:] += ahead[row]
+            s = replace(s, shift=s.shift + int(ahead[row]), owed=None)
     latest = max(s.latest, int(tick.max()))
     return replace(s, latest=latest, utc_lead=int(scans.utc_tick[-1] - tick[-1])), tick
 
@@ -58,6 +71,9 @@ def place_stamp(s: TimeState, stamp: Stamp) -> tuple[TimeState, int]:
     """Return the lab tick of a single stamp."""
     s = _anchor(s, stamp.boot_id, stamp.utc_tick, stamp.boot_tick)
     tick = stamp.boot_tick + s.shift
+    if s.owed is not None and stamp.utc_tick - s.owed > tick:
+        tick = stamp.utc_tick - s.owed
+        s = replace(s, shift=tick - stamp.boot_tick, owed=None)
     return replace(s, latest=max(s.latest, tick), utc_lead=stamp.utc_tick - tick), tick
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from hypothesis import given
 from hypothesis import strategies as st
@@ -70,3 +72,43 @@ def test_before_full_load_there_is_no_test_time() -> None:
     assert seconds_since(np.array([5, 6]), None).tolist() == [-1.0, -1.0]
     assert hours(5, None) is None
     assert hours(HOUR + 5, 5) == 1.0
+
+
+def _booted_in_the_past() -> TimeState:
+    """Ten hours recorded, eight hours away, then a boot whose clock says 1970."""
+    s, _ = place(TimeState(), _scans([1000 * HOUR, 1010 * HOUR], [0, 10 * HOUR]))
+    s, tick = place(s, _scans([0], [0], "b"))
+    assert int(tick[0]) == 1010 * HOUR
+    return s
+
+
+def test_hours_lost_to_a_boot_in_the_past_are_made_good_when_utc_is_set() -> None:
+    """The test would else be short of the outage for good."""
+    s, tick = place(_booted_in_the_past(), _scans([HOUR, 1020 * HOUR], [HOUR, 2 * HOUR], "b"))
+    assert (tick - 1010 * HOUR).tolist() == [HOUR, 10 * HOUR]
+    s, tick = place(s, _scans([1021 * HOUR, 1200 * HOUR], [3 * HOUR, 4 * HOUR], "b"))
+    assert (tick - 1010 * HOUR).tolist() == [11 * HOUR, 12 * HOUR]  # once: a later step bends nothing
+
+
+def test_a_second_boot_in_the_past_owes_what_the_first_did() -> None:
+    """A machine without a battery and without a network may boot many times."""
+    s, _ = place(_booted_in_the_past(), _scans([2 * HOUR], [2 * HOUR], "b"))
+    s, _ = place(s, _scans([0, HOUR], [0, HOUR], "c"))
+    s, tick = place_stamp(s, Stamp(1030 * HOUR, 2 * HOUR, "c"))
+    assert tick == 1030 * HOUR
+    assert s.owed is None
+
+
+@given(st.integers(0, 12), st.lists(st.integers(0, 12), max_size=4))
+def test_what_is_owed_does_not_depend_on_cuts(set_at: int, cuts: list[int]) -> None:
+    """Live every scan comes alone."""
+    boot = [k * HOUR for k in range(1, 13)]
+    utc = [t + (1018 * HOUR if k >= set_at else 0) for k, t in enumerate(boot)]
+    whole_state, whole = place(_booted_in_the_past(), _scans(utc, boot, "b"))
+    s, pieces = _booted_in_the_past(), []
+    edges = sorted({0, 12, *cuts})
+    for a, b in itertools.pairwise(edges):
+        s, tick = place(s, _scans(utc[a:b], boot[a:b], "b"))
+        pieces += tick.tolist()
+    assert pieces == whole.tolist()
+    assert s == whole_state
