@@ -111,6 +111,9 @@ def watch(
     believed, apart = sensors.watch_sides(
         believed, block, closed, signals.shape[1], signals.shape[1] + 1, noise
     )
+    broke = next((c for c in torn if c.alarm == "rupture"), None)
+    if broke is not None:  # no strain is passed by what tore
+        ahead, items = MilestoneState(()), [i for i in items if not _passed_by_rupture(i, broke)]
     items += [*torn, *doubts, *apart]
     items.sort(key=lambda item: item.scan)
     after = WatchState(
@@ -185,6 +188,16 @@ def _stand(standing: tuple[tuple[str, str], ...], items: Any) -> tuple[tuple[str
             elif not item.active:
                 standing = tuple(k for k in standing if k != key)
     return standing
+
+
+def _passed_by_rupture(item: Item, broke: Cue) -> bool:
+    """Is this a strain that was passed only because the specimen broke?"""
+    if isinstance(item, Conclusion):
+        strain, time_h = item.kind == "milestone", item.fields.get("time_h", 0.0)
+    else:
+        strain, time_h = item.alarm in ("milestone_reached", "strain_limit"), item.figures.get("time_h", 0.0)
+    last_h = broke.figures.get("not_before_h", broke.figures["time_h"])
+    return strain and (item.scan > broke.scan or (item.scan == broke.scan and time_h > last_h))
 
 
 def _force(rules: TestRules, block: Block) -> FloatArray:

@@ -9,7 +9,7 @@ import pytest
 from watch_blocks import block_of, cut, rules_for
 
 from daq.core import watch
-from daq.core.block import Block, Cue
+from daq.core.block import Block, Conclusion, Cue
 from daq.core.rules import Limits
 from daq.records import FloatArray, Quality
 
@@ -94,6 +94,18 @@ def test_strain_that_jumps_and_does_not_come_back_is_rupture(then: float) -> Non
         columns[side][AT] += 0.1
         columns[side][AT + 1 :] += then
     assert_dated(rupture(columns), "jumped")
+
+
+def test_rupture_passes_no_milestone() -> None:
+    """A jump by a tenth is no creep strain; what was passed before it stays."""
+    columns = creep()
+    for side in ("a", "b"):
+        columns[side][AT:] += 0.1
+    rules = rules_for(list(columns), Limits(milestones=(0.055, 0.1, 0.15), strain=0.12))
+    items = watch.watch(watch.begin(rules), rules, block_of(rules, columns, 60.0), stage="tertiary")[1]
+    told = [i.fields["strain"] for i in items if isinstance(i, Conclusion)]
+    assert told == [0.055]
+    assert {c.alarm for c in items if isinstance(c, Cue)} == {"milestone_reached", "rupture"}
 
 
 def test_all_sides_out_of_range_at_once_is_rupture() -> None:

@@ -83,7 +83,7 @@ def run(rules: TestRules, block: Block, cuts: list[int], stage: str) -> tuple[by
     return encode_state(state), out
 
 
-@pytest.mark.parametrize("seed", range(12))
+@pytest.mark.parametrize("seed", range(8))
 def test_neither_state_nor_findings_depend_on_cuts(seed: int) -> None:
     """A replay feeds thousands of scans, the live daemon one; both must say the same, to the last bit."""
     rules, block, stage = eventful(seed)
@@ -94,7 +94,7 @@ def test_neither_state_nor_findings_depend_on_cuts(seed: int) -> None:
     for cuts in (
         sorted(set(rng.integers(1, n, n // 3).tolist())),
         sorted(set(rng.integers(1, n, 7).tolist())),
-        list(range(1, n)) if seed < 3 else [n // 2],
+        list(range(1, n)) if seed < 2 else [n // 2],
     ):
         assert run(rules, block, cuts, stage) == whole
 
