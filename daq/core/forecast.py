@@ -42,7 +42,7 @@ WIDEST: Final = 11.0
 """Greatest ratio of late to early time left that is still called a forecast."""
 MONKMAN_GRANT_SD: Final = 0.35
 """Log s.d. of lives about a Monkman-Grant line: two methods of one code differ by factors of 0.7 to 1.9 on
-mean life (CHECKVALUES 5.4), which is a s.d. of about a third."""
+mean life (MPC Omega and Larson-Miller of WRC 541), which is a s.d. of about a third."""
 AHEAD: Final = 1.5
 FORGET: Final = 0.9
 SCORE_MOST: Final = 2.0

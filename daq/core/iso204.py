@@ -1,7 +1,7 @@
 """Quantities of ISO 204 that follow from others: extensions, elongation, reduction of area.
 
 Extension (e) is measured by the extensometer and referred to its reference length; elongation (A) is
-measured on the piece. All in per cent. Symbols as in the standard (CHECKVALUES 4.3, 4.4):
+measured on the piece. All in per cent. Symbols as in DIN EN ISO 204:
 et = ee + ei + ef, ep = ei + ef = et - ee, ei = eti - ee; at the end of loading ef = 0.
 """
 

@@ -50,7 +50,7 @@ def one(levels: list[tuple[int, float]]) -> FloatArray:
     ],
 )
 def test_the_specified_temperature_chooses_the_band(set_point: float, reading: float, out: bool) -> None:
-    """603.1 at 600 is out of ISO 204's limits, 803.9 at 800 is in (CHECKVALUES 4.1, from memory)."""
+    """603.1 at 600 is out of ISO 204's limits, 803.9 at 800 is in (limits from memory)."""
     band = 3.0 if set_point <= 600.0 else 4.0 if set_point <= 800.0 else 5.0
     rules = rules_for(["a", "mid"], set_point_c=set_point, below_k=band, above_k=band)
     items = items_of(rules, {"mid": one([(50, set_point), (20, reading), (50, set_point)])})
@@ -92,7 +92,7 @@ def test_a_spike_is_no_excursion_however_large() -> None:
 
 
 def test_a_value_that_plays_around_its_limit_raises_one_alarm() -> None:
-    """Noise at the limit must not chatter (CHECKVALUES 10.2: chattering alarms, zero)."""
+    """Noise at the limit must not chatter (ISA-18.2: chattering alarms, zero)."""
     rules = rules_for(["a", "mid"])
     rng = np.random.default_rng(4)
     x = 603.15 + 0.25 * rng.normal(size=4000)

@@ -40,17 +40,17 @@ def look(curve: Curve, stage: str = "tertiary", rules: Any = RULES) -> dict[str,
 
 
 def omega(t: FloatArray) -> FloatArray:
-    """MPC Omega with rate0 = 1E-5 /h, Omega = 50: rupture at 2000 h (CHECKVALUES 5.4, computed)."""
+    """MPC Omega with rate0 = 1E-5 /h, Omega = 50: rupture at 1/(rate0 Omega) = 2000 h (API 579-1)."""
     return np.asarray(-np.log1p(-t / 2000.0) / 50.0)
 
 
 def theta(t: FloatArray) -> FloatArray:
-    """The constructed theta set of CHECKVALUES 5.5."""
+    """Theta projection (Evans & Wilshire), a constructed set."""
     return np.asarray(0.010 * -np.expm1(-0.010 * t) + 0.005 * np.expm1(0.002 * t))
 
 
 def voight(a: float) -> Callable[[FloatArray], FloatArray]:
-    """d(rate)/dt = Af rate^a with rate0 = 1E-5 /h and failure at 2000 h (CHECKVALUES 6, computed)."""
+    """d(rate)/dt = Af rate^a with rate0 = 1E-5 /h and failure at 2000 h (Voight 1988)."""
     p = 1.0 / (a - 1.0)
 
     def strain(t: FloatArray) -> FloatArray:
@@ -63,7 +63,7 @@ def voight(a: float) -> Callable[[FloatArray], FloatArray]:
 
 
 def kachanov(t: FloatArray) -> FloatArray:
-    """The constructed set of CHECKVALUES 5.6: A 1E-15, n 5, chi 4, phi 7, 100 MPa; rupture at 12 500 h."""
+    """Kachanov-Rabotnov, a constructed set: A 1E-15, n 5, chi 4, phi 7, 100 MPa; rupture at 12 500 h."""
     q = 0.375
     return np.asarray(1e-5 * 12_500.0 / q * (1.0 - (1.0 - t / 12_500.0) ** q))
 
@@ -82,7 +82,7 @@ def singular_end(curve: Curve) -> tuple[float, float]:
 
 @pytest.mark.parametrize(("now_h", "left_h"), [(1000.0, 1000.0), (1800.0, 200.0), (1980.0, 20.0)])
 def test_omega_curve_has_its_known_time_left(now_h: float, left_h: float) -> None:
-    """1000, 200 and 20 h at half, 0.9 and 0.99 of life (CHECKVALUES 5.4, API 579-1 closed form)."""
+    """1000, 200 and 20 h at half, 0.9 and 0.99 of life (closed form of API 579-1)."""
     curve = curve_of(omega, now_h)
     end, power = singular_end(curve)
     assert end - now_h == pytest.approx(left_h, rel=0.05)
@@ -95,7 +95,7 @@ def test_omega_curve_has_its_known_time_left(now_h: float, left_h: float) -> Non
 
 @pytest.mark.parametrize("a", [1.5, 1.8, 2.0, 2.2])
 def test_a_free_exponent_finds_failure_where_a_straight_inverse_rate_line_is_biased(a: float) -> None:
-    """Window to 1600 h, true failure at 2000 h; the line gives 1672, 1868, 2000, 2133 h (CHECKVALUES 6)."""
+    """Window to 1600 h, true failure at 2000 h; the line gives 1672, 1868, 2000, 2133 h (computed)."""
     curve = curve_of(voight(a), 1600.0, noise=1e-8)
     end, power = singular_end(curve)
     assert end == pytest.approx(2000.0, rel=0.01)
@@ -122,7 +122,7 @@ def test_exponential_tertiary_tells_no_rupture(now_h: float) -> None:
 @pytest.mark.parametrize("share", [0.75, 0.9])
 @pytest.mark.parametrize("noise", [1e-7, 1e-5])
 def test_damage_curve_is_foretold(share: float, noise: float) -> None:
-    """Kachanov-Rabotnov, constructed set: rupture at 12 500 h, power n/(1+phi) = 0.625 (CHECKVALUES 5.6)."""
+    """Rupture at 12 500 h and power n/(1+phi) = 0.625 by the closed form of the constructed set."""
     now = 12_500.0 * share
     curve = curve_of(kachanov, now, noise)
     end, power = singular_end(curve)
@@ -133,7 +133,7 @@ def test_damage_curve_is_foretold(share: float, noise: float) -> None:
 
 
 def test_theta_curve_gives_its_milestone_and_offset() -> None:
-    """Strain 0.2 at 1831.78 h and the 0.2 % offset at 673.46 h (CHECKVALUES 5.5, computed exactly)."""
+    """Strain 0.2 at 1831.78 h and the 0.2 % offset at 673.46 h (closed form, computed)."""
     said = look(curve_of(theta, 1500.0, 1e-6))
     strain = said["strain_20_percent"]
     assert strain["low_h"] < 1831.7808 < strain["high_h"]
@@ -161,7 +161,7 @@ def test_before_tertiary_creep_only_strains_are_foretold() -> None:
 
 
 def test_monkman_grant_joins_in_only_where_the_user_gave_a_constant() -> None:
-    """Exact products for test curves: Omega law rate0 tr = 1/Omega (CHECKVALUES 5.3, computed)."""
+    """Exact products for test curves: Omega law rate0 tr = 1/Omega (closed form)."""
     known = rules_for(["a"], Limits(milestones=()), monkman_grant_constant=0.02, monkman_grant_exponent=1.0)
     curve = curve_of(omega, 1200.0, 2e-5)
     plain, helped = look(curve)["rupture"], look(curve, rules=known)["rupture"]

@@ -15,7 +15,7 @@ from daq.core.block import Block, Conclusion
 from daq.core.rules import Limits, TestRules
 from daq.records import CoreError, Quality
 
-# BAM reference data set, ISO 204 tests of CMSX-6, doi 10.1016/j.dib.2025.112436 (CHECKVALUES 4.5, verified):
+# BAM reference data set, ISO 204 tests of CMSX-6, doi 10.1016/j.dib.2025.112436:
 # name, Lo, Le, Lu, Au, et, eti, ee, ei, ep, ef; extensions to the printed rounding
 BAM = (
     ("C-78", 23.8, 22.7, 30.4, 28.0, 28.1, 0.290, 0.274, 0.016, 27.8, 27.8),
@@ -48,7 +48,7 @@ def test_extensions_follow_the_reference_data_set(row: Any) -> None:
 
 
 def test_identities_of_the_standard_hold() -> None:
-    """eti = ee + ei; et = ee + ei + ef; ep = ei + ef (CHECKVALUES 4.4, definitions of ISO 204)."""
+    """eti = ee + ei; et = ee + ei + ef; ep = ei + ef (definitions of ISO 204)."""
     f = iso204.extensions_percent(5.3, 0.29, 0.274)
     assert f["ee"] + f["ei"] == pytest.approx(f["eti"])  # type: ignore[operator]
     assert f["ee"] + f["ei"] + f["ef"] == pytest.approx(f["et"])  # type: ignore[operator]
@@ -57,7 +57,7 @@ def test_identities_of_the_standard_hold() -> None:
 
 
 def test_proportionality_of_a_six_millimetre_piece() -> None:
-    """D = 6 mm and 24 mm give k = 4.5135 (CHECKVALUES 4.4, computed)."""
+    """D = 6 mm and 24 mm give k = 4.5135 (Lr/sqrt(So), computed)."""
     assert iso204.proportionality(24.0, iso204.circle_mm2(6.0)) == pytest.approx(4.5135, abs=5e-5)
     with pytest.raises(CoreError, match="original gauge length"):
         iso204.elongation_percent(0.0, 1.0)
