@@ -19,7 +19,11 @@ from daq.core.rules import Role, TestRules
 from daq.records import TICKS_PER_S, FloatArray
 
 NEAR_ENTER: Final = 0.8
-NEAR_LEAVE: Final = 0.7
+NEAR_LEAVE: Final = 0.5
+"""Once near an edge, a signal is so until it is back in the inner half: a furnace that wanders by half a
+kelvin beside the edge raises one alarm, not one a day."""
+USUAL: Final = 0.7
+"""A leaf tells where a signal usually is only if it lies within this share of the band."""
 NEAR_S: Final = 600.0
 STEADY_SHARE: Final = 0.25
 """Others that moved less than a quarter of the band from their reference are steady."""
@@ -84,7 +88,7 @@ def follow_references(
                 continue
             if lim is not None and j < len(row) - 1:
                 dev = value - lim.set_point
-                if not -NEAR_LEAVE * lim.below < dev < NEAR_LEAVE * lim.above:
+                if not -USUAL * lim.below < dev < USUAL * lim.above:
                     continue
             now[j] = _renew(now[j], value)
         history.append(tuple(now))

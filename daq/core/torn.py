@@ -134,7 +134,10 @@ def _fell(p: Pending, side: str) -> bool:
 
 
 def _goes_on(p: Pending, sides: list[str]) -> bool:
+    """Did strain go on as before? Over a gap nobody can say so."""
     m = p.motion
+    if p.rows[0].over_gap:
+        return False
     for side in sides:
         values, before = _values(p, side), getattr(p.before, side)
         rate = abs(m.rate_per_s) if m.rate_per_s == m.rate_per_s else 0.0

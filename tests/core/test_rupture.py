@@ -210,6 +210,18 @@ def test_rupture_behind_a_gap_is_told() -> None:
     assert cue.figures["not_before_h"] == t_s[AT - 1] / 3600.0
 
 
+def test_a_break_switch_is_believed_behind_a_gap() -> None:
+    """Whether strain went on as before cannot be told over hours without readings."""
+    columns = creep()
+    columns["switch"] = np.zeros(N)
+    columns["switch"][AT:] = 1.0
+    t_s = np.arange(N) * 60.0
+    t_s[AT:] += 3600.0
+    cue = rupture(columns, t_s=t_s)
+    assert cue is not None
+    assert cue.figures["why"] == "break switch open"
+
+
 def test_force_that_falls_with_strain_lost_is_rupture_and_alone_load_off() -> None:
     """Without strain channels the load cell is all there is."""
     force = np.full(N, 5000.0)
