@@ -55,15 +55,12 @@ def count(text: str) -> int:
 
 def parser() -> argparse.ArgumentParser:
     """Return the parser of all commands."""
-    try:
-        from rich_argparse import RawDescriptionRichHelpFormatter as Formatter
-    except ImportError:
-        Formatter = argparse.RawDescriptionHelpFormatter  # type: ignore[misc,assignment]  # noqa: N806
+    plain = argparse.RawDescriptionHelpFormatter
     top = argparse.ArgumentParser(
         prog="upturn",
         description="Watches creep tests for weeks to years: strain rate, stages, rupture forecast, alarms.",
         epilog=EPILOG,
-        formatter_class=Formatter,
+        formatter_class=plain,
     )
     top.add_argument("--version", action="version", version=f"upturn {__version__}")
     commands = top.add_subparsers(dest="command", metavar="COMMAND", required=True)
@@ -74,7 +71,7 @@ def parser() -> argparse.ArgumentParser:
             help=text,
             description=f"{text[0].upper()}{text[1:]}.",
             epilog=more,
-            formatter_class=Formatter,
+            formatter_class=plain,
         )
 
     p = add("run", "watch the frames of a lab file until told to stop (Ctrl-C or SIGTERM)")

@@ -42,8 +42,8 @@ from daq.records import (
     Ticked,
 )
 
-FORECAST_RATIO: Final = 1.08
-"""A forecast is looked at again when test time has grown by this: thirty looks a decade."""
+FORECAST_LEAST: Final = 1.002
+"""Looks of the forecast are never closer than this ratio of test time, whatever it foretells."""
 FULL_LOAD_SHARE: Final = 0.98
 """Share of the nominal force from which ``starts: load_channel`` calls the load full; machines of
 class 1 (ISO 7500-2) are within 1 %, so 2 % leaves room for the load cell's own error."""
@@ -145,7 +145,7 @@ def _take_block(
     s = replace(s, watch=seen, follow=followed, results=results.observe(s.results, rules, block))
     s = _conclude(s, (*watched, *concluded), block, out, utc, utc_tick)
     if broken is not None:
-        t_s = float(block.t_s[-1])
+        t_s = float(broken.figures["time_h"]) * 3600.0  # when it broke, a scan or more before it was sure
         s = finish(
             s, rules, "ruptured", broken.tick, t_s, broken.scan, out, utc, int(utc_tick[len(block) - 1])
         )
@@ -185,9 +185,6 @@ def _look_ahead(
     t_s = float(block.t_s[taken - 1])
     if s.start is None or s.over or t_s < s.next_forecast_s:
         return s
-    next_s = s.next_forecast_s
-    while next_s <= t_s:
-        next_s *= FORECAST_RATIO
     least = s.follow.minimum
     fore, said = forecast.look(
         s.forecast, rules, follow.curve(s.follow), follow.stage_of(s.follow), t_s / 3600.0,
@@ -196,6 +193,7 @@ def _look_ahead(
     scan, tick = block.first + taken - 1, int(block.tick[taken - 1])
     for fields in said:
         out.put(Conclusion(scan, tick, "forecast", fields["of"], fields), utc_tick)
+    next_s = max(3600.0 * forecast.next_look_h(fore, t_s / 3600.0), t_s * FORECAST_LEAST)
     return replace(s, forecast=fore, next_forecast_s=next_s)
 
 

@@ -560,14 +560,14 @@ def status(s: FollowState, rules: TestRules) -> Mapping[str, Any]:
     return told
 
 
-def curve(s: FollowState) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return (t_h, strain, rate_per_h) of the ladder, each (n,); rates over about 3 % of the test."""
+def curve(s: FollowState) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Return (t_h, strain, rate_per_h, equivalent time [h], scans) of the ladder's blocks, each (n,).
+
+    Rates are taken over about 3 % of the test.
+    """
     r = s.rungs
-    if r.shape[0] < 4:
-        return r[:, ladder.T], r[:, ladder.E], np.full(r.shape[0], np.nan)
-    t, rate, _ = estimate.coarse_rates(r, 0.03)
-    return (
-        r[:, ladder.T],
-        r[:, ladder.E],
-        np.interp(r[:, ladder.T], t, rate) if t.size else np.full(r.shape[0], np.nan),
-    )
+    rate = np.full(r.shape[0], np.nan)
+    if r.shape[0] >= 4:
+        t, coarse, _ = estimate.coarse_rates(r, 0.03)
+        rate = np.interp(r[:, ladder.T], t, coarse) if t.size else rate
+    return r[:, ladder.T], r[:, ladder.E], rate, r[:, ladder.U], r[:, ladder.N]
