@@ -100,7 +100,7 @@ def _take_scans(s: TestState, fact: ScansTaken) -> tuple[TestState, list[Finding
         out.start = start
         s, taken = _take_block(s, rules, block, out, utc, fact.utc_tick[rows])
         done += taken
-        s = _look_ahead(s, rules, block, taken, out, int(fact.utc_tick[done - 1]))
+        s = _look_ahead(s, rules, block, taken, out, utc, int(fact.utc_tick[done - 1]))
     return replace(s, scans=first + n, counts=out.counts), out.findings
 
 
@@ -179,9 +179,15 @@ def _conclude(
 
 
 def _look_ahead(
-    s: TestState, rules: TestRules, block: Block, taken: int, out: Out, utc_tick: int
+    s: TestState,
+    rules: TestRules,
+    block: Block,
+    taken: int,
+    out: Out,
+    utc: Callable[[int], int],
+    utc_tick: int,
 ) -> TestState:
-    """Forecast, when test time has grown enough since the last look."""
+    """Forecast, and hold the rate against its limit, when test time has grown enough since the last look."""
     t_s = float(block.t_s[taken - 1])
     if s.start is None or s.over or t_s < s.next_forecast_s:
         return s
@@ -193,6 +199,16 @@ def _look_ahead(
     scan, tick = block.first + taken - 1, int(block.tick[taken - 1])
     for fields in said:
         out.put(Conclusion(scan, tick, "forecast", fields["of"], fields), utc_tick)
+    if rules.limits.rate_per_h is not None:
+        now = follow.status(s.follow, rules)
+        if now["rate_per_h"] is not None:
+            seen, cues = watch.watch_rate(
+                s.watch, rules, scan, tick, now["rate_per_h"], now["rate_low_per_h"]
+            )
+            a = s.alarms
+            for cue in cues:
+                a = react(a, cue, out, utc, utc_tick)
+            s = replace(s, watch=seen, alarms=a)
     next_s = max(3600.0 * forecast.next_look_h(fore, t_s / 3600.0), t_s * FORECAST_LEAST)
     return replace(s, forecast=fore, next_forecast_s=next_s)
 

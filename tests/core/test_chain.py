@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from rig_facts import facts_of
 
 from daq.codec import decode_fact, decode_state, encode_fact, encode_finding, encode_state
-from daq.core import chain
+from daq.core import chain, follow
 from daq.core.chain import TestState
 from daq.records import EntryMade, Fact, Finding, RulesAdopted, Stamp
 from simulator.population import draw
@@ -118,6 +118,22 @@ def test_an_acknowledgement_reaches_the_alarm_and_is_signed() -> None:
     assert said
     assert {f.fields["initials"] for f in said} == {"mk"}
     assert all(f.fields["state"] in ("acknowledged", "normal") for f in said)
+
+
+def test_a_rate_above_its_limit_is_an_alarm_once_the_rate_had_been_below_it() -> None:
+    """The first hours are always fast; what the limit is for is the end."""
+    facts = facts_of(_run(4))
+    rules = facts[0]
+    assert isinstance(rules, RulesAdopted)
+    least = follow.status(_whole(4)[0].follow, chain.rules_of(rules.rules))["minimum_rate_per_h"]
+    limited = rules.rules.replace('"rate_per_h":null', f'"rate_per_h":{3.0 * least!r}')
+    assert limited != rules.rules
+    _, findings = _through([RulesAdopted(rules.stamp, rules.frame, rules.test, limited), *facts[1:]])
+    raised = [f for f in findings if f.kind == "alarm" and f.fields["alarm"] == "rate_limit"]
+    tertiary = next(f for f in findings if f.kind == "stage" and f.fields["stage"] == "tertiary")
+    assert raised
+    assert raised[0].test_h is not None
+    assert tertiary.fields["onset_h"] < raised[0].test_h
 
 
 def test_before_the_entry_no_test_time_runs() -> None:
