@@ -13,6 +13,7 @@ import numpy as np
 from daq.codec import encode_fact
 from daq.records import EngineStarted, EntryMade, Fact, Finding, ScansTaken, Stamp
 from daq.store.journal import Journal
+from daq.store.rows import Batch, OutboxNew, Snapshot
 
 CHANNELS = ("left", "right", "mid")
 
@@ -65,3 +66,24 @@ def quick_folder() -> Iterator[Path]:
     memory = Path("/dev/shm")
     with tempfile.TemporaryDirectory(dir=memory if os.access(memory, os.W_OK) else None) as name:
         yield Path(name)
+
+
+def fact_of(seq: int) -> Fact:
+    if seq % 10 == 1:
+        return started(seq)
+    return entry("H1", seq) if seq % 10 == 5 else scans(("H1", "H2")[seq % 2], seq)
+
+
+def fill(journal: Journal, n: int) -> None:
+    """Commit ``n`` facts in batches of three, each batch with a finding, a message and a snapshot."""
+    for _ in range(n // 3):
+        first = journal.last_seq + 1
+        journal.commit(
+            Batch(
+                facts=tuple(fact_of(first + i) for i in range(3)),
+                findings=(finding(first),),
+                outbox=(OutboxNew(f"m{first}", "t", b"payload"),),
+                snapshots=(Snapshot("H1", None, "0.1.0", b"state" * 20),),
+                inbox=(f"e{first}",),
+            )
+        )
