@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import contextlib
 import json
+import os
 import subprocess
 import sys
 import threading
@@ -68,6 +69,12 @@ class Bench:
             replace(i, port=ports[i.name], options={**i.options, "port": ports[i.name]}) if i.emulated else i
             for i in self._lab.instruments
         )
+
+    def mark(self) -> None:
+        """Note that the bench is alive; a later start learns from it how long it was switched off."""
+        if self._process is not None:
+            with contextlib.suppress(OSError):
+                os.utime(self._lab.journal / "bench.json")
 
     def _first_line(self, process: subprocess.Popen[str]) -> dict[str, Any]:
         assert process.stdout is not None

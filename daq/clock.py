@@ -10,13 +10,15 @@ import json
 import os
 import threading
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Protocol
 
 from daq.records import TICKS_PER_S, Stamp
 
 NS_PER_TICK = 1_000_000_000 // TICKS_PER_S
+PAUSE_NS = 5_000_000_000
+"""From this real time on a bench that was away counts as switched off, not as restarted."""
 _BOOT_CLOCK = getattr(time, "CLOCK_BOOTTIME", time.CLOCK_MONOTONIC)
 
 
@@ -71,15 +73,22 @@ class Origin:
 
     @classmethod
     def keep(cls, path: Path, speed: float) -> Origin:
-        """Return the origin kept at ``path``, or begin one now; a restart goes on in the same time."""
-        now = boot_id()
+        """Return the origin kept at ``path``, or begin one now; a restart goes on in the same time.
+
+        While a bench is switched off its specimens rest: after a pause (the file's own time says when it
+        was last marked) lab time goes on where it stood, later by the pause itself and no more.
+        """
+        now, new = boot_id(), None
         try:
             old = cls(**json.loads(path.read_text(encoding="utf-8")))
             if old.boot_id == now and old.speed == speed:
-                return old
+                away_ns = time.time_ns() - path.stat().st_mtime_ns
+                if away_ns < PAUSE_NS:
+                    return old
+                new = replace(old, boot_ns=old.boot_ns + int(away_ns * (1.0 - 1.0 / speed)))
         except (OSError, ValueError, TypeError):
             pass
-        new = cls(now, time.clock_gettime_ns(_BOOT_CLOCK), time.time_ns(), speed)
+        new = new or cls(now, time.clock_gettime_ns(_BOOT_CLOCK), time.time_ns(), speed)
         path.write_text(json.dumps(new.__dict__), encoding="utf-8")
         return new
 

@@ -111,6 +111,7 @@ class House:
     def __init__(self, lab: Lab, journal: Journal, bench: Bench, log: _Log) -> None:
         self._lab = lab
         self._log = log
+        self._bench = bench
         self._clock = clock = bench.clock
         self._inlet = inlet = Inlet(QUEUE_MOST)
         self._stop, self._drain = threading.Event(), threading.Event()
@@ -239,6 +240,7 @@ class House:
         while self._writer.broken is None:
             if signals.wait(min(LOOK_EVERY_S, max(0.05, period / clock.speed / 2))):
                 return
+            self._bench.mark()
             now = clock.stamp()
             step = _lead(now) - lead
             lead += step  # a clock that is slewed moves by little from look to look, one that is set by much

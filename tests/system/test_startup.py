@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import time
 from pathlib import Path
 
 import pytest
@@ -9,7 +11,7 @@ import pytest
 from daq import settings
 from daq.clock import BenchClock, Origin
 from daq.engine import Engine
-from daq.records import ConditionChanged, RulesAdopted, Stamp
+from daq.records import TICKS_PER_S, ConditionChanged, RulesAdopted, Stamp
 from daq.startup import first_facts, standing
 
 LAB = """\
@@ -89,3 +91,16 @@ def test_a_bench_that_begins_anew_is_another_boot(tmp_path: Path) -> None:
     assert Origin.keep(path, 3600.0) == one
     two = Origin.keep(path, 60.0)
     assert BenchClock(one).stamp().boot_id != BenchClock(two).stamp().boot_id
+
+
+def test_specimens_rest_while_a_bench_is_switched_off(tmp_path: Path) -> None:
+    """At 3600 times real time an hour away would be five months: every specimen would have died unseen."""
+    path = tmp_path / "bench.json"
+    one = BenchClock(Origin.keep(path, 3600.0))
+    before = one.stamp().utc_tick
+    os.utime(path, (time.time() - 100.0, time.time() - 100.0))
+    stood = before - 100 * 3600 * TICKS_PER_S  # where lab time stood when the bench was last marked
+    two = BenchClock(Origin.keep(path, 3600.0))
+    after = two.stamp()
+    assert 99 < (after.utc_tick - stood) / TICKS_PER_S < 100 + 3600 * 5
+    assert after.boot_id != one.stamp().boot_id  # a count that begins elsewhere is another boot
