@@ -13,14 +13,8 @@ from pathlib import Path
 from typing import Final
 
 from daq import __version__
+from daq.exits import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
 from daq.records import UpturnError
-
-OK: Final = 0
-TROUBLE: Final = 1
-USAGE: Final = 2
-INPUT: Final = 3
-BUSY: Final = 4
-BROKEN: Final = 74
 
 EPILOG: Final = f"""\
 exit codes:

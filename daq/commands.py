@@ -9,7 +9,7 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Final, TypeVar
 
-from daq.cli import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
+from daq.exits import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
 from daq.records import Fact, Finding, UpturnError
 
 if TYPE_CHECKING:  # a command imports what it needs when it runs, so that --help costs nothing

@@ -14,6 +14,7 @@ EDGES: dict[str, set[str]] = {
     "daq.codec": {"daq.records"},
     "daq.core": CORE_MAY,
     "daq.store": {"daq.store", "daq.records", "daq.codec"},
+    "daq.exits": set(),
     "daq.lines": {"daq.records", "daq.codec"},
     "daq.joining": {"daq.records"},
     "daq.clock": {"daq.records"},
