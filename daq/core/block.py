@@ -53,6 +53,22 @@ class Block:
     def __len__(self) -> int:
         return int(self.tick.shape[0])
 
+    def cut(self, start: int, stop: int) -> Block:
+        """Return rows ``start`` to ``stop`` as a block of their own (views, no copy)."""
+        r = slice(start, stop)
+        return Block(
+            self.first + start,
+            self.tick[r],
+            self.t_s[r],
+            self.values[r],
+            self.quality[r],
+            self.strain_a[r],
+            self.strain_b[r],
+            self.specimen_c[r],
+            self.room_c[r],
+            self.output[r],
+        )
+
 
 @state
 @dataclass(frozen=True, slots=True)

@@ -141,7 +141,7 @@ def _take_block(
         last = min(ends, default=block.first + len(block) - 1)
         if last - block.first + 1 >= len(block):
             break
-        block = cut(block, 0, last - block.first + 1)
+        block = block.cut(0, last - block.first + 1)
     s = replace(s, watch=seen, follow=followed, results=results.observe(s.results, rules, block))
     s = _conclude(s, (*watched, *concluded), block, out, utc, utc_tick)
     if broken is not None:
@@ -213,23 +213,6 @@ def _look_ahead(
     return replace(s, forecast=fore, next_forecast_s=next_s)
 
 
-def cut(block: Block, start: int, stop: int) -> Block:
-    """Return rows ``start`` to ``stop`` of a block as a block of their own."""
-    r = slice(start, stop)
-    return Block(
-        block.first + start,
-        block.tick[r],
-        block.t_s[r],
-        block.values[r],
-        block.quality[r],
-        block.strain_a[r],
-        block.strain_b[r],
-        block.specimen_c[r],
-        block.room_c[r],
-        block.output[r],
-    )
-
-
 # --- everything else --------------------------------------------------------------------
 
 
@@ -273,7 +256,6 @@ _HANDLERS: Final[dict[type, Callable[[TestState, Any], tuple[TestState, list[Fin
 __all__ = [
     "TestState",
     "begin",
-    "cut",
     "deadline",
     "leave",
     "open_alarm",

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from watch_blocks import block_of, cut, rules_for
+from watch_blocks import block_of, rules_for
 
 from daq.codec import encode_state
 from daq.core import iso204, results
@@ -83,7 +83,7 @@ def record(seed: int, n: int = 700) -> tuple[TestRules, Block]:
 def run(rules: TestRules, block: Block, cuts: list[int]) -> results.ResultsState:
     state = results.begin(rules)
     for i, j in zip([0, *cuts], [*cuts, len(block)], strict=True):
-        state = results.observe(state, rules, cut(block, i, j))
+        state = results.observe(state, rules, block.cut(i, j))
     return state
 
 

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from watch_blocks import block_of, cut, rules_for
+from watch_blocks import block_of, rules_for
 
 from daq.core import watch
 from daq.core.block import Block, Conclusion, Cue
@@ -255,6 +255,6 @@ def test_fast_tertiary_creep_is_no_rupture() -> None:
     block: Block
     rules = rules_for(["a", "mid"], Limits(milestones=()))
     block = block_of(rules, {"a": x, "mid": np.full(200, 600.0)}, 60.0)
-    state, items = watch.watch(watch.begin(rules), rules, cut(block, 0, 200), stage="tertiary")
+    state, items = watch.watch(watch.begin(rules), rules, block.cut(0, 200), stage="tertiary")
     assert not [i for i in items if isinstance(i, Cue) and i.alarm == "rupture"]
     assert not state.rupture.happened

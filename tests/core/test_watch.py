@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from watch_blocks import block_of, cut, rules_for
+from watch_blocks import block_of, rules_for
 
 from daq.codec import decode_state, encode_state
 from daq.core import watch
@@ -78,7 +78,7 @@ def eventful(seed: int) -> tuple[TestRules, Block, str]:
 def run(rules: TestRules, block: Block, cuts: list[int], stage: str) -> tuple[bytes, list[Conclusion | Cue]]:
     state, out = watch.begin(rules), []
     for i, j in zip([0, *cuts], [*cuts, len(block)], strict=True):
-        state, items = watch.watch(state, rules, cut(block, i, j), stage=stage)
+        state, items = watch.watch(state, rules, block.cut(i, j), stage=stage)
         out += items
     return encode_state(state), out
 
@@ -118,7 +118,7 @@ def test_findings_of_a_shorter_record_are_a_prefix(seed: int) -> None:
     rules, block, stage = eventful(seed)
     whole = run(rules, block, [], stage)[1]
     for stop in (100, 201, 290):
-        part = run(rules, cut(block, 0, stop), [], stage)[1]
+        part = run(rules, block.cut(0, stop), [], stage)[1]
         assert part == whole[: len(part)]
         assert all(item.scan >= stop for item in whole[len(part) :])
 

@@ -69,20 +69,3 @@ def block_of(
         none,
         np.asarray(columns.get("output", none), float),
     )
-
-
-def cut(block: Block, start: int, stop: int) -> Block:
-    """Rows ``start`` to ``stop`` as a block of their own."""
-    r = slice(start, stop)
-    return Block(
-        block.first + start,
-        block.tick[r],
-        block.t_s[r],
-        block.values[r],
-        block.quality[r],
-        block.strain_a[r],
-        block.strain_b[r],
-        block.specimen_c[r],
-        block.room_c[r],
-        block.output[r],
-    )

@@ -7,6 +7,7 @@ import subprocess
 import sys
 import threading
 import time
+from collections import Counter
 from collections.abc import Callable, Iterator
 from contextlib import suppress
 from pathlib import Path
@@ -224,7 +225,9 @@ def test_from_a_serial_port_to_an_acknowledged_alarm_and_the_same_again_in_repla
         alarms = [f.id for _, f in reader.findings() if f.kind == "alarm"]
     assert any("tertiary_detected" in i for i in alarms)
     assert set(alarms) <= set(subscriber.ids)
-    assert len(subscriber.ids) - len(set(subscriber.ids)) <= 2  # at most one a fault, and there was one kill
+    # what the broker had acknowledged but the kill kept out of the record comes again, each id once at most
+    assert max(Counter(subscriber.ids).values()) <= 2
+    assert len(subscriber.ids) - len(set(subscriber.ids)) <= 2
     with Journal.open(record, site="test") as journal:
         recovered, _ = recover(journal, lambda line: None)
         rebuilt = Engine()

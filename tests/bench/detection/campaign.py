@@ -76,22 +76,6 @@ def block_of(run: Run, rules: TestRules) -> Block:
     )
 
 
-def cut(b: Block, lo: int, hi: int) -> Block:
-    s = slice(lo, hi)
-    return Block(
-        b.first + lo,
-        b.tick[s],
-        b.t_s[s],
-        b.values[s],
-        b.quality[s],
-        b.strain_a[s],
-        b.strain_b[s],
-        b.specimen_c[s],
-        b.room_c[s],
-        b.output[s],
-    )
-
-
 def run_one(job: tuple[int, int]) -> dict[str, Any]:
     """Run one rig and return what is needed for the table."""
     seed, index = job
@@ -106,7 +90,7 @@ def run_one(job: tuple[int, int]) -> dict[str, Any]:
     s = follow.begin(rules)
     said: list[Any] = []
     for lo in range(0, n, CHUNK):
-        s, some = follow.follow(s, rules, cut(block, lo, min(n, lo + CHUNK)))
+        s, some = follow.follow(s, rules, block.cut(lo, min(n, lo + CHUNK)))
         said += some
     cue = "ended" if truth.rupture_h is None else "ruptured"
     s, some = follow.tell(s, rules, cue, int(block.tick[n - 1]), float(block.t_s[n - 1]), n - 1)
