@@ -7,7 +7,7 @@ import unicodedata
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from daq.view.plot import ascii_cells, braille, line_plot, log_ticks, raster, round_ticks
@@ -17,6 +17,19 @@ EPS = 1e-9
 
 def slowly(x: np.ndarray, y: np.ndarray, shape: tuple[int, int], slack: float) -> np.ndarray:
     """Return the same dots segment by segment, column by column; ``slack`` widens or narrows each span."""
+    mask = np.zeros(shape, dtype=bool)
+    first = 0
+    for i in range(
+        len(x) + 1
+    ):  # NaN ends a line: what begins after it is another one, in the same column too
+        if i == len(x) or not math.isfinite(y[i]):
+            mask |= one_line(x[first:i], y[first:i], shape, slack)
+            first = i + 1
+    return mask
+
+
+def one_line(x: np.ndarray, y: np.ndarray, shape: tuple[int, int], slack: float) -> np.ndarray:
+    """Draw one unbroken line, column by column."""
     rows, columns = shape
     mask = np.zeros(shape, dtype=bool)
     for c in range(columns):
@@ -47,6 +60,7 @@ numbers = st.integers(-8, 60).map(lambda n: n / 4)
     st.integers(1, 9),
     st.integers(1, 12),
 )
+@example([(0.0, 0.0), (0.0, math.nan), (0.25, 2.0)], 3, 1)
 def test_the_raster_is_that_of_a_slow_drawing(
     points: list[tuple[float, float]], rows: int, columns: int
 ) -> None:
