@@ -18,8 +18,8 @@ from daq.core.block import Block
 from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, TestRules
 from daq.records import FloatArray
 
-T_S, A, B, TEMP, ROOM, SCAN, TICK = range(7)
-RAW: Final = 7
+T_S, A, B, TEMP, ROOM, SCAN, TICK, OUT = range(8)
+RAW: Final = 8
 ROOM_LAGS_H: Final = (0.75, 3.0)
 """Time constants of the lagged room temperature: with the room as it is they span the phases of a day's wave
 for lags from minutes to hours."""
@@ -52,6 +52,9 @@ class IntakeState:
     q_kh: float = 0.0
     reference_c: float = float("nan")
     temp_c: float = float("nan")
+    oq_h: float = 0.0
+    first_output: float = float("nan")
+    output: float = float("nan")
     rooms_c: tuple[float, float, float] = (float("nan"), float("nan"), float("nan"))
     offsets: tuple[float, float] = (0.0, 0.0)
     noise: tuple[float, float] = (float("nan"), float("nan"))
@@ -99,6 +102,7 @@ def rows_of(block: Block, origin_s: float) -> FloatArray:
     out[:, ROOM] = block.room_c[keep]
     out[:, SCAN] = block.first + keep
     out[:, TICK] = block.tick[keep]
+    out[:, OUT] = block.output[keep]
     return out
 
 
@@ -251,6 +255,14 @@ def _close(
         factor = np.exp(q / GAS_CONSTANT_J_PER_MOL_K * (1.0 / k0 - 1.0 / (k0 + off)))
     u = s.u_h + np.cumsum(dt * factor)
     qs = s.q_kh + np.cumsum(dt * factor * off)
+    output, output_last = _filled(part[:, OUT], s.output)
+    first_output = s.first_output
+    oq = np.full(n, s.oq_h)
+    if np.isfinite(output_last):
+        if not np.isfinite(first_output):
+            first_output = float(np.mean(output))
+        before = np.concatenate(([s.output if np.isfinite(s.output) else output[0]], output[:-1]))
+        oq = s.oq_h + np.cumsum(dt * factor * (0.5 * (before + output) - first_output))
     room, room_last = _filled(part[:, ROOM], s.rooms_c[0])
     lagged = [room]
     lasts = [room_last]
@@ -276,6 +288,7 @@ def _close(
         r[ladder.S_TT], r[ladder.S_TE], r[ladder.S_EE] = np.sum(d * d), np.sum(d * f), np.sum(f * f)
         r[ladder.START], r[ladder.END] = np.min(tg), np.max(tg)
         r[ladder.SEGMENT] = s.segment
+        r[ladder.OUT], r[ladder.OQ] = np.mean(output[good]), np.mean(oq[good])
     noise = tuple(
         now if not np.isfinite(old) else (old if not np.isfinite(now) else old + 0.05 * (now - old))
         for old, now in zip(s.noise, (judged[0].noise, judged[1].noise), strict=True)
@@ -286,6 +299,7 @@ def _close(
         replace(
             s, context=context, clock_s=float(clock[-1]), last_h=float(when[-1]), u_h=float(u[-1]),
             q_kh=float(qs[-1]), reference_c=float(reference), temp_c=temp_last,
+            oq_h=float(oq[-1]), first_output=first_output, output=output_last,
             rooms_c=(lasts[0], lasts[1], lasts[2]), offsets=offsets, noise=(noise[0], noise[1]),
             half=half, absent=absent,
         ),

@@ -26,13 +26,15 @@ LEAF_SCANS: Final = 256
 """Greatest number of scans in a leaf: bounds the raw rows that the state must hold."""
 
 (
-    N, T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, S_TT, S_TE, S_EE, START, END, SEGMENT, Q2,
-) = range(17)  # fmt: skip
+    N, T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, S_TT, S_TE, S_EE, START, END, SEGMENT, OUT, OQ,
+) = range(18)  # fmt: skip
 """Columns. N scans; means of T time [h], U equivalent time [h], Q integral of (T - T0) dU [K h], E strain,
 H half difference of the sides, TEMP specimen [degC], ROOM0..2 room as it is and lagged [degC]; S_.. sums
-of squares and products about the means; START, END [h]; SEGMENT counts the steps before; Q2 spare."""
-COLUMNS: Final = 17
-_MEANS: Final = np.array([T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, Q2])
+of squares and products about the means; START, END [h]; SEGMENT counts the steps before; means of OUT
+controller output [%], NaN where it is not logged, and OQ integral of (output - first output) dU [% h], zero
+there."""
+COLUMNS: Final = 18
+_MEANS: Final = np.array([T, U, Q, E, H, TEMP, ROOM0, ROOM1, ROOM2, OUT, OQ])
 
 SWEEP_EVERY: Final = 8
 """Leaves between two sweeps that merge neighbours."""
