@@ -48,15 +48,23 @@ def gather(s: CausesState, cues: Iterable[Cue]) -> tuple[CausesState, list[Cue]]
 
 
 def _settle(s: CausesState, alarm: str, cue: Cue, heard: list[Cue]) -> CausesState:
-    """Raise or let go one family after ``cue``; a warning gives way to the alarm it warned of."""
+    """Raise or let go one family after ``cue``; a warning gives way to the alarm it warned of, and comes
+    back when that alarm ends while the edge is still near."""
     stands = any(a == alarm for a, _ in s.held)
     graver = FAMILIES[alarm]
     covered = bool(graver) and any(a == graver for a, _ in s.held)
     if alarm in s.told and (not stands or covered):
         heard.append(Cue(cue.scan, cue.tick, alarm, "", False))
         return replace(s, told=tuple(a for a in s.told if a != alarm))
-    if alarm not in s.told and stands and not covered and cue.alarm == alarm and cue.active:
+    if alarm in s.told or not stands or covered:
+        return s
+    if cue.alarm == alarm and cue.active:
         figures = {**cue.figures, "channel": cue.subject}
         heard.append(replace(cue, subject="", figures=figures))
+        return replace(s, told=(*s.told, alarm))
+    if cue.alarm == graver:  # that one is over, and the warning that it had covered still holds
+        near = tuple(subject for a, subject in s.held if a == alarm)
+        message = f"{', '.join(near)}: back within the tolerance, still close to its edge"
+        heard.append(Cue(cue.scan, cue.tick, alarm, "", True, message, None, {"channel": near[0]}))
         return replace(s, told=(*s.told, alarm))
     return s

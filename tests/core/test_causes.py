@@ -25,6 +25,8 @@ def test_a_hot_furnace_is_one_alarm_whatever_the_number_of_sensors() -> None:
     assert [(c.alarm, c.subject, c.active, c.scan) for c in heard] == [
         ("temperature_high", "", True, 1),
         ("temperature_high", "", False, 9),
+        ("temperature_nearing_high", "", True, 9),
+        ("temperature_nearing_high", "", False, 12),
     ]
     assert heard[0].figures["channel"] == "top"
 
@@ -43,7 +45,41 @@ def test_a_warning_gives_way_to_the_alarm_it_warned_of() -> None:
         ("temperature_low", True),
         ("temperature_nearing_low", False),
         ("temperature_low", False),
+        ("temperature_nearing_low", True),
+        ("temperature_nearing_low", False),
     ]
+
+
+def test_a_warning_comes_back_when_the_graver_alarm_ends_and_the_edge_is_still_near() -> None:
+    """A furnace that is just inside again is not well: silence there would read as all clear."""
+    cues = [
+        _cue(1, "temperature_nearing_high", "mid"),
+        _cue(2, "temperature_nearing_high", "top"),
+        _cue(3, "temperature_high", "mid"),
+        _cue(4, "temperature_nearing_high", "top", False),
+        _cue(5, "temperature_high", "mid", False),
+    ]
+    _, heard = gather(CausesState(), cues)
+    assert [(c.alarm, c.active, c.scan) for c in heard] == [
+        ("temperature_nearing_high", True, 1),
+        ("temperature_high", True, 3),
+        ("temperature_nearing_high", False, 3),
+        ("temperature_high", False, 5),
+        ("temperature_nearing_high", True, 5),
+    ]
+    assert heard[-1].figures == {"channel": "mid"}
+    assert "still close" in heard[-1].message
+
+
+def test_a_warning_that_ended_meanwhile_does_not_come_back() -> None:
+    """Back well inside the band there is nothing to warn of."""
+    cues = [
+        _cue(1, "temperature_nearing_high", "mid"),
+        _cue(3, "temperature_high", "mid"),
+        _cue(4, "temperature_nearing_high", "mid", False),
+        _cue(5, "temperature_high", "mid", False),
+    ]
+    assert gather(CausesState(), cues)[1][-1].alarm == "temperature_high"
 
 
 def test_other_alarms_pass_untouched() -> None:
