@@ -27,7 +27,8 @@ CONFIRM: Final = 5
 """Scans needed from a suspected one on: a median of five outvotes two further spikes."""
 CONTEXT: Final = 24
 """Clean scans kept before the buffer."""
-
+ROOT_2: Final = math.sqrt(2.0)
+ROOT_1P5: Final = math.sqrt(1.5)
 
 JERKS: Final = 3
 """Jumps that look like creep and are then taken as creep: one is an accident, three are a habit of the
@@ -52,13 +53,28 @@ def scan_noise(v: FloatArray) -> float:
     """Return the s.d. of single scans from second differences (n,), at least the resolution's; NaN if n <
     5."""
     v = v[np.isfinite(v)]
+    return _noise_of(v, v[1:] - v[:-1])
+
+
+def _noise_of(v: FloatArray, moves: FloatArray) -> float:
+    """Return the s.d. of single scans of finite ``v`` and their differences."""
     if v.size < 5:
-        return float("nan")
+        return math.nan
     second = np.abs(v[1:-1] - 0.5 * (v[2:] + v[:-2]))
-    first = np.abs(np.diff(v))
+    first = np.abs(moves)
     seen = first[first > 1e-12]
-    resolution = float(seen.min()) if seen.size else 0.0
-    return max(1.4826 * float(np.median(second)) / math.sqrt(1.5), 0.3 * resolution)
+    resolution = float(np.minimum.reduce(seen)) if seen.size else 0.0
+    return max(1.4826 * median(second) / ROOT_1P5, 0.3 * resolution)
+
+
+def median(v: FloatArray) -> float:
+    """Return the median of finite ``v`` (n,), n > 0: ``np.median`` to the last bit, for a few numbers ten
+    times as fast."""
+    ordered = np.sort(v)
+    half = ordered.size // 2
+    if ordered.size % 2:
+        return float(ordered[half])
+    return 0.5 * (float(ordered[half - 1]) + float(ordered[half]))
 
 
 def judge(
@@ -76,17 +92,32 @@ def judge(
     """
     n = v.shape[0] - context
     spikes = np.zeros(n, dtype=bool)
-    good = np.flatnonzero(np.isfinite(v))
-    now = scan_noise(v)
-    noise = float(np.nanmax([now, 0.7 * noise_before])) if np.isfinite(now) else noise_before
-    if good.size < 6 or not np.isfinite(noise):
+    finite = np.isfinite(v)
+    if np.logical_and.reduce(finite):
+        tg, vg, fresh = t_h, v, max(context - 1, 0)
+    else:
+        tg, vg = t_h[finite], v[finite]
+        fresh = max(int(np.count_nonzero(finite[:context])) - 1, 0)
+    moves = vg[1:] - vg[:-1]
+    now = _noise_of(vg, moves)
+    noise = noise_before
+    if math.isfinite(now):
+        noise = now if math.isnan(noise_before) else max(now, 0.7 * noise_before)
+    if vg.size < 6 or not math.isfinite(noise):
         return Judged(spikes, None, 0.0, None, now)
+    # nearly every leaf ends here: no scan differs from the one before it by more than may be
+    slope = _slope(tg, vg)
+    dt = tg[fresh + 1 :] - tg[fresh:-1]
+    limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
+    if not np.logical_or.reduce(np.abs(moves[fresh:] - slope * dt) > limit):
+        return Judged(spikes, None, 0.0, None, now)
+    good = np.flatnonzero(finite)
     cleared = context
     for _ in range(16):
         tg, vg = t_h[good], v[good]
         slope = _slope(tg, vg)
         dt = np.diff(tg)
-        limit = SUSPECT_SDS * np.sqrt(2.0) * noise + 0.7 * abs(slope) * np.abs(dt)
+        limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
         odd = np.flatnonzero((np.abs(np.diff(vg) - slope * dt) > limit) & (good[1:] >= cleared))
         if odd.size == 0:
             break
@@ -101,8 +132,8 @@ def judge(
             if j >= 8
             else _slope(tg[j:], vg[j:])
         )
-        level0 = float(np.median(vg[before] - slope * (tg[before] - tg[j])))
-        level1 = float(np.median(vg[after] - slope * (tg[after] - tg[j])))
+        level0 = median(vg[before] - slope * (tg[before] - tg[j]))
+        level1 = median(vg[after] - slope * (tg[after] - tg[j]))
         jump = level1 - level0
         room = 0.7 * abs(slope) * float(np.max(np.diff(tg[before.start : after.stop])))
         k0, k1 = before.stop - before.start, after.stop - after.start
@@ -124,10 +155,13 @@ def _slope(t: FloatArray, v: FloatArray) -> float:
     """Return a median slope of pairs half the record apart: one step or spike does not move it much."""
     h = t.size // 2
     dt = t[h:] - t[: t.size - h]
+    dv = v[h:] - v[: t.size - h]
     ok = dt > 0
-    if not ok.any():
-        return 0.0
-    return float(np.median((v[h:] - v[: v.size - h])[ok] / dt[ok]))
+    if not np.logical_and.reduce(ok):
+        dt, dv = dt[ok], dv[ok]
+        if not dt.size:
+            return 0.0
+    return median(dv / dt)
 
 
 def looks_like_creep(sizes: tuple[float, ...], both_there: bool) -> bool:

@@ -7,6 +7,7 @@ depend on how scans arrived.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field, replace
 from typing import Final, NamedTuple
 
@@ -27,6 +28,11 @@ FAR_K: Final = 15.0
 """Specimen temperature this far off is another test condition or a broken thermocouple: strain left out
 meanwhile."""
 ABSENT_SCANS: Final = 10
+MEANS: Final = np.array([
+    ladder.T, ladder.U, ladder.Q, ladder.E, ladder.TEMP,
+    ladder.ROOM0, ladder.ROOM1, ladder.ROOM2, ladder.OUT, ladder.OQ,
+])  # fmt: skip
+"""Columns of a rung that are means over the leaf."""
 
 
 def _no_rows() -> FloatArray:
@@ -136,10 +142,8 @@ def next_leaf(
             return s2, used, leaf._replace(step=step)
         stop = min(x for x in (first_hold, first_step, part.shape[0]) if x is not None)
         if stop > 0:
-            s2, rung = _close(s, rules, part[:stop], clock[at : at + stop], judged)
             # dated by the last scan that the decision needed; a held scan may lie beyond the leaf
-            if part[-1, SCAN] > s.scan:
-                s2 = replace(s2, scan=int(part[-1, SCAN]), tick=int(part[-1, TICK]))
+            s2, rung = _close(s, rules, part[:stop], clock[at : at + stop], judged, part[-1])
             now_h = (float(clock[at + stop - 1]) - s.origin_s) / 3600.0
             return s2, at + stop, Leaf(rung, None, s2.scan, s2.tick, now_h)
         end += 1
@@ -208,8 +212,13 @@ def _close(
     part: FloatArray,
     clock: FloatArray,
     judged: tuple[clean.Judged, clean.Judged],
+    known_by: FloatArray,
 ) -> tuple[IntakeState, FloatArray | None]:
-    """Reduce ``part`` to one rung and carry on."""
+    """Reduce ``part`` to one rung and carry on; ``known_by`` is the last row that this decision needed.
+
+    Leaves are small and many: numpy's ufuncs are called without the wrappers around them, which take
+    longer than the work.
+    """
     n = part.shape[0]
     t = (part[:, T_S] - s.origin_s) / 3600.0
     a = part[:, A] - s.offsets[0]
@@ -217,114 +226,161 @@ def _close(
     a[judged[0].spikes[:n]] = np.nan
     b[judged[1].spikes[:n]] = np.nan
     has_a, has_b = np.isfinite(a), np.isfinite(b)
+    any_a, any_b = _any(has_a), _any(has_b)
     offsets, half = s.offsets, s.half
     # a side that was away for long comes back at an unknown level: joined on where the mean is
-    for side, has in ((0, has_a), (1, has_b)):
-        values, other = (a, b) if side == 0 else (b, a)
-        if s.absent[side] >= ABSENT_SCANS and has.any() and np.isfinite(other).any():
-            sign = 1.0 if side == 0 else -1.0
-            shift = float(np.nanmedian(values) - (np.nanmedian(other) + sign * 2.0 * half))
-            np.subtract(values, shift, out=values)
-            offsets = (offsets[0] + shift, offsets[1]) if side == 0 else (offsets[0], offsets[1] + shift)
+    if any_a and any_b and max(s.absent) >= ABSENT_SCANS:
+        for side in (0, 1):
+            values, other = (a, b) if side == 0 else (b, a)
+            if s.absent[side] >= ABSENT_SCANS:
+                sign = 1.0 if side == 0 else -1.0
+                shift = float(np.nanmedian(values) - (np.nanmedian(other) + sign * 2.0 * half))
+                np.subtract(values, shift, out=values)
+                offsets = (offsets[0] + shift, offsets[1]) if side == 0 else (offsets[0], offsets[1] + shift)
     both = has_a & has_b
-    e = np.where(both, 0.5 * (a + b), np.where(has_a, a - half, b + half))
-    if both.any():
-        half = float(np.mean(0.5 * (a[both] - b[both])))
-    absent = (
-        0 if has_a.any() else s.absent[0] + n,
-        0 if has_b.any() else s.absent[1] + n,
-    )
+    count = int(np.count_nonzero(both))
+    if count == n:
+        e = 0.5 * (a + b)
+        half = _mean(0.5 * (a - b))
+    else:
+        e = np.where(both, 0.5 * (a + b), np.where(has_a, a - half, b + half))
+        if count:
+            half = _mean(0.5 * (a[both] - b[both]))
+    absent = (0 if any_a else s.absent[0] + n, 0 if any_b else s.absent[1] + n)
     temp, temp_last = _filled(part[:, TEMP], s.temp_c)
+    has_temp = math.isfinite(temp_last)
     reference = s.reference_c
-    if not np.isfinite(reference):
+    if not math.isfinite(reference):
         given = rules.set_point_c
-        reference = (
-            given if given is not None else (float(np.mean(temp)) if np.isfinite(temp).all() else np.nan)
-        )
+        reference = given if given is not None else (_mean(temp) if has_temp else math.nan)
     when = (clock - s.origin_s) / 3600.0
-    dt = np.diff(np.concatenate(([s.last_h], when)))
-    off = np.zeros(n)
-    if np.isfinite(temp).all() and np.isfinite(reference):
-        before = np.concatenate(([s.temp_c if np.isfinite(s.temp_c) else temp[0]], temp[:-1]))
-        off = np.clip(0.5 * (before + temp) - reference, -4.0 * FAR_K, FAR_K)
+    du = _steps(when, s.last_h)
+    dt = du
+    off: FloatArray | None = None
+    if has_temp and math.isfinite(reference):
+        off = _between(temp, s.temp_c) - reference
+        off = np.minimum(np.maximum(off, -4.0 * FAR_K), FAR_K)
         e[np.abs(temp - reference) > FAR_K] = np.nan
-    factor = np.ones(n)
-    q = rules.activation_energy_j_per_mol
-    if q is not None and np.isfinite(reference):
-        k0 = reference + ZERO_C_IN_K
-        factor = np.exp(q / GAS_CONSTANT_J_PER_MOL_K * (1.0 / k0 - 1.0 / (k0 + off)))
-    u = s.u_h + np.cumsum(dt * factor)
-    qs = s.q_kh + np.cumsum(dt * factor * off)
+        q = rules.activation_energy_j_per_mol
+        if q is not None:
+            k0 = reference + ZERO_C_IN_K
+            du = dt * np.exp(q / GAS_CONSTANT_J_PER_MOL_K * (1.0 / k0 - 1.0 / (k0 + off)))
     output, output_last = _filled(part[:, OUT], s.output)
     first_output = s.first_output
-    oq = np.full(n, s.oq_h)
-    if np.isfinite(output_last):
-        if not np.isfinite(first_output):
-            first_output = float(np.mean(output))
-        before = np.concatenate(([s.output if np.isfinite(s.output) else output[0]], output[:-1]))
-        oq = s.oq_h + np.cumsum(dt * factor * (0.5 * (before + output) - first_output))
-    room, room_last = _filled(part[:, ROOM], s.rooms_c[0])
-    lagged = [room]
-    lasts = [room_last]
-    for i, lag in enumerate(ROOM_LAGS_H):
-        start = s.rooms_c[i + 1] if np.isfinite(s.rooms_c[i + 1]) else float(room[0])
-        filtered = _lag(room, dt, lag, start)
-        lagged.append(filtered)
-        lasts.append(float(filtered[-1]))
-    good = np.flatnonzero(np.isfinite(e))
+    if not math.isfinite(first_output) and math.isfinite(output_last):
+        first_output = _mean(output)
+
+    good = np.isfinite(e)
+    whole = _all(good)
+    # one row each of what a rung holds the means of, in the order of MEANS
+    x = np.empty((len(MEANS), n))
+    x[0] = t
+    x[1] = s.u_h + np.add.accumulate(du)
+    x[2] = s.q_kh if off is None else s.q_kh + np.add.accumulate(du * off)
+    x[3] = e
+    x[4] = temp
+    x[5], room_last = _filled(part[:, ROOM], s.rooms_c[0])
+    lagged = (math.nan, math.nan)
+    if math.isfinite(room_last):
+        room = x[5].tolist()
+        starts = [r if math.isfinite(r) else room[0] for r in s.rooms_c[1:]]
+        for i, (lag, start) in enumerate(zip(ROOM_LAGS_H, starts, strict=True)):
+            x[6 + i] = _lag(room, dt, lag, start)
+        lagged = (float(x[6, -1]), float(x[7, -1]))
+    else:
+        x[6:8] = np.nan
+    x[8] = output
+    x[9] = s.oq_h
+    if math.isfinite(output_last):
+        x[9] += np.add.accumulate(du * (_between(output, s.output) - first_output))
     rung: FloatArray | None = None
-    if good.size:
+    if whole or _any(good):
+        g = x if whole else x.compress(good, axis=1)  # rows contiguous: the same bits either way
         rung = np.zeros((1, ladder.COLUMNS))
         r = rung[0]
-        tg, eg = t[good], e[good]
-        r[ladder.N] = good.size
-        r[ladder.T], r[ladder.E] = np.mean(tg), np.mean(eg)
-        r[ladder.U], r[ladder.Q] = np.mean(u[good]), np.mean(qs[good])
+        r[ladder.N] = g.shape[1]
+        r[MEANS] = np.add.reduce(g, axis=1) / g.shape[1]
         r[ladder.H] = half
-        r[ladder.TEMP] = np.mean(temp[good])
-        for c, x in zip((ladder.ROOM0, ladder.ROOM1, ladder.ROOM2), lagged, strict=True):
-            r[c] = np.mean(x[good])
-        d, f = tg - r[ladder.T], eg - r[ladder.E]
-        r[ladder.S_TT], r[ladder.S_TE], r[ladder.S_EE] = np.sum(d * d), np.sum(d * f), np.sum(f * f)
-        r[ladder.START], r[ladder.END] = np.min(tg), np.max(tg)
+        d, f = g[0] - r[ladder.T], g[3] - r[ladder.E]
+        r[ladder.S_TT], r[ladder.S_TE], r[ladder.S_EE] = (np.add.reduce(y) for y in (d * d, d * f, f * f))
+        r[ladder.START], r[ladder.END] = np.minimum.reduce(g[0]), np.maximum.reduce(g[0])
         r[ladder.SEGMENT] = s.segment
-        r[ladder.OUT], r[ladder.OQ] = np.mean(output[good]), np.mean(oq[good])
-    noise = tuple(
-        now if not np.isfinite(old) else (old if not np.isfinite(now) else old + 0.05 * (now - old))
-        for old, now in zip(s.noise, (judged[0].noise, judged[1].noise), strict=True)
-    )
-    fresh = np.stack((t, a, b), axis=1)
+    fresh = np.empty((n, 3))
+    fresh[:, 0], fresh[:, 1], fresh[:, 2] = t, a, b
     context = np.concatenate((s.context, fresh))[-clean.CONTEXT :]
+    scan, tick = s.scan, s.tick
+    if known_by[SCAN] > scan:
+        scan, tick = int(known_by[SCAN]), int(known_by[TICK])
     return (
-        replace(
-            s, context=context, clock_s=float(clock[-1]), last_h=float(when[-1]), u_h=float(u[-1]),
-            q_kh=float(qs[-1]), reference_c=float(reference), temp_c=temp_last,
-            oq_h=float(oq[-1]), first_output=first_output, output=output_last,
-            rooms_c=(lasts[0], lasts[1], lasts[2]), offsets=offsets, noise=(noise[0], noise[1]),
-            half=half, absent=absent,
+        IntakeState(
+            rows=s.rows, context=context, clock_s=float(clock[-1]), origin_s=s.origin_s,
+            last_h=float(when[-1]), u_h=float(x[1, -1]), q_kh=float(x[2, -1]),
+            reference_c=float(reference), temp_c=temp_last, oq_h=float(x[9, -1]),
+            first_output=first_output, output=output_last,
+            rooms_c=(room_last, lagged[0], lagged[1]), offsets=offsets,
+            noise=(_faded(s.noise[0], judged[0].noise), _faded(s.noise[1], judged[1].noise)),
+            half=half, absent=absent, still=s.still, segment=s.segment, jerks=s.jerks, jerky=s.jerky,
+            scan=scan, tick=tick,
         ),
         rung,
     )  # fmt: skip
 
 
+def _any(mask: np.ndarray) -> bool:
+    return bool(np.logical_or.reduce(mask))
+
+
+def _all(mask: np.ndarray) -> bool:
+    return bool(np.logical_and.reduce(mask))
+
+
+def _mean(v: FloatArray) -> float:
+    return float(np.add.reduce(v) / v.size)
+
+
+def _faded(old: float, now: float) -> float:
+    """Return the long-run noise: slow to follow, and kept where there is none now."""
+    if not math.isfinite(old):
+        return now
+    return old if not math.isfinite(now) else old + 0.05 * (now - old)
+
+
+def _steps(v: FloatArray, before: float) -> FloatArray:
+    """Return the differences of ``v`` (n,), the first one from ``before``."""
+    out = np.empty_like(v)
+    out[0] = v[0] - before
+    np.subtract(v[1:], v[:-1], out=out[1:])
+    return out
+
+
+def _between(v: FloatArray, before: float) -> FloatArray:
+    """Return the middles of ``v`` and the value before each: trapezoids."""
+    out = np.empty_like(v)
+    out[0] = (before if math.isfinite(before) else v[0]) + v[0]
+    np.add(v[:-1], v[1:], out=out[1:])
+    out *= 0.5
+    return out
+
+
 def _filled(v: FloatArray, last: float) -> tuple[FloatArray, float]:
-    """Return ``v`` with gaps filled by the last value before them, and the last value."""
+    """Return ``v`` with gaps filled by the last value before them, and the last value; all NaN where there
+    never was one, finite otherwise."""
     ok = np.isfinite(v)
-    if ok.all():
+    if _all(ok):
         return v, float(v[-1])
-    if not ok.any():
+    if not _any(ok):
         return np.full(v.shape, last), last
     idx = np.maximum.accumulate(np.where(ok, np.arange(v.size), -1))
     out = np.where(idx >= 0, v[np.maximum(idx, 0)], last if np.isfinite(last) else v[np.flatnonzero(ok)[0]])
     return out, float(out[-1])
 
 
-def _lag(v: FloatArray, dt: FloatArray, lag_h: float, start: float) -> FloatArray:
+def _lag(v: list[float], dt: FloatArray, lag_h: float, start: float) -> list[float]:
     """Return the first-order lag of ``v`` held between stamps; exact, in one pass per leaf."""
-    out = np.empty_like(v)
-    keep = np.exp(-np.minimum(dt / lag_h, 50.0))
+    keep = np.exp(-np.minimum(dt / lag_h, 50.0)).tolist()
     level = start
-    for i, (k, x) in enumerate(zip(keep.tolist(), v.tolist(), strict=True)):
+    out = []
+    for k, x in zip(keep, v, strict=True):
         level = x + k * (level - x)
-        out[i] = level
+        out.append(level)
     return out
