@@ -11,7 +11,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import TypeVar
 
-from daq.core import tallies, watch
+from daq.core import drifting, tallies, watch
 from daq.core.band import BandState
 from daq.core.milestones import MilestoneState
 from daq.core.results import ResultsState
@@ -35,7 +35,8 @@ def adopt(
         return seen, told, ()
     fresh = watch.begin(new)
     left = {c.name for c, name in zip(old.channels, _names(old), strict=True) if name not in _names(new)}
-    gone = tuple(cue for cue in seen.standing if cue[1] in left)
+    # who drifts is told by what channels did together: with others it is asked anew
+    gone = tuple(cue for cue in seen.standing if cue[1] in left or cue[0] == drifting.ALARM)
     band = _band(seen.band, fresh.band, left)
     seen = replace(
         seen,
@@ -44,6 +45,7 @@ def adopt(
         rupture=replace(seen.rupture, last=NOTHING, pending=None),
         band=band,
         sensors=_sensors(seen.sensors, fresh.sensors, old, new),
+        drifting=fresh.drifting,
         standing=tuple(cue for cue in seen.standing if cue not in gone),
     )
     begun, t = tallies.begin(new), told.tallies

@@ -142,6 +142,12 @@ _TABLE: Final = (
         on_delay_s=600.0, off_delay_s=1800.0,
     ),
     AlarmKind(
+        "thermocouple_drifting", _L, "a thermocouple may drift, as output or the other couples show",
+        "Compare it with another couple; do not move the set point on this alone. The specimen may have been "
+        "at another temperature since the time given.",
+        off_delay_s=3600.0,
+    ),
+    AlarmKind(
         "sides_disagree", _L, "the two sides of the extensometer drift apart",
         "Check seat and alignment; it may be bending, a slip, necking or a crack.",
         on_delay_s=600.0, off_delay_s=1800.0,

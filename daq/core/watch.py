@@ -18,9 +18,10 @@ from typing import Any, Final
 import numpy as np
 
 from daq.codec import state
-from daq.core import band, leaves, milestones, rupture, sensors
+from daq.core import band, drifting, leaves, milestones, rupture, sensors
 from daq.core.band import BandState
 from daq.core.block import Block, Conclusion, Cue
+from daq.core.drifting import DriftState
 from daq.core.leaves import LEAF, Cadence, Closed, Leaves
 from daq.core.milestones import MeanState, MilestoneState
 from daq.core.rules import Role, TestRules
@@ -49,6 +50,7 @@ class WatchState:
     milestones: MilestoneState
     rupture: RuptureState
     sensors: SensorState
+    drifting: DriftState
     rate_armed: bool = False
     rate_high: bool = False
     over: bool = False
@@ -61,10 +63,10 @@ Item = Conclusion | Cue
 def begin(rules: TestRules) -> WatchState:
     """Return the state before the first scan."""
     temperature = band.begin(rules)
-    columns = len(temperature.signals) + 1 + 4  # output; sides, mean strain, force
+    columns = len(temperature.signals) + 1 + 5  # output; sides, mean strain, force, room
     return WatchState(
         leaves.begin(columns), Cadence(), MeanState(), STILL, temperature, milestones.begin(rules),
-        RuptureState(), sensors.begin(rules),
+        RuptureState(), sensors.begin(rules), drifting.begin(rules),
     )  # fmt: skip
 
 
@@ -88,10 +90,8 @@ def watch(
     cadence, paced = leaves.pace(s.cadence, block.tick, rules.scan_every_s)
     mean_state, mean = milestones.mean_strain(s.mean, block.strain_a, block.strain_b)
     signals = band.signals(rules, block)
-    columns = np.concatenate(
-        (signals, block.strain_a[:, None], block.strain_b[:, None], mean[:, None], _force(rules, block)),
-        axis=1,
-    )
+    a, b, room = block.strain_a[:, None], block.strain_b[:, None], block.room_c[:, None]
+    columns = np.concatenate((signals, a, b, mean[:, None], _force(rules, block), room), axis=1)
     open_leaf, closed = leaves.take(s.leaves, block.tick, columns)
     motions, ends = _motions(s.motion, closed, signals.shape[1] + 2)
     linked = (block.values == block.values).any(axis=1)
@@ -111,14 +111,16 @@ def watch(
     believed, apart = sensors.watch_sides(
         believed, block, closed, signals.shape[1], signals.shape[1] + 1, noise
     )
+    width = signals.shape[1]
+    slow, named = drifting.watch_drift(s.drifting, rules, block, closed, width - 1, width + 4)
     broke = next((c for c in torn if c.alarm == "rupture"), None)
     if broke is not None:  # no strain is passed by what tore
         ahead, items = MilestoneState(()), [i for i in items if not _passed_by_rupture(i, broke)]
-    items += [*torn, *doubts, *apart]
+    items += [*torn, *doubts, *apart, *named]
     items.sort(key=lambda item: item.scan)
     after = WatchState(
-        open_leaf, cadence, mean_state, motions[-1], temperature, ahead, broken, believed, s.rate_armed,
-        s.rate_high, False, _stand(s.standing, items),
+        open_leaf, cadence, mean_state, motions[-1], temperature, ahead, broken, believed, slow,
+        s.rate_armed, s.rate_high, False, _stand(s.standing, items),
     )  # fmt: skip
     return after, tuple(items)
 
@@ -143,6 +145,11 @@ def watch_rate(
         cues = (Cue(scan, tick, "rate_limit", "", False),)
         return replace(s, rate_high=False, standing=_stand(s.standing, cues)), cues
     return s, ()
+
+
+def doubt(s: WatchState) -> str | None:
+    """Return why a rate that rises may be a specimen hotter than indicated, None where nothing says so."""
+    return drifting.doubt(s.drifting)
 
 
 KEPT: Final = frozenset({"rupture", "milestone_reached", "strain_limit"})
