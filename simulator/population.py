@@ -60,13 +60,13 @@ def draw(seed: int, index: int) -> RigSpec:
     drawn = draw_curve(rng, log_uniform(rng, SHORTEST_H, LONGEST_H))
     record_h = drawn.duration_h if drawn.rupture_h is None else drawn.rupture_h
     sides = 2 if rng.random() < 0.6 else 1
-    thermocouples = _thermocouples(rng)
+    thermocouples = thermocouples_of(rng)
     room_logged = bool(rng.random() < 0.7)
     output_logged = bool(rng.random() < 0.3)
-    furnace, true_q, furnace_events, output_logged = _furnace(rng, record_h, thermocouples, output_logged)
-    room, room_events = _room(rng, record_h, room_logged)
-    transducers = _transducers(rng, sides)
-    events = [*furnace_events, *room_events, *_strain_events(rng, record_h, transducers, drawn)]
+    furnace, true_q, furnace_events, output_logged = furnace_of(rng, record_h, thermocouples, output_logged)
+    room, room_events = room_of(rng, record_h, room_logged)
+    transducers = transducers_of(rng, sides)
+    events = [*furnace_events, *room_events, *strain_events_of(rng, record_h, transducers, drawn)]
     return RigSpec(
         creep=drawn.curve,
         duration_h=drawn.duration_h,
@@ -79,12 +79,12 @@ def draw(seed: int, index: int) -> RigSpec:
         room=room,
         transducers=transducers,
         thermocouples=thermocouples,
-        sampling=_sampling(rng, record_h),
+        sampling=sampling_of(rng, record_h),
         events=tuple(sorted(events, key=lambda e: e.at_h)),
         room_channel=room_logged,
         output_channel=output_logged,
         break_channel=bool(rng.random() < 0.2),
-        told=_told(rng, drawn, record_h, true_q),
+        told=told_of(rng, drawn, record_h, true_q),
         after="jump" if rng.random() < 0.5 else "lost",
         after_scans=int(rng.integers(0, 6)),
     )
@@ -135,7 +135,8 @@ def iso204_band_k(set_point_c: float) -> float:
     )
 
 
-def _told(rng: Rng, drawn: Drawn, record_h: float, true_q: float) -> Told:
+def told_of(rng: Rng, drawn: Drawn, record_h: float, true_q: float) -> Told:
+    """Draw what the user tells of the rig."""
     q = None if rng.random() < 0.10 else true_q * log_normal(rng, 1.0, 0.15, 0.6, 1.6)
     life_h = drawn.rupture_h
     if life_h is None:
@@ -150,21 +151,32 @@ def _told(rng: Rng, drawn: Drawn, record_h: float, true_q: float) -> Told:
     )
 
 
-def _thermocouples(rng: Rng) -> tuple[Thermocouple, ...]:
+def thermocouples_of(rng: Rng) -> tuple[Thermocouple, ...]:
+    """Draw none, one or three thermocouples."""
     names = {0: (), 1: ("mid",), 3: ("top", "mid", "bot")}[int(rng.choice([0, 1, 3], p=[0.15, 0.30, 0.55]))]
     noise = log_uniform(rng, 0.02, 0.2)
     return tuple(Thermocouple(n, float(rng.normal(0.0, 0.5)), noise, 0.1) for n in names)
 
 
-def _furnace(
-    rng: Rng, record_h: float, thermocouples: tuple[Thermocouple, ...], output_logged: bool
+def furnace_of(
+    rng: Rng,
+    record_h: float,
+    thermocouples: tuple[Thermocouple, ...],
+    output_logged: bool,
+    set_point_c: float | None = None,
+    band_k: float | None = None,
 ) -> tuple[Furnace, float, list[Event], bool]:
+    """Draw furnace, true activation energy and temperature events; say whether the output is logged.
+
+    ``set_point_c`` and ``band_k`` [K] take the place of the drawn one and of ISO 204's.
+    """
     set_point = float(round(rng.uniform(450.0, 1100.0)))
+    set_point = set_point if set_point_c is None else set_point_c
     most = 0.10 * GAS_CONSTANT_J_PER_MOL_K * (set_point + 273.15) ** 2
     true_q = min(log_normal(rng, 330e3, 0.3, 140e3, 600e3), most)
     wander, memory = log_uniform(rng, 0.05, 0.8), log_uniform(rng, 0.3, 12.0)
     day = float(rng.uniform(0.0, 0.3))
-    band = iso204_band_k(set_point)
+    band = iso204_band_k(set_point) if band_k is None else band_k
     events: list[Event] = []
     if not thermocouples:
         return Furnace(set_point, min(wander, 0.2), memory, min(day, 0.05)), true_q, events, output_logged
@@ -188,7 +200,8 @@ def _furnace(
     return Furnace(set_point, wander, memory, day, control), true_q, events, output_logged
 
 
-def _room(rng: Rng, record_h: float, logged: bool) -> tuple[Room, list[Event]]:
+def room_of(rng: Rng, record_h: float, logged: bool) -> tuple[Room, list[Event]]:
+    """Draw the room, and its warm afternoons."""
     scale = 1.0 if logged else 0.5
     room = Room(
         mean_c=float(rng.uniform(18.0, 27.0)),
@@ -207,7 +220,8 @@ def _room(rng: Rng, record_h: float, logged: bool) -> tuple[Room, list[Event]]:
     return room, events
 
 
-def _transducers(rng: Rng, sides: int) -> tuple[Transducer, ...]:
+def transducers_of(rng: Rng, sides: int) -> tuple[Transducer, ...]:
+    """Draw one transducer or two."""
     white = log_normal(rng, 22.0, 0.9, 4.0, 260.0) * MICRO
     count = (log_uniform(rng, 1.0, 36.0) if rng.random() < 0.6 else 1.0) * MICRO
     drifts: list[tuple[float, float]] = []
@@ -241,9 +255,10 @@ def _transducers(rng: Rng, sides: int) -> tuple[Transducer, ...]:
     )
 
 
-def _strain_events(
+def strain_events_of(
     rng: Rng, record_h: float, transducers: tuple[Transducer, ...], drawn: Drawn
 ) -> list[Event]:
+    """Draw slips, re-zeros, losses, gaps and bursts."""
     events: list[Event] = []
 
     def sometime() -> float:
@@ -279,7 +294,8 @@ def _strain_events(
     return events
 
 
-def _sampling(rng: Rng, record_h: float) -> Sampling:
+def sampling_of(rng: Rng, record_h: float) -> Sampling:
+    """Draw how the rig is scanned."""
     records = log_normal(rng, 2000.0, 0.7, 200.0, 6000.0)
     if rng.random() < 0.02:
         records = log_uniform(rng, 6000.0, 37_000.0)

@@ -190,7 +190,7 @@ class _Problem:
         y = np.interp(self.mean_s, t_s, strain)
         gaps = np.diff(self.mean_s)
         self.slope: FloatArray = np.diff(y) / gaps if gaps.size else np.full(1, np.nan)
-        covariance = _block_covariance(first_s, self.last_s, counts, noise)
+        covariance = block_covariance(first_s, self.last_s, counts, noise)
         left, right = 1.0 / gaps[:-1], 1.0 / gaps[1:]
         # rows of D: left y[k] - (left + right) y[k+1] + right y[k+2]; scaled to ones on D C D' diagonal
         dc = left[:, None] * covariance[:-2] - (left + right)[:, None] * covariance[1:-1]
@@ -256,7 +256,7 @@ def _pivot(matrix: FloatArray, rises: FloatArray, free: BoolArray) -> FloatArray
     raise CoreError(f"limit: got no solution for {n} blocks, wanted one; the noise covariance is degenerate")
 
 
-def _block_covariance(
+def block_covariance(
     first_s: FloatArray, last_s: FloatArray, counts: FloatArray, noise: Noise
 ) -> FloatArray:
     """Return the covariance (k, k) of block means; scans count as evenly spread within their block."""

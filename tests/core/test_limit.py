@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.optimize import nnls
 
-from daq.core.limit import Noise, _block_covariance, detectable_at, energy, level_for
+from daq.core.limit import Noise, block_covariance, detectable_at, energy, level_for
 from daq.records import CoreError, FloatArray
 
 HOUR = 3600.0
@@ -81,7 +81,7 @@ def test_blocks_have_the_covariance_of_the_means_of_their_scans(memory_s: float)
     average = mean / np.array(sizes)[:, None]
     lost = -np.expm1(-np.abs(scans[:, None] - scans) / memory_s)  # 1 - correlation, without cancellation
     last = starts + np.array(spacings) * (np.array(sizes) - 1.0)
-    found = _block_covariance(
+    found = block_covariance(
         starts, last, np.array(sizes, dtype=float), Noise(0.0, drifts=((1.0, memory_s),))
     )
     wanted = average @ lost @ average.T

@@ -41,6 +41,18 @@ EDGES: dict[str, set[str]] = {
         "daq.recording",
         "daq.settings",
     },
+    "daq.prove": {
+        "daq.prove",
+        "daq.core",
+        "daq.records",
+        "daq.codec",
+        "daq.replay",
+        "daq.engine",
+        "daq.settings",
+        "daq.recording",
+        "daq.store",
+        "simulator",
+    },
     "simulator": {"simulator"},
     "drivers": {"drivers"},
 }
