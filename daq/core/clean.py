@@ -39,7 +39,9 @@ class Judged(NamedTuple):
     """What became of one side's rows.
 
     ``spikes`` (n,) mask. ``step_at`` row before which a step of ``size`` lies, else None.
-    ``hold_at`` first row that must wait, else None. ``noise`` s.d. of single scans.
+    ``hold_at`` first row that must wait, else None. ``noise`` s.d. of single scans. ``least`` change between
+    scans, 0 where there is none. ``stuck`` (n,) those of the spikes that only repeat the reading before
+    (``core.stuck``), None where there are none.
     """
 
     spikes: np.ndarray
@@ -47,24 +49,27 @@ class Judged(NamedTuple):
     size: float
     hold_at: int | None
     noise: float
+    least: float
+    stuck: np.ndarray | None = None
 
 
 def scan_noise(v: FloatArray) -> float:
     """Return the s.d. of single scans from second differences (n,), at least the resolution's; NaN if n <
     5."""
     v = v[np.isfinite(v)]
-    return _noise_of(v, v[1:] - v[:-1])
+    return _noise_of(v, v[1:] - v[:-1])[0]
 
 
-def _noise_of(v: FloatArray, moves: FloatArray) -> float:
-    """Return the s.d. of single scans of finite ``v`` and their differences."""
+def _noise_of(v: FloatArray, moves: FloatArray) -> tuple[float, float]:
+    """Return the s.d. of single scans of finite ``v`` and their differences, and the least change seen, 0 if
+    none."""
     if v.size < 5:
-        return math.nan
+        return math.nan, 0.0
     second = np.abs(v[1:-1] - 0.5 * (v[2:] + v[:-2]))
     first = np.abs(moves)
     seen = first[first > 1e-12]
     resolution = float(np.minimum.reduce(seen)) if seen.size else 0.0
-    return max(1.4826 * median(second) / ROOT_1P5, 0.3 * resolution)
+    return max(1.4826 * median(second) / ROOT_1P5, 0.3 * resolution), resolution
 
 
 def median(v: FloatArray) -> float:
@@ -99,23 +104,23 @@ def judge(
         tg, vg = t_h[finite], v[finite]
         fresh = max(int(np.count_nonzero(finite[:context])) - 1, 0)
     moves = vg[1:] - vg[:-1]
-    now = _noise_of(vg, moves)
+    now, least = _noise_of(vg, moves)
     noise = noise_before
     if math.isfinite(now):
         noise = now if math.isnan(noise_before) else max(now, 0.7 * noise_before)
     if vg.size < 6 or not math.isfinite(noise):
-        return Judged(spikes, None, 0.0, None, now)
+        return Judged(spikes, None, 0.0, None, now, least)
     # nearly every leaf ends here: no scan differs from the one before it by more than may be
-    slope = _slope(tg, vg)
+    slope = slope_of(tg, vg)
     dt = tg[fresh + 1 :] - tg[fresh:-1]
     limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
     if not np.logical_or.reduce(np.abs(moves[fresh:] - slope * dt) > limit):
-        return Judged(spikes, None, 0.0, None, now)
+        return Judged(spikes, None, 0.0, None, now, least)
     good = np.flatnonzero(finite)
     cleared = context
     for _ in range(16):
         tg, vg = t_h[good], v[good]
-        slope = _slope(tg, vg)
+        slope = slope_of(tg, vg)
         dt = np.diff(tg)
         limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
         odd = np.flatnonzero((np.abs(np.diff(vg) - slope * dt) > limit) & (good[1:] >= cleared))
@@ -124,13 +129,13 @@ def judge(
         j = int(odd[0]) + 1
         after = slice(j, min(j + CONFIRM + 3, good.size))
         if good.size - j < CONFIRM and not final:
-            return Judged(spikes, None, 0.0, int(good[j]) - context, now)
+            return Judged(spikes, None, 0.0, int(good[j]) - context, now, least)
         before = slice(max(0, j - 8), j)
         # the slope of one side of the jump: across it, the jump itself would pass for creep
         slope = (
-            _slope(tg[max(0, j - CONTEXT) : j], vg[max(0, j - CONTEXT) : j])
+            slope_of(tg[max(0, j - CONTEXT) : j], vg[max(0, j - CONTEXT) : j])
             if j >= 8
-            else _slope(tg[j:], vg[j:])
+            else slope_of(tg[j:], vg[j:])
         )
         level0 = median(vg[before] - slope * (tg[before] - tg[j]))
         level1 = median(vg[after] - slope * (tg[after] - tg[j]))
@@ -142,16 +147,16 @@ def judge(
             if jerky and jump > 0.0:
                 cleared = int(good[j]) + 1
                 continue
-            return Judged(spikes, int(good[j]) - context, jump, None, now)
+            return Judged(spikes, int(good[j]) - context, jump, None, now, least)
         if abs(vg[j] - level0) > JUDGE_SDS * noise + 0.7 * abs(slope) * float(dt[j - 1]):
             spikes[good[j] - context] = True
             good = np.delete(good, j)
         else:
             cleared = int(good[j]) + 1
-    return Judged(spikes, None, 0.0, None, now)
+    return Judged(spikes, None, 0.0, None, now, least)
 
 
-def _slope(t: FloatArray, v: FloatArray) -> float:
+def slope_of(t: FloatArray, v: FloatArray) -> float:
     """Return a median slope of pairs half the record apart: one step or spike does not move it much."""
     h = t.size // 2
     dt = t[h:] - t[: t.size - h]

@@ -14,7 +14,7 @@ from typing import Final, NamedTuple
 import numpy as np
 
 from daq.codec import state
-from daq.core import clean, ladder
+from daq.core import clean, ladder, stuck
 from daq.core.block import Block
 from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, TestRules
 from daq.records import FloatArray
@@ -28,6 +28,7 @@ FAR_K: Final = 15.0
 """Specimen temperature this far off is another test condition or a broken thermocouple: strain left out
 meanwhile."""
 ABSENT_SCANS: Final = 10
+COUNT_FADES: Final = 1.01
 MEANS: Final = np.array([
     ladder.T, ladder.U, ladder.Q, ladder.E, ladder.TEMP,
     ladder.ROOM0, ladder.ROOM1, ladder.ROOM2, ladder.OUT, ladder.OQ,
@@ -66,7 +67,8 @@ class IntakeState:
     noise: tuple[float, float] = (float("nan"), float("nan"))
     half: float = 0.0
     absent: tuple[int, int] = (0, 0)
-    still: tuple[int, int] = (0, 0)
+    stuck: tuple[float, float] = (float("nan"), float("nan"))
+    counts: tuple[float, float] = (float("nan"), float("nan"))
     segment: int = 0
     jerks: tuple[tuple[int, float, float], ...] = ()
     jerky: bool = False
@@ -151,13 +153,22 @@ def next_leaf(
 
 
 def _judge(s: IntakeState, part: FloatArray, final: bool) -> tuple[clean.Judged, clean.Judged]:
-    k = s.context.shape[0]
     t = np.concatenate((s.context[:, 0], (part[:, T_S] - s.origin_s) / 3600.0))
-    a = np.concatenate((s.context[:, 1], part[:, A] - s.offsets[0]))
-    b = np.concatenate((s.context[:, 2], part[:, B] - s.offsets[1]))
-    return (
-        clean.judge(t, a, k, s.noise[0], final, s.jerky),
-        clean.judge(t, b, k, s.noise[1], final, s.jerky),
+    return _judge_side(s, t, part[:, A], 0, final), _judge_side(s, t, part[:, B], 1, final)
+
+
+def _judge_side(s: IntakeState, t: FloatArray, raw: FloatArray, side: int, final: bool) -> clean.Judged:
+    k = s.context.shape[0]
+    v = np.concatenate((s.context[:, 1 + side], raw - s.offsets[side]))
+    noise = s.noise[side]
+    still = stuck.judge(t, v, k, noise, s.counts[side], s.stuck[side] - s.offsets[side], final)
+    if still is None:
+        return clean.judge(t, v, k, noise, final, s.jerky)
+    v[k:][still.mask] = np.nan
+    judged = clean.judge(t, v, k, noise, final, s.jerky)
+    holds = [h for h in (judged.hold_at, still.hold_at) if h is not None]
+    return judged._replace(
+        spikes=judged.spikes | still.mask, stuck=still.mask, hold_at=min(holds) if holds else None
     )
 
 
@@ -223,6 +234,7 @@ def _close(
     t = (part[:, T_S] - s.origin_s) / 3600.0
     a = part[:, A] - s.offsets[0]
     b = part[:, B] - s.offsets[1]
+    stuck_at = (_stuck_at(judged[0], part[:, A]), _stuck_at(judged[1], part[:, B]))
     a[judged[0].spikes[:n]] = np.nan
     b[judged[1].spikes[:n]] = np.nan
     has_a, has_b = np.isfinite(a), np.isfinite(b)
@@ -319,11 +331,31 @@ def _close(
             first_output=first_output, output=output_last,
             rooms_c=(room_last, lagged[0], lagged[1]), offsets=offsets,
             noise=(_faded(s.noise[0], judged[0].noise), _faded(s.noise[1], judged[1].noise)),
-            half=half, absent=absent, still=s.still, segment=s.segment, jerks=s.jerks, jerky=s.jerky,
+            half=half, absent=absent, stuck=stuck_at,
+            counts=(_least(s.counts[0], judged[0].least), _least(s.counts[1], judged[1].least)),
+            segment=s.segment, jerks=s.jerks, jerky=s.jerky,
             scan=scan, tick=tick,
         ),
         rung,
     )  # fmt: skip
+
+
+def _least(old: float, now: float) -> float:
+    """Return the least change seen: a range switched to a coarser one is known a few hundred leaves later."""
+    if now == 0.0:
+        return old
+    return now if math.isnan(old) else min(now, COUNT_FADES * old)
+
+
+def _stuck_at(judged: clean.Judged, raw: FloatArray) -> float:
+    """Return the reading, as it came, that a side is stuck at when these rows end; NaN when it is not."""
+    if judged.stuck is None:
+        return math.nan
+    there = np.flatnonzero(np.isfinite(raw))
+    if not there.size:
+        return math.nan
+    last = int(there[-1])
+    return float(raw[last]) if judged.stuck[last] else math.nan
 
 
 def _any(mask: np.ndarray) -> bool:
