@@ -142,6 +142,7 @@ def _take_block(
         if last - block.first + 1 >= len(block):
             break
         block = block.cut(0, last - block.first + 1)
+    concluded = _with_doubt(concluded, watch.doubt(seen))
     s = replace(s, watch=seen, follow=followed, results=results.observe(s.results, rules, block))
     s = _conclude(s, (*watched, *concluded), block, out, utc, utc_tick)
     if broken is not None:
@@ -150,6 +151,18 @@ def _take_block(
             s, rules, "ruptured", broken.tick, t_s, broken.scan, out, utc, int(utc_tick[len(block) - 1])
         )
     return s, len(block)
+
+
+def _with_doubt(concluded: tuple[Conclusion, ...], doubt: str | None) -> tuple[Conclusion, ...]:
+    """Say beside a tertiary detection that the specimen may be hotter than indicated, where that is so."""
+    if doubt is None:
+        return concluded
+    return tuple(
+        replace(c, fields={**c.fields, "why": f"{c.fields['why']}; but {doubt}"})
+        if c.kind == "stage" and c.fields["stage"] == "tertiary"
+        else c
+        for c in concluded
+    )
 
 
 def _conclude(
@@ -199,12 +212,12 @@ def _look_ahead(
     scan, tick = block.first + taken - 1, int(block.tick[taken - 1])
     for fields in said:
         out.put(Conclusion(scan, tick, "forecast", fields["of"], fields), utc_tick)
-    if rules.limits.rate_per_h is not None:
+    # before noise is known its 90 % limits are those of white noise alone, and much too close
+    if rules.limits.rate_per_h is not None and s.follow.models.shape[0]:
         now = follow.status(s.follow, rules)
         if now["rate_per_h"] is not None:
-            seen, cues = watch.watch_rate(
-                s.watch, rules, scan, tick, now["rate_per_h"], now["rate_low_per_h"]
-            )
+            rate = (now["rate_per_h"], now["rate_low_per_h"], now["rate_high_per_h"])
+            seen, cues = watch.watch_rate(s.watch, rules, scan, tick, t_s, rate)
             a = s.alarms
             for cue in cues:
                 a = react(a, cue, out, utc, utc_tick)

@@ -33,14 +33,20 @@ from daq.records import TICKS_PER_S, FloatArray, IntArray
 LEAST_POINTS: Final = 14
 """Second differences of a whole leaf: the noise of a leaf with holes is not taken."""
 RATE_CLEAR: Final = 0.9
+RATE_LASTS: Final = 0.03
+RATE_LASTS_VAGUE: Final = 0.2
+RATE_KNOWN: Final = 0.7
+"""A rate is known well where the lower 90 % limit is at least this share of it."""
+RATE_FAR: Final = 1.5
 ENDED: Final = frozenset({"ruptured", "ended"})
 
 
 @state
 @dataclass(frozen=True, slots=True)
 class WatchState:
-    """State of all watchers. ``rate_armed``: the rate was below its limit once (early primary does not
-    count); ``standing``: cues that stand, (alarm, subject), for the end of the test."""
+    """State of all watchers. ``rate_armed``: the rate was surely below its limit once (early primary does
+    not count); ``rate_since_s``, ``rate_below_s``: since when every look had it surely above, or below;
+    ``standing``: cues that stand, (alarm, subject), for the end of the test."""
 
     leaves: Leaves
     cadence: Cadence
@@ -53,6 +59,8 @@ class WatchState:
     drifting: DriftState
     rate_armed: bool = False
     rate_high: bool = False
+    rate_since_s: float | None = None
+    rate_below_s: float | None = None
     over: bool = False
     standing: tuple[tuple[str, str], ...] = ()
 
@@ -120,31 +128,53 @@ def watch(
     items.sort(key=lambda item: item.scan)
     after = WatchState(
         open_leaf, cadence, mean_state, motions[-1], temperature, ahead, broken, believed, slow,
-        s.rate_armed, s.rate_high, False, _stand(s.standing, items),
+        s.rate_armed, s.rate_high, s.rate_since_s, s.rate_below_s, False, _stand(s.standing, items),
     )  # fmt: skip
     return after, tuple(items)
 
 
 def watch_rate(
-    s: WatchState, rules: TestRules, scan: int, tick: int, rate_per_h: float, low_per_h: float
+    s: WatchState, rules: TestRules, scan: int, tick: int, t_s: float, rate: tuple[float, float, float]
 ) -> tuple[WatchState, tuple[Cue, ...]]:
-    """Hold a new rate against ``limits.rate_per_h``: over when its lower bound is, back nine tenths down.
+    """Hold a new rate (value, 90 % limits) [1/h] at ``t_s`` against ``limits.rate_per_h``.
 
-    The high rates just after loading do not count: the rate must have been below the limit once.
+    Neighbouring looks share most of their readings: one that is high by chance has company, but not for
+    long. So the lower limit must be above at every look of a stretch: of 3 % of the elapsed time where the
+    rate is known well (``RATE_KNOWN``), of 20 % where it is not, which is twice the tenth of the time that a
+    rate is taken over; a rate known well and half as high again as the limit is told at the second look.
+    High rates just after loading do not count: the rate must have been below the limit, its upper 90 % limit
+    over half such a stretch. It is over when the rate is nine tenths down.
     """
-    limit = rules.limits.rate_per_h
-    if limit is None or s.over or not math.isfinite(rate_per_h):
+    limit, (value, low, high) = rules.limits.rate_per_h, rate
+    if limit is None or s.over or not math.isfinite(value):
         return s, ()
-    s = replace(s, rate_armed=s.rate_armed or rate_per_h < limit)
-    if not s.rate_high and s.rate_armed and low_per_h > limit:
-        message = f"strain rate {100.0 * rate_per_h:.3g} %/h, limit {100.0 * limit:.3g} %/h"
-        figures = {"rate_per_h": rate_per_h, "low_per_h": low_per_h, "limit_per_h": limit}
-        cues = (Cue(scan, tick, "rate_limit", "", True, message, None, figures),)
-        return replace(s, rate_high=True, standing=_stand(s.standing, cues)), cues
-    if s.rate_high and rate_per_h < RATE_CLEAR * limit:
+    known = value > 0.0 and low >= RATE_KNOWN * value
+    s = _arm(s, t_s, high < limit, known)
+    if s.rate_high:
+        if value >= RATE_CLEAR * limit:
+            return s, ()
         cues = (Cue(scan, tick, "rate_limit", "", False),)
-        return replace(s, rate_high=False, standing=_stand(s.standing, cues)), cues
-    return s, ()
+        return replace(s, rate_high=False, rate_since_s=None, standing=_stand(s.standing, cues)), cues
+    if not s.rate_armed or not low > limit:
+        return replace(s, rate_since_s=None), ()
+    if s.rate_since_s is None:
+        return replace(s, rate_since_s=t_s), ()
+    lasting = t_s >= s.rate_since_s * (1.0 + (RATE_LASTS if known else RATE_LASTS_VAGUE))
+    if not lasting and not (known and low > RATE_FAR * limit):
+        return s, ()
+    message = f"strain rate {100.0 * value:.3g} %/h, limit {100.0 * limit:.3g} %/h"
+    figures = {"rate_per_h": value, "low_per_h": low, "limit_per_h": limit, "from_h": s.rate_since_s / 3600.0}
+    cues = (Cue(scan, tick, "rate_limit", "", True, message, None, figures),)
+    return replace(s, rate_high=True, standing=_stand(s.standing, cues)), cues
+
+
+def _arm(s: WatchState, t_s: float, below: bool, known: bool) -> WatchState:
+    """Note that the rate was below its limit, at once where it is known well."""
+    if s.rate_armed:
+        return s
+    since = (t_s if s.rate_below_s is None else s.rate_below_s) if below else None
+    armed = since is not None and (known or t_s >= since * (1.0 + 0.5 * RATE_LASTS_VAGUE))
+    return replace(s, rate_armed=armed, rate_below_s=since)
 
 
 def doubt(s: WatchState) -> str | None:

@@ -147,13 +147,53 @@ def test_the_end_tells_open_excursions_and_lets_conditions_go() -> None:
     assert watch.watch(state, rules, block) == (state, ())
 
 
-def test_rate_limit_asks_for_the_lower_bound_and_ignores_early_primary() -> None:
-    """Rates just after loading are above any sensible limit and concern nobody."""
-    rules = rules_for(["a"], Limits(rate_per_h=1e-4))
+RATE = 1e-4
+
+
+def rate_limit(looks: list[tuple[float, float, float, float]]) -> list[tuple[float, bool]]:
+    """Hours at which the alarm changed; looks are (hours, rate, low, high) in units of the limit."""
+    rules = rules_for(["a"], Limits(rate_per_h=RATE))
     state, said = watch.begin(rules), []
-    for scan, (rate, low) in enumerate(
-        [(1e-3, 9e-4), (5e-5, 4e-5), (1.2e-4, 0.9e-4), (1.5e-4, 1.2e-4), (0.95e-4, 0.8e-4), (0.8e-4, 0.7e-4)]
-    ):
-        state, cues = watch.watch_rate(state, rules, scan, scan, rate, low)
-        said += [(scan, c.active) for c in cues]
-    assert said == [(3, True), (5, False)]
+    for scan, (h, *rate) in enumerate(looks):
+        value, low, high = (RATE * x for x in rate)
+        state, cues = watch.watch_rate(state, rules, scan, scan, 3600.0 * h, (value, low, high))
+        state = decode_state(encode_state(state))
+        said += [(h, c.active) for c in cues]
+    return said
+
+
+def test_rate_limit_asks_for_the_lower_bound_over_a_stretch_and_ignores_early_primary() -> None:
+    """Rates just after loading are above any sensible limit and concern nobody."""
+    looks = [
+        (1.0, 10.0, 9.0, 11.0), (1.5, 10.0, 9.0, 11.0), (10.0, 0.5, 0.4, 0.6), (100.0, 1.1, 0.9, 1.3),
+        (101.0, 1.3, 1.1, 1.5), (102.0, 1.3, 1.1, 1.5), (104.1, 1.3, 1.1, 1.5), (106.0, 0.95, 0.8, 1.1),
+        (107.0, 0.8, 0.7, 0.9),
+    ]  # fmt: skip
+    assert rate_limit(looks) == [(104.1, True), (107.0, False)]
+
+
+def test_a_rate_known_badly_must_be_above_its_limit_for_longer() -> None:
+    """The rate is taken over a tenth of the time and more: looks closer than that are one look."""
+    vague = [(100.0 + k, 2.5, 1.2, 3.8) for k in range(30)]
+    assert rate_limit([(50.0, 0.5, 0.4, 0.6), *vague]) == [(120.0, True)]
+
+
+def test_a_noisy_look_below_the_limit_does_not_arm_it() -> None:
+    """In noisy primary the estimate dips below any limit; the rate itself was never there."""
+    high = [(4.0, 3.0, 2.5, 3.5), (4.1, 3.0, 2.5, 3.5)]
+    assert rate_limit([(2.0, 0.8, -3.0, 4.6), (2.5, 0.2, -3.0, 3.4), *high]) == []
+    assert rate_limit([(2.0, -9.0, -12.0, -6.0), *high]) == []
+    assert rate_limit([(2.0, 0.4, 0.0, 0.8), (2.3, 0.4, 0.0, 0.8), *high]) == [(4.1, True)]
+
+
+def test_one_high_look_between_others_is_no_rate_above_its_limit() -> None:
+    """The lower bound of a 90 % interval is above the truth at one look in twenty."""
+    calm = (100.0, 0.6, 0.5, 0.7)
+    lone, below = (1.4, 1.1, 1.7), (1.0, 0.9, 1.2)
+    assert rate_limit([calm, *((100.0 + k, *(lone if k % 3 else below)) for k in range(1, 40))]) == []
+
+
+def test_a_rate_that_runs_away_is_told_at_the_second_look() -> None:
+    """Near rupture the stretch may be all the time that is left."""
+    looks = [(100.0, 0.6, 0.5, 0.7), (101.0, 1.8, 1.6, 2.0), (101.5, 2.2, 2.0, 2.4)]
+    assert rate_limit(looks) == [(101.5, True)]
