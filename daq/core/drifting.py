@@ -43,9 +43,9 @@ MOST: Final = 128
 LEAST: Final = 16
 """Blocks needed: four times the columns that a plain change is judged with."""
 LOOK: Final = 1.03
-ALONE_H: Final = 72.0
-"""A single couple is not judged before it has seen three days: doors, people and mains have that period, and
-what only two of them show is no period yet."""
+ALONE_H: Final = 168.0
+"""A single couple is not judged before it has seen a week: doors, people and mains have the periods of a day
+and a week, and what has been seen once is no habit yet."""
 DAYS_H: Final = 36.0
 """From here on the wave of a day can be told from a change for good."""
 SOAK: Final = 0.05
@@ -57,6 +57,8 @@ SURE: Final = 6.0
 best: the same order as a normal deviate of 4.5, exceeded once in 150 000, would want."""
 DOUBT_K: Final = 0.75
 DOUBT_SURE: Final = 4.0
+SURE_ALONE: Final = 8.0
+"""And where only the output speaks: its disorder may have a memory of days, of which a week shows little."""
 LOOKS: Final = 2
 QUIET: Final = 3
 PATTERN: Final = 0.5
@@ -204,8 +206,9 @@ class Series:
 def _look(s: DriftState, rules: TestRules, now_h: float, scan: int, tick: int, cues: list[Cue]) -> DriftState:
     series = _series(s, rules)
     found = None if series is None else judge(series, now_h)
-    strong = found is not None and abs(found.reads_k) >= SIZE_K and found.sure >= SURE
-    weak = found is None or abs(found.reads_k) < 0.5 * SIZE_K or found.sure < 0.5 * SURE
+    sure = SURE_ALONE if found is not None and found.alone else SURE
+    strong = found is not None and abs(found.reads_k) >= SIZE_K and found.sure >= sure
+    weak = found is None or abs(found.reads_k) < 0.5 * SIZE_K or found.sure < 0.5 * sure
     same = found is not None and s.latest is not None and found.channel == s.latest.channel
     run = (s.run + 1 if same else 1) if strong else 0
     s = replace(s, latest=found, run=run, quiet=s.quiet + 1 if weak else 0, next_look_h=now_h * LOOK)

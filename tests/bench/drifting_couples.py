@@ -60,14 +60,14 @@ class Outcome:
     doubted: bool
 
 
-def cases(seed: int, rigs: int) -> Iterator[Case]:
+def cases(seed: int, rigs: int, couples: tuple[int, ...] = (1, 3)) -> Iterator[Case]:
     """Yield ``rigs`` rigs with a drift and as many without, by turns."""
     index = done = 0
     while done < 2 * rigs:
         spec = draw(seed, index)
         rng = np.random.default_rng([seed, index, STREAM])
         index += 1
-        if not spec.thermocouples or spec.longest_h < LEAST_H:
+        if len(spec.thermocouples) not in couples or spec.longest_h < LEAST_H:
             continue
         yield _case(spec, rng, drifts=done % 2 == 0)
         done += 1
@@ -142,9 +142,10 @@ def main() -> None:
     ask = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     ask.add_argument("--rigs", type=int, default=200)
     ask.add_argument("--seed", type=int, default=1)
+    ask.add_argument("--couples", type=int, choices=(1, 3), help="only rigs with so many")
     ask.add_argument("--show", action="store_true", help="print every alarm of a rig without drift")
     args = ask.parse_args()
-    found = [judge(case) for case in cases(args.seed, args.rigs)]
+    found = [judge(case) for case in cases(args.seed, args.rigs, (args.couples,) if args.couples else (1, 3))]
     drifted = [o for o in found if o.case.drift is not None]
     plain = [o for o in found if o.case.drift is None]
 

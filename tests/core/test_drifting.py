@@ -11,17 +11,17 @@ import pytest
 from watch_blocks import block_of, rules_for
 
 from daq.codec import decode_state, encode_state
-from daq.core import drifting, watch
+from daq.core import chain, drifting, watch
 from daq.core.adopt import adopt
-from daq.core.block import Block, Cue
+from daq.core.block import Block, Conclusion, Cue
 from daq.core.changes import best_change, fixed_change
 from daq.core.results import begin as begin_results
 from daq.core.rules import TestRules
 from daq.core.watch import WatchState
 from daq.records import FloatArray
 
-EVERY_S = 240.0
-HOURS = 160.0
+EVERY_S = 480.0
+HOURS = 240.0
 T_H = np.arange(int(HOURS * 3600.0 / EVERY_S)) * EVERY_S / 3600.0
 SLOPE = 1.8 / (600.0 - 22.0)
 """Relative output per kelvin of the furnace in these tests: between conduction, 1/(T - room) [1/K], and
@@ -187,6 +187,17 @@ def test_the_doubt_is_there_for_a_specimen_hotter_than_indicated_only() -> None:
         assert "may be hotter than indicated" in said
         assert "mid" in said
         assert watch.doubt(run(*controlled(couples, 3.0))[0]) is None
+
+
+def test_a_tertiary_detection_says_that_the_specimen_may_be_hotter_than_indicated() -> None:
+    """A hot specimen creeps faster without being damaged; whoever decides must have both in one message."""
+    tertiary = Conclusion(9, 90, "stage", "tertiary", {"stage": "tertiary", "why": "the rate rises"})
+    secondary = Conclusion(5, 50, "stage", "secondary", {"stage": "secondary", "why": "steady"})
+    said = watch.doubt(run(*controlled(("top", "mid", "bot"), -3.0))[0])
+    first, second = chain._with_doubt((secondary, tertiary), said)
+    assert first == secondary
+    assert second.fields["why"] == f"the rate rises; but {said}"
+    assert chain._with_doubt((secondary, tertiary), None) == (secondary, tertiary)
 
 
 def test_the_alarm_goes_when_the_couple_is_put_right() -> None:
