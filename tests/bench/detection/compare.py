@@ -169,8 +169,8 @@ def score(truths: Truths, false: Flags, true_h: Array) -> Score:
     some = counts > 0
 
     def quantile(q: float) -> Array:
-        # as numpy's "higher": no mean of a finite delay and an infinite one
-        at = np.ceil(q * np.maximum(counts - 1, 0)).astype(int)
+        # always one of the delays, as in daq.prove: no mean of a finite one and an infinite one
+        at = np.maximum(np.ceil(q * counts).astype(int) - 1, 0)
         return np.where(some, ordered[at, np.arange(ordered.shape[1])], np.nan)
 
     with np.errstate(invalid="ignore"):
@@ -203,7 +203,7 @@ def ours(rows: list[Row]) -> Score:
 
 def alarms_of(rows: list[Row], method: str) -> Array:
     """Return the first alarms of a detector, shape (rigs, settings)."""
-    return np.array([r["alarms"][method] for r in rows])
+    return np.array([r["alarms"][method] for r in rows], dtype=np.float64)
 
 
 def best_setting(tuning: Score, share: float, wanted: Flags) -> int | None:

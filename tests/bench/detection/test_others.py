@@ -13,6 +13,7 @@ import numpy as np
 import others
 import pytest
 
+from daq.prove.table import figures
 from simulator import population
 from simulator.spec import Event
 
@@ -188,11 +189,16 @@ def test_one_rule_scores_everybody() -> None:
     alarms = np.array([[25.0], [60.0], [np.nan], [9.0], [30.0], [np.nan]])
     got = compare.judged(compare.Truths(rows), alarms).at(0)
     assert (got.rigs, got.turning, got.false, got.missed, got.late) == (6, 4, 2, 1, 1)
-    assert (got.median, got.ninetieth) == (np.inf, np.inf)  # 1.5, 5, never, never: the higher middle one
+    assert (got.median, got.ninetieth) == (5.0, np.inf)  # of 1.5, 5, never, never
     for row, hour in zip(rows, alarms[:, 0], strict=True):
         early = not row["rises"] or hour < 10.0
         row |= {"false": bool(early and hour == hour), "true_h": None if early or hour != hour else hour}
     assert compare.ours(rows) == got
+    rows = [r for r in rows if not r["false"]]  # these two are left out here, and not there
+    theirs = figures([r | {"onset": None, "least": None, "levels": []} for r in rows])
+    mine = compare.ours(rows)
+    assert (theirs["must_detect"], theirs["missed"], theirs["after_offset"]) == (3, mine.missed, mine.late)
+    assert theirs["delay_over_best"]["median"] == mine.median
 
 
 def test_best_setting_is_the_quickest_of_those_that_keep_the_share_and_find_most() -> None:
@@ -230,3 +236,16 @@ def test_a_stopped_run_goes_on_and_other_settings_begin_anew(tmp_path: Path) -> 
     compare.kept(path, "b", jobs, do, 1)
     assert done[5:] == [0, 1, 2, 3]
     assert [json.loads(line)["index"] for line in path.read_text().splitlines()[1:]] == [0, 1, 2, 3]
+
+
+def test_a_library_that_is_not_there_is_named_and_its_detectors_left_out(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """The comparison must run for somebody who has neither river nor ruptures."""
+    monkeypatch.setattr(others, "find_spec", lambda name: None)
+    row = compare.others_one(RIG)
+    assert set(row["alarms"]) == set(others.SETTINGS) - set(others.NEEDS)
+    said = compare.table([], [row], [row])
+    assert "river is not installed, left out: Page-Hinkley (river), ADWIN (river)." in said
+    assert "ruptures is not installed, left out: KernelCPD (ruptures), hindsight." in said
+    assert said.count("CUSUM on block rates") == 2 * len(compare.PARTS)
