@@ -307,9 +307,13 @@ def _judge_several(x: Series) -> Suspicion | None:
             limits = sorted((pull * least, pull * high))
             beyond = max(limits[0] - answer[0] - slack, answer[0] - limits[1] - slack, 0.0)
             misfit = math.hypot(off, beyond / math.sqrt(least * high)) / abs(d)
-            # of two that part the output alone says which: no clear answer is no sign of control
-            unmoved = m == 2 and controls and abs(answer[0]) < 2.0 * answer[1]
-            if not unmoved and misfit < PATTERN and (best is None or misfit < best[0]):
+            # of two that part the output alone says which, and only where its answer is clear either way
+            told = (
+                abs(answer[0]) - 2.0 * answer[1] > 0.0
+                if controls
+                else (abs(answer[0]) + 2.0 * answer[1] < least * abs(d))
+            )
+            if (m > 2 or told) and misfit < PATTERN and (best is None or misfit < best[0]):
                 best = (misfit, j, d, controls)
     parted = None if best is not None else _parted(shift)
     if parted is not None:
