@@ -285,8 +285,9 @@ false: rigs with a detection where the rate never rises by 1 %, or before it beg
 missed, after 0.2 %: of turning rigs that broke, none until rupture, or after the 0.2 % offset.
 delay/best: (detected - start)/(limit - start), median and 90th percentile; the limit is the best possible at
 1 false in 200; a miss counts as never. A rig with a false detection is left out of misses and delays.
-Helped: a record without slips, re-zeros, stuck readings and lost sides (this detector has them all), exact
-corrections for room and specimen temperature where logged, and the best of some thousand settings."""
+Helped: a record without slips, re-zeros, stuck readings and lost sides, that begins when any incubation or
+inverse primary is over (this detector has all that), exact corrections for room and specimen temperature
+where logged, and the best of some thousand settings."""
 
 
 def _plain(value: Any) -> str:

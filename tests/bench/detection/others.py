@@ -3,7 +3,8 @@
 What they are given (more than a laboratory has, so that nobody can call the comparison unfair):
 
 - "helped": the record of the same rig without its slips, re-zeros, stuck readings and lost sides: it is
-  simulated again without these events, all noise the same.
+  simulated again without these events, all noise the same; and where the rate rises first (incubation,
+  inverse primary) it begins when that is over, as the truth has it.
 - "corrected": helped, and without the apparent strain of room and specimen temperature wherever that
   temperature is logged (simulated again with coefficients of zero, as if known exactly), against the
   temperature-equivalent time that follows from the thermocouples and the activation energy that the
@@ -137,7 +138,7 @@ def fingerprint() -> str:
 
 @dataclass(frozen=True)
 class Record:
-    """What a detector sees: lab time [h], the time in which rates are taken [h, from 0], mean strain [1]."""
+    """What a detector sees: lab time [h], time in which rates are taken [h], both from 0, mean strain [1]."""
 
     t_h: Array
     clock_h: Array
@@ -146,11 +147,16 @@ class Record:
 
 
 class Slopes:
-    """Least-squares slopes over any stretches of scans, from running sums."""
+    """Least-squares slopes over any stretches of scans, from running sums.
+
+    The scatter about a line counts as half that of the whole record about its running median at least: a few
+    scans of one and the same converter count are not without error.
+    """
 
     def __init__(self, record: Record) -> None:
         self.unit = float(record.clock_h[-1]) or 1.0
         t, y = record.clock_h / self.unit, record.strain - record.strain.mean()
+        self.floor = 0.5 * float(np.sqrt(np.mean((y - running_median(y, 5)) ** 2)))
         columns = np.stack([np.ones_like(t), t, y, t * t, t * y, y * y])
         self.sums = np.concatenate([np.zeros((6, 1)), np.cumsum(columns, axis=1)], axis=1)
 
@@ -164,7 +170,7 @@ class Slopes:
             sxx, sxy, syy = tt - t * t / n, ty - t * y / n, yy - y * y / n
             good = (n >= 3) & (sxx > 1e-16)
             rate = np.where(good, sxy / sxx, np.nan)
-            error = np.sqrt(np.maximum(syy - rate * sxy, 0.0) / (n - 2) / sxx)
+            error = np.sqrt(np.maximum((syy - rate * sxy) / (n - 2), self.floor**2) / sxx)
             return rate / self.unit, error / self.unit, t / n * self.unit, y / n
 
 
@@ -188,6 +194,8 @@ def prepare(spec: RigSpec, kind: str) -> Record:
     t_h = columns["time_s"] / 3600.0
     strain = mean_of_sides(t_h, [columns[c.name] for c in transducers])
     keep = np.isfinite(strain) & (t_h <= run.truth.end_h)
+    if kind != "as recorded":
+        keep &= t_h >= run.truth.incubation_h
     clock_h = t_h - t_h[0]
     told = spec.told
     if kind == "corrected" and spec.thermocouples and told.activation_energy_j_per_mol is not None:
@@ -195,7 +203,7 @@ def prepare(spec: RigSpec, kind: str) -> Record:
         q = told.activation_energy_j_per_mol
         clock_h = equivalent_time_h(clock_h, hot, spec.furnace.set_point_c, q)
     wait = 0.0 if told.expected_rupture_h is None else WAIT_SHARE * told.expected_rupture_h
-    return Record(t_h[keep], clock_h[keep] - clock_h[keep][0], without_spikes(strain[keep]), wait)
+    return Record(t_h[keep], clock_h[keep], without_spikes(strain[keep]), wait)
 
 
 def mean_of_sides(t_h: Array, sides: list[Array]) -> Array:
@@ -307,13 +315,15 @@ class BlockRates:
 
     def __init__(self, record: Record, slopes: Slopes, rule: tuple[str, float], kind: str) -> None:
         edges = np.asarray(_edges(record.clock_h, rule))
-        rate, _, mid_h, mean = slopes.over(edges[:-1], edges[1:])
+        rate, error, mid_h, mean = slopes.over(edges[:-1], edges[1:])
         last = edges[1:] - 1
         if kind == "means":
+            each = slopes.floor**2 / np.diff(edges)
             with np.errstate(all="ignore"):
                 rate, last = np.diff(mean) / np.diff(mid_h), last[1:]
+                error = np.sqrt(each[1:] + each[:-1]) / np.diff(mid_h)
         good = np.isfinite(rate)
-        rate, last = rate[good], last[good]
+        rate, last, least_error = rate[good], last[good], 0.5 * error[good]
         first = max(RECENT, SCATTER // 3) + 1
         n = max(rate.size - first, 0)
         self.rate, self.at_h = rate[first:], record.t_h[last[first:]]
@@ -332,8 +342,10 @@ class BlockRates:
         spread[first - 1 :] = np.nanmedian(
             np.lib.stride_tricks.sliding_window_view(steps, SCATTER)[first - 1 :], axis=1
         )
-        spread *= 1.4826 / 2.0**0.5
-        error = spread / RECENT**0.5
+        spread = np.maximum(
+            1.4826 / 2.0**0.5 * spread, least_error
+        )  # neighbours may differ by no count at all
+        error = spread / RECENT**0.5  # of a mean of so many
         with np.errstate(invalid="ignore"):
             sure = recent > 3.0 * error
         _, when = _least_so_far(np.where(sure, recent + 2.0 * error, np.inf), clock)
@@ -341,8 +353,7 @@ class BlockRates:
         known = np.isfinite(when[before])
         place = np.searchsorted(clock, np.where(known, when[before], clock[0]))
         self.reference = np.where(known, recent[place], self.rate)
-        floor = 1e-3 * np.abs(self.reference) + 1e-30
-        self.scatter = np.maximum(spread[before], floor)
+        self.scatter = np.maximum(spread[before], 1e-3 * np.abs(self.reference) + 1e-30)
         self.z = (self.rate - self.reference) / self.scatter
         self.fresh = when[before] == clock[before]
         for (i, rise), (j, stood) in itertools.product(enumerate(RISES), enumerate(STOOD_BLOCKS)):
@@ -459,13 +470,15 @@ def _kernel(record: Record, slopes: Slopes) -> Iterator[Array]:
         edges = np.searchsorted(record.clock_h, np.linspace(0.0, record.clock_h[-1], blocks + 1))
         edges = np.unique(edges)
         edges = edges[np.concatenate([[True], np.diff(edges) >= 3])]
-        rate, _, _, _ = slopes.over(edges[:-1], edges[1:])
-        begin_h, rate = record.t_h[edges[:-1]][np.isfinite(rate)], rate[np.isfinite(rate)]
+        rate, error, _, _ = slopes.over(edges[:-1], edges[1:])
+        good = np.isfinite(rate)
+        begin_h, rate, error = record.t_h[edges[:-1]][good], rate[good], error[good]
         for kernel in KERNELS:
             answers = np.full((len(PENALTIES[kernel]), len(KERNEL_RATIOS)), np.nan)
             if rate.size >= 10:
                 scatter = 1.4826 / 2.0**0.5 * float(np.median(np.abs(np.diff(rate))))
-                found = KernelCPD(kernel=kernel, min_size=2).fit(rate[:, None] / max(scatter, 1e-30))
+                scatter = max(scatter, 0.5 * float(np.median(error)), 1e-30)
+                found = KernelCPD(kernel=kernel, min_size=2).fit(rate[:, None] / scatter)
                 for i, penalty in enumerate(PENALTIES[kernel]):
                     cuts = [0, *found.predict(pen=penalty)]
                     means = np.array([rate[a:b].mean() for a, b in itertools.pairwise(cuts)])
