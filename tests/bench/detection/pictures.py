@@ -17,7 +17,7 @@ import csv
 import os
 import sys
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, Final
 
@@ -25,7 +25,7 @@ for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(_name, "1")  # small matrices: threads only get in each other's way
 
 import numpy as np  # noqa: E402
-from campaign import block_of, limit_of, rules_of  # noqa: E402
+from campaign import rules_of  # noqa: E402
 from matplotlib.axes import Axes  # noqa: E402
 from matplotlib.backends.backend_agg import FigureCanvasAgg  # noqa: E402
 from matplotlib.figure import Figure  # noqa: E402
@@ -35,6 +35,7 @@ from matplotlib.patches import Patch  # noqa: E402
 from daq.core import follow  # noqa: E402
 from daq.core.block import Block, Conclusion  # noqa: E402
 from daq.core.rules import ChannelRules, Role, Specimen, TestRules  # noqa: E402
+from daq.prove.score import block_of, limit_of  # noqa: E402
 from simulator import population  # noqa: E402
 from simulator.rig import Run, simulate  # noqa: E402
 
@@ -100,17 +101,23 @@ def rig(seed: int, index: int) -> tuple[str, Block, TestRules, Known, Told]:
     """Simulate one rig and listen to it."""
     run: Run = simulate(population.draw(seed, index))
     rules, truth = rules_of(run), run.truth
-    block = block_of(run, rules)
+    zero = {c.side or "A": c.zero + run.spec.loading_strain for c in run.spec.transducers}
+    block = block_of(run)
+    block = replace(
+        block,
+        strain_a=block.strain_a - zero.get("A", 0.0),
+        strain_b=block.strain_b - zero.get("B", 0.0),
+    )
     n = int(np.searchsorted(block.t_s, truth.end_h * 3600.0, side="right"))
     first = truth.first_rise_h if truth.rises else None
+    best = limit_of(run) if truth.rises else None
+    if best is not None and first is not None and best < first:
+        best = None  # a bound met within the incubation says nothing about tertiary creep
     known = Known(
         truth.t_h, truth.strain, truth.rate_per_h, truth.minimum_h, truth.minimum_rate_per_h, first,
-        truth.offset_0p2_h, limit_of(run) if truth.rises else None,
+        truth.offset_0p2_h, best,
         steps_h=tuple(e.at_h for e in truth.events if e.kind in ("slip", "rezero")),
     )  # fmt: skip
-    zero = {c.side or "A": c.zero + run.spec.loading_strain for c in run.spec.transducers}
-    block.strain_a[:] -= zero.get("A", 0.0)
-    block.strain_b[:] -= zero.get("B", 0.0)
     told = listen(block, rules, n, "ended" if truth.rupture_h is None else "ruptured")
     expected = (
         "no life told" if rules.expected_rupture_h is None else f"told {rules.expected_rupture_h:.0f} h"
@@ -242,7 +249,8 @@ def _rate(ax: Axes, known: Known, told: Told) -> None:
         ax.plot([known.least_h], [100 * known.least_rate], "o", mfc="none", mec=DARK, ms=9, mew=1.5)
     least = [c.fields for c in told.said if c.kind == "minimum_rate"]
     tertiary = [c.fields for c in told.said if c.key == "tertiary"]
-    for m, mark in ((least[0], "D"), (least[-1], "s")) if least else ():
+    marks = [(m, "s") for m in least[-1:]] + [(m, "D") for m in least[:1] if tertiary]
+    for m, mark in marks:
         value = 100 * m["rate_per_h"]
         down, up = value - 100 * max(m["low_per_h"], 1e-12), 100 * m["high_per_h"] - value
         ax.errorbar(
@@ -299,11 +307,14 @@ def _legend(known: Known, told: Told) -> list[Line2D | Patch]:
         Line2D([], [], color="#7d7d7d", label="rate now, as told then"),
         Patch(color="#c8c8c8", label="its 90 % interval"),
         Line2D([], [], ls="", marker="o", mfc="none", mec=DARK, label=f"least rate {by}"),
-        Line2D([], [], ls="", marker="D", color=DARK, label="least rate at detection"),
-        Line2D([], [], ls="", marker="s", color=DARK, label="least rate at the end"),
-        Line2D([], [], color=DARK, lw=2.5, label="onset, 90 % interval"),
-        Line2D([], [], color=WARM, lw=2, label="tertiary said"),
+        Line2D([], [], ls="", marker="s", color=DARK, label="least rate, told at the end"),
     ]
+    if any(c.key == "tertiary" for c in told.said):
+        out += [
+            Line2D([], [], ls="", marker="D", color=DARK, label="least rate, told at detection"),
+            Line2D([], [], color=DARK, lw=2.5, label="onset, 90 % interval"),
+            Line2D([], [], color=WARM, lw=2, label="tertiary said"),
+        ]
     names = {FIRST: "first rise", OFFSET: "0.2 % offset", BEST: "best possible detection"}
     for when, style in _truths(known):
         out.append(Line2D([], [], color=DARK, ls=style, label=f"{names[style]} {by}, {when:.4g} h"))
