@@ -47,6 +47,13 @@ def count(text: str) -> int:
     return int(text[:18])
 
 
+def whole(text: str) -> int:
+    """Return a whole number given on the command line."""
+    if not text.isascii() or not text.isdigit():
+        raise argparse.ArgumentTypeError(f"got {text!r}, wanted a whole number")
+    return int(text[:18])
+
+
 def parser() -> argparse.ArgumentParser:
     """Return the parser of all commands."""
     plain = argparse.RawDescriptionHelpFormatter
@@ -127,6 +134,32 @@ def parser() -> argparse.ArgumentParser:
     p.add_argument(
         "--cut", type=int, metavar="SEED", help="cut the input into blocks at random: nothing may change"
     )
+
+    p = add(
+        "prove",
+        "see on simulated rigs like a frame how detection would do, and choose the level of evidence",
+        "examples:\n  upturn prove LAB.yaml --frame H1 --rigs 300 --seed 1 --out proof-h1\n"
+        "  upturn prove LAB.yaml --frame H1 --rigs 300 --seed 1 --out proof-h1 --like H1.csv\n\n"
+        "Writes rows.jsonl, table.json and evidence.png to --out. The same command goes on where it was\n"
+        "stopped. The key false_share of the frame sets the level. Simulated rigs; advises only.\n",
+    )
+    p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the lab file")
+    p.add_argument("--frame", required=True, metavar="NAME", help="the frame, or FRAME/POSITION of a string")
+    p.add_argument("--rigs", type=count, default=300, metavar="N", help="how many rigs (default 300)")
+    p.add_argument("--seed", type=whole, default=1, metavar="S", help="which rigs (default 1)")
+    p.add_argument("--out", type=Path, metavar="DIR", help="folder to keep rows, table and plot in")
+    p.add_argument(
+        "--like", type=Path, metavar="FILE.csv", help="a recording of this frame to take the noise from"
+    )
+    p.add_argument(
+        "--curve", action="append", metavar="KIND", help="only curves of this family (again for more)"
+    )
+    p.add_argument(
+        "--scans", type=count, default=6000, metavar="N", help="thin rigs with more scans (default 6000)"
+    )
+    workers = p.add_mutually_exclusive_group()
+    workers.add_argument("--workers", type=count, metavar="N", help="processes (default: one a core)")
+    workers.add_argument("--cluster", metavar="ADDRESS", help="scheduler of a dask cluster: tcp://HOST:PORT")
 
     p = add("export", "write the raw record of a frame, or its findings, as plain files")
     p.add_argument(

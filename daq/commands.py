@@ -196,6 +196,13 @@ def export_(args: Namespace) -> int:
     return OK
 
 
+def prove(args: Namespace) -> int:
+    """Run a campaign of simulated rigs like a frame."""
+    from daq.prove.command import prove
+
+    return prove(args)
+
+
 def listen(args: Namespace) -> int:
     """Print what arrives at the broker."""
     from daq import settings
@@ -280,4 +287,5 @@ RUN: Final[dict[str, Callable[[Namespace], int]]] = {
     "replay": replay,
     "export": export_,
     "listen": listen,
+    "prove": prove,
 }

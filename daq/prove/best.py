@@ -67,8 +67,11 @@ def stretch(run: Run) -> tuple[float, float]:
     return float(low), float(high)
 
 
-def least_rate_error(run: Run, equivalent_h: FloatArray) -> float | None:
-    """Return the best possible standard error [1/h] of the least rate.
+def least_rate_error(run: Run, equivalent_h: FloatArray) -> tuple[float, float] | None:
+    """Return the best possible standard error [1/h] of the least rate, and what bending adds to the rate.
+
+    The second is the mean rate over the stretch less the least one: up to 1 % of it by the stretch's making.
+    Where noise is low it is the greater part of such a line's error.
 
     Args:
         equivalent_h: Equivalent time [h] of every scan that has a strain, (n,), not falling.
@@ -76,7 +79,10 @@ def least_rate_error(run: Run, equivalent_h: FloatArray) -> float | None:
     low, high = stretch(run)
     inside = equivalent_h[(equivalent_h >= low) & (equivalent_h <= high)]
     per_s = slope_error(inside * 3600.0, limit_noise(run))
-    return None if per_s is None else per_s * 3600.0
+    if per_s is None:
+        return None
+    rise = np.diff(run.spec.creep.envelope.strain(inside[[0, -1]]))
+    return per_s * 3600.0, float(rise[0] / (inside[-1] - inside[0])) - run.truth.minimum_rate_per_h
 
 
 def rate_as_indicated(run: Run) -> float:

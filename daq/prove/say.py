@@ -12,8 +12,8 @@ def lines(figures: Mapping[str, Any], own_share: float | None = None) -> list[st
     must, offset = figures["must_detect"], figures["after_offset"]
     out = [
         f"{'false detections':20}{_share(figures['false'], 'rigs')}",
-        f"{'missed':20}{figures['missed']} of {must} that turned, broke and were watched;"
-        f" {offset} only after the 0.2 % offset",
+        f"{'missed / late':20}{figures['missed']} / {offset} of {must} that broke"
+        " (late: after the 0.2 % offset)",
         f"{'delay':20}{'median':>10}{'90 % within':>13}",
         _spread("  hours", figures["delay_h"], "{:.3g}"),
         _spread("  share of life", figures["delay_share_of_life"], "{:.1%}"),
@@ -21,6 +21,7 @@ def lines(figures: Mapping[str, Any], own_share: float | None = None) -> list[st
         _spread("  over best possible", figures["delay_over_best"], "{:.2f}"),
         _spread("least rate: error", least["error"], "{:.2%}"),
         _spread("  over best s.e.", least["error_over_best_standard_error"], "{:.2f}"),
+        _spread("  and bending", least["error_over_best_rms"], "{:.2f}"),
         f"{'90 % intervals hold':20}least rate {_holds(least['interval_holds'])},"
         f" {_holds(least['interval_holds_allowing'])} with thermocouple error",
         f"{'':20}allowed for; onset {_holds(figures['onset_interval_holds'])}",

@@ -177,6 +177,7 @@ def _truth(run: Run, block: Block) -> dict[str, Any]:
     strained = np.isfinite(block.strain_a) | np.isfinite(block.strain_b)
     seen_s = block.t_s[strained]
     equivalent_h = np.maximum.accumulate(np.interp(np.sort(seen_s) / 3600.0, truth.t_h, truth.equivalent_h))
+    found = best.least_rate_error(run, equivalent_h)
     return {
         "kind": truth.kind,
         "rises": truth.rises,
@@ -189,7 +190,8 @@ def _truth(run: Run, block: Block) -> dict[str, Any]:
         "min_rate": truth.minimum_rate_per_h,
         "indicated_rate": best.rate_as_indicated(run),
         "run_rate": best.rate_as_run(run),
-        "best_error": best.least_rate_error(run, equivalent_h),
+        "best_error": found[0] if found else None,
+        "best_bias": found[1] if found else None,
         "limit_h": limit_of(run) if truth.rises else None,
         "ruptured": truth.rupture_h is not None,
         "seen_h": float(seen_s.max()) / 3600.0 if seen_s.size else 0.0,
@@ -225,10 +227,13 @@ def _heard(said: Sequence[Conclusion], block: Block, turned: float | None) -> di
 
 
 def limit_of(run: Run) -> float | None:
-    """Return the best possible detection time [h], None where the record is too short for any."""
+    """Return the best possible detection time [h], None where the record is too short for any.
+
+    Inverse primary: scans before the end of the incubation are left out, a rising rate there is none.
+    """
     truth = run.truth
     t_s = np.sort(run.columns["time_s"])
-    t_s = t_s[t_s <= truth.end_h * 3600.0]
+    t_s = t_s[(t_s >= truth.incubation_h * 3600.0) & (t_s <= truth.end_h * 3600.0)]
     equivalent_s = np.maximum.accumulate(np.interp(t_s / 3600.0, truth.t_h, truth.equivalent_h)) * 3600.0
     strain = run.spec.creep.envelope.strain(equivalent_s / 3600.0)
     at = limit.detectable_at(equivalent_s, strain, best.limit_noise(run), limit.level_for(UNIT_SHARE))

@@ -84,9 +84,11 @@ def _least_rate(rows: Sequence[Row]) -> dict[str, Any]:
 
     The truth is at the set point, so the rate is the corrected one where there is one, its interval moved
     in proportion. ``allowing``: against what the specimen does where its thermocouples show the set point
-    (where the rate was corrected), or as the furnace ran (where it was not).
+    (where the rate was corrected), or as the furnace ran (where it was not). Errors over the best possible
+    are against the same: each rig's error by its own best standard error (``best``), or by that together
+    with what bending adds.
     """
-    errors, over, held, allowing = [], [], [], []
+    errors, over, over_rms, held, allowing = [], [], [], [], []
     for r in rows:
         least = r["least"]
         known = least["corrected_rate_per_h"] or least["rate_per_h"]
@@ -98,9 +100,11 @@ def _least_rate(rows: Sequence[Row]) -> dict[str, Any]:
         allowing.append(low <= knowable <= high)
         if r["best_error"]:
             over.append(abs(known - knowable) / r["best_error"])
+            over_rms.append(abs(known - knowable) / math.hypot(r["best_error"], r["best_bias"]))
     return {
         "error": _spread(errors),
         "error_over_best_standard_error": _spread(over),
+        "error_over_best_rms": _spread(over_rms),
         "interval_holds": _holds(held),
         "interval_holds_allowing": _holds(allowing),
     }

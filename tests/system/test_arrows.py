@@ -51,6 +51,7 @@ EDGES: dict[str, set[str]] = {
         "daq.settings",
         "daq.recording",
         "daq.store",
+        "daq.exits",
         "simulator",
     },
     "simulator": {"simulator"},

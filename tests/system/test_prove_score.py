@@ -113,7 +113,7 @@ def test_levels_that_share_work_conclude_what_runs_from_the_start_conclude() -> 
     detector."""
     shares = (0.2, 0.005, 1e-6)
     moved = 0
-    for index in (3, 7):
+    for index in (7, 17):
         run = simulate(draw(FRAME, 3, index))
         row = score.score(run, RULES, index, shares)
         for level in row["levels"]:
@@ -150,7 +150,8 @@ def _row(index: int, **more: object) -> dict[str, object]:
         "index": index, "turns": True, "ruptured": True, "rises": True, "seen_h": 100.0, "min_h": 40.0,
         "first_h": None, "offset_h": 90.0, "end_h": 100.0, "limit_h": 60.0, "true_h": 70.0, "false": False,
         "onset": [35.0, 45.0], "levels": [], "min_rate": 1e-5, "indicated_rate": 1.01e-5, "run_rate": 1e-5,
-        "best_error": 1e-7, "least": {"rate_per_h": 2e-5, "low_per_h": 1.98e-5, "high_per_h": 2.06e-5,
+        "best_error": 1e-7, "best_bias": 0.0,
+        "least": {"rate_per_h": 2e-5, "low_per_h": 1.98e-5, "high_per_h": 2.06e-5,
                                       "corrected_rate_per_h": 1.01e-5},
     }  # fmt: skip
     return {**base, **more}
