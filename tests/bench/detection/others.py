@@ -445,12 +445,13 @@ def adwin_alarms(z: Array, delta: float) -> Flags:
 
     one = ADWIN(delta=delta, clock=1)
     out = np.zeros(z.size, dtype=bool)
-    before = 0.0
+    total, width = 0.0, 0  # of its window: asking it at every value would take most of the time
     for i, value in enumerate(z.tolist()):
         one.update(value)
-        now = one.estimation
-        out[i] = one.drift_detected and now > before
-        before = now
+        total, width = total + value, width + 1
+        if one.drift_detected:
+            out[i] = one.estimation > total / width
+            total, width = 0.0, 0  # it begins anew with the next value
     return out
 
 

@@ -124,6 +124,7 @@ def test_exact_cusum_run_lengths_are_the_published_ones() -> None:
         vance, abs=0.0051
     )
     # values worked out before with another program, to their last digit
+    assert exact(CusumDesign(0.5, 4.0, head_start=2.0)) == pytest.approx(148.6956, abs=5e-5)
     assert exact(CusumDesign(0.5, 5.0)) == pytest.approx(465.4435, abs=5e-5)
     assert exact(CusumDesign(0.5, 5.0, two_sided=False)) == pytest.approx(930.8870, abs=5e-5)
 
