@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 import pytest
 from follow_helper import BARE, RULES, block_of, end, listen, stages
-from hypothesis import HealthCheck, Phase, given, seed, settings
+from hypothesis import HealthCheck, Phase, example, given, seed, settings
 from hypothesis import strategies as st
 
 from daq.codec import encode_state
@@ -25,7 +25,7 @@ from daq.core.rules import TestRules
 QUICK = settings(
     max_examples=6,
     deadline=None,
-    phases=[Phase.generate],
+    phases=[Phase.explicit, Phase.generate],
     suppress_health_check=list(HealthCheck),
     database=None,
 )
@@ -143,26 +143,51 @@ def disturbed(b: Block, what: str, place: float, size: float, width: float) -> B
     return dataclasses.replace(b, strain_a=left, strain_b=right)
 
 
-@pytest.mark.parametrize("what", ["spike", "gap", "slip of a side", "slip of both sides"])
-@seed(4)
-@settings(QUICK, max_examples=3)
-@given(
-    number=NUMBERS,
-    place=st.floats(0.02, 0.98),
-    decades=st.floats(0.0, 1.0),
-    sign=st.sampled_from([-1.0, 1.0]),
-    width=st.floats(0.01, 0.08),
-)
-def test_a_disturbance_moves_the_least_rate_by_less_than_its_own_interval(
-    what: str, number: int, place: float, decades: float, sign: float, width: float
-) -> None:
-    """Spikes of 10 to 100 standard deviations, slips of 30 to 3000 microstrain, gaps up to 8 % of the record,
-    anywhere: against half of the 90 % interval that is told with it."""
-    size = sign * (1e-4 * 10.0**decades if what == "spike" else 30e-6 * 100.0**decades)
+def shift(number: int, what: str, place: float, size: float, width: float = 0.0) -> float:
+    """Return by how much a disturbance moves the least rate, in halves of the narrower of the 90 % intervals
+    told with it and without it: one blown up by the disturbance would excuse anything."""
     found = rates(whole(disturbed(record(number), what, place, size, width)))[-1]
     before = rates(plain(number))[-1]
-    half = 0.5 * (found["high_per_h"] - found["low_per_h"])
-    assert abs(found["rate_per_h"] - before["rate_per_h"]) < half
+    half = 0.5 * min(m["high_per_h"] - m["low_per_h"] for m in (found, before))
+    return float(abs(found["rate_per_h"] - before["rate_per_h"]) / half)
+
+
+PLACES = st.floats(0.02, 0.98)
+NEAR = st.floats(0.22, 0.36)
+"""Where the least rate is, so that the disturbance lies in the very stretch that is fitted."""
+SIGNS = st.sampled_from([-1.0, 1.0])
+
+
+@seed(4)
+@settings(QUICK, max_examples=3)
+@example(number=0, place=0.3, size=1e-3, sign=1.0)  # left in, it would move the rate by eleven such halves
+@given(number=NUMBERS, place=PLACES | NEAR, size=st.floats(1e-4, 1e-3), sign=SIGNS)
+def test_a_spike_moves_the_least_rate_by_less_than_its_own_interval(
+    number: int, place: float, size: float, sign: float
+) -> None:
+    """Of 10 to 100 standard deviations, anywhere in the record and near the least rate."""
+    assert shift(number, "spike", place, sign * size) < 1.0
+
+
+@seed(5)
+@settings(QUICK, max_examples=4)
+@given(number=NUMBERS, place=PLACES | NEAR, width=st.floats(0.01, 0.08))
+def test_a_gap_moves_the_least_rate_by_less_than_its_own_interval(
+    number: int, place: float, width: float
+) -> None:
+    """Of up to 8 % of the record, the stretch of the least rate itself included."""
+    assert shift(number, "gap", place, 0.0, width) < 1.0
+
+
+@pytest.mark.parametrize("what", ["slip of a side", "slip of both sides"])
+@seed(6)
+@settings(QUICK, max_examples=3)
+@given(number=NUMBERS, place=PLACES | NEAR, decades=st.floats(0.0, 1.0), sign=SIGNS)
+def test_a_slip_moves_the_least_rate_by_less_than_its_own_interval(
+    what: str, number: int, place: float, decades: float, sign: float
+) -> None:
+    """Of 100 to 3000 microstrain, anywhere in the record and near the least rate."""
+    assert shift(number, what, place, sign * 1e-4 * 30.0**decades) < 1.0
 
 
 # --- segments after a stress change -----------------------------------------------------
@@ -196,7 +221,7 @@ def through(b: Block, cuts: Sequence[int] = (), n: int | None = None) -> tuple[b
     return encode_state(s), said
 
 
-@seed(5)
+@seed(7)
 @settings(QUICK, max_examples=2)
 @given(number=st.just(0), cuts=st.lists(st.integers(1, 599), max_size=12))
 def test_cuts_change_nothing_across_a_stress_change(number: int, cuts: list[int]) -> None:
