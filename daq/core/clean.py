@@ -27,6 +27,9 @@ CONFIRM: Final = 5
 """Scans needed from a suspected one on: a median of five outvotes two further spikes."""
 CONTEXT: Final = 24
 """Clean scans kept before the buffer."""
+RATE_ROOM: Final = 0.7
+"""Share by which creep may go faster or slower than over the last two dozen scans."""
+SLOPE_SDS: Final = 3.0
 ROOT_2: Final = math.sqrt(2.0)
 ROOT_1P5: Final = math.sqrt(1.5)
 
@@ -82,8 +85,50 @@ def median(v: FloatArray) -> float:
     return 0.5 * (float(ordered[half - 1]) + float(ordered[half]))
 
 
+class Jump(NamedTuple):
+    """Levels of a side before and after a row, the rate [1/h] taken out, and how far the levels may be off:
+    ``error`` by noise, ``rate_room`` [1/h] times the longest ``interval_h`` by creep. ``scans`` after it."""
+
+    before: float
+    after: float
+    slope: float
+    error: float
+    rate_room: float
+    interval_h: float
+    scans: int
+
+    @property
+    def size(self) -> float:
+        return self.after - self.before
+
+
+def jump_at(t: FloatArray, v: FloatArray, j: int, noise: float) -> Jump:
+    """Return the jump before row ``j`` (0 < j < n) of finite readings (n,)."""
+    before, after = slice(max(0, j - 8), j), slice(j, min(j + CONFIRM + 3, t.size))
+    # the slope of one side of the jump: across it, the jump itself would pass for creep
+    side = slice(max(0, j - CONTEXT), j) if j >= 8 else slice(j, t.size)
+    slope = slope_of(t[side], v[side])
+    k0, k1 = before.stop - before.start, after.stop - after.start
+    return Jump(
+        median(v[before] - slope * (t[before] - t[j])),
+        median(v[after] - slope * (t[after] - t[j])),
+        slope,
+        noise * math.sqrt(1.57 * (1 / k0 + 1 / k1)),
+        rate_room(t[side], slope, noise),
+        float(np.max(np.diff(t[before.start : after.stop]))),
+        k1,
+    )
+
+
+def noise_of(now: float, before: float) -> float:
+    """Return the noise of single scans to judge by: that of these scans, not far below the long-run one."""
+    if not math.isfinite(now):
+        return before
+    return now if math.isnan(before) else max(now, 0.7 * before)
+
+
 def judge(
-    t_h: FloatArray, v: FloatArray, context: int, noise_before: float, final: bool, jerky: bool = False
+    t_h: FloatArray, v: FloatArray, context: int, noise_before: float, final: bool, cleared: int = 0
 ) -> Judged:
     """Judge the rows from ``context`` on of one side.
 
@@ -93,7 +138,7 @@ def judge(
         context: How many leading rows are context, already judged.
         noise_before: Long-run noise of single scans; NaN in the beginning.
         final: No more rows will come: decide with what is there.
-        jerky: Creep has been seen to go in jumps: those in its direction are creep, not steps.
+        cleared: Rows before this one are not suspected: what jumped there is explained otherwise.
     """
     n = v.shape[0] - context
     spikes = np.zeros(n, dtype=bool)
@@ -105,50 +150,34 @@ def judge(
         fresh = max(int(np.count_nonzero(finite[:context])) - 1, 0)
     moves = vg[1:] - vg[:-1]
     now, least = _noise_of(vg, moves)
-    noise = noise_before
-    if math.isfinite(now):
-        noise = now if math.isnan(noise_before) else max(now, 0.7 * noise_before)
+    noise = noise_of(now, noise_before)
     if vg.size < 6 or not math.isfinite(noise):
         return Judged(spikes, None, 0.0, None, now, least)
     # nearly every leaf ends here: no scan differs from the one before it by more than may be
     slope = slope_of(tg, vg)
     dt = tg[fresh + 1 :] - tg[fresh:-1]
-    limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
+    limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg, slope, noise) * np.abs(dt)
     if not np.logical_or.reduce(np.abs(moves[fresh:] - slope * dt) > limit):
         return Judged(spikes, None, 0.0, None, now, least)
     good = np.flatnonzero(finite)
-    cleared = context
+    cleared += context
     for _ in range(16):
         tg, vg = t_h[good], v[good]
         slope = slope_of(tg, vg)
         dt = np.diff(tg)
-        limit = SUSPECT_SDS * ROOT_2 * noise + 0.7 * abs(slope) * np.abs(dt)
+        limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg, slope, noise) * np.abs(dt)
         odd = np.flatnonzero((np.abs(np.diff(vg) - slope * dt) > limit) & (good[1:] >= cleared))
         if odd.size == 0:
             break
         j = int(odd[0]) + 1
-        after = slice(j, min(j + CONFIRM + 3, good.size))
         if good.size - j < CONFIRM and not final:
             return Judged(spikes, None, 0.0, int(good[j]) - context, now, least)
-        before = slice(max(0, j - 8), j)
-        # the slope of one side of the jump: across it, the jump itself would pass for creep
-        slope = (
-            slope_of(tg[max(0, j - CONTEXT) : j], vg[max(0, j - CONTEXT) : j])
-            if j >= 8
-            else slope_of(tg[j:], vg[j:])
-        )
-        level0 = median(vg[before] - slope * (tg[before] - tg[j]))
-        level1 = median(vg[after] - slope * (tg[after] - tg[j]))
-        jump = level1 - level0
-        room = 0.7 * abs(slope) * float(np.max(np.diff(tg[before.start : after.stop])))
-        k0, k1 = before.stop - before.start, after.stop - after.start
-        sure = JUDGE_SDS * noise * np.sqrt(1.57 * (1 / k0 + 1 / k1)) + room
-        if k1 >= CONFIRM and abs(jump) > sure and abs(vg[j] - level1) <= abs(vg[j] - level0):
-            if jerky and jump > 0.0:
-                cleared = int(good[j]) + 1
-                continue
-            return Judged(spikes, int(good[j]) - context, jump, None, now, least)
-        if abs(vg[j] - level0) > JUDGE_SDS * noise + 0.7 * abs(slope) * float(dt[j - 1]):
+        jump = jump_at(tg, vg, j, noise)
+        sure = JUDGE_SDS * jump.error + jump.rate_room * jump.interval_h
+        stays = abs(vg[j] - jump.after) <= abs(vg[j] - jump.before)
+        if jump.scans >= CONFIRM and abs(jump.size) > sure and stays:
+            return Judged(spikes, int(good[j]) - context, jump.size, None, now, least)
+        if abs(vg[j] - jump.before) > JUDGE_SDS * noise + jump.rate_room * float(dt[j - 1]):
             spikes[good[j] - context] = True
             good = np.delete(good, j)
         else:
@@ -167,6 +196,22 @@ def slope_of(t: FloatArray, v: FloatArray) -> float:
         if not dt.size:
             return 0.0
     return median(dv / dt)
+
+
+def slope_error(t: FloatArray, noise: float) -> float:
+    """Return the standard error [1/h] of :func:`slope_of` for single scans of s.d. ``noise``.
+
+    Pairs a few seconds apart, in a burst of fast records, say nothing about the rate over the next half hour.
+    """
+    h = t.size // 2
+    lag = min(float(t[h] - t[0]), float(t[-1] - t[-1 - h])) if h else 0.0
+    return 1.25 * ROOT_2 * noise / (math.sqrt(t.size - h) * lag) if lag > 0.0 else math.inf
+
+
+def rate_room(t: FloatArray, slope: float, noise: float) -> float:
+    """Return by how much [1/h] the rate may differ from ``slope`` of scans at ``t``: other creep, and the
+    error of ``slope``."""
+    return RATE_ROOM * abs(slope) + SLOPE_SDS * min(slope_error(t, noise), 1e3)
 
 
 def looks_like_creep(sizes: tuple[float, ...], both_there: bool) -> bool:

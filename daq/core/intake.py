@@ -14,7 +14,7 @@ from typing import Final, NamedTuple
 import numpy as np
 
 from daq.codec import state
-from daq.core import clean, ladder, stuck
+from daq.core import clean, jumps, ladder, stuck
 from daq.core.block import Block
 from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, TestRules
 from daq.records import FloatArray
@@ -41,14 +41,14 @@ def _no_rows() -> FloatArray:
 
 
 def _no_context() -> FloatArray:
-    return np.zeros((0, 3))
+    return np.zeros((0, 4))
 
 
 @state
 @dataclass(frozen=True, slots=True)
 class IntakeState:
     """What the intake carries. ``rows`` is the open leaf, raw; ``context`` clean scans before it (t_h, a,
-    b)."""
+    b, specimen temperature)."""
 
     rows: FloatArray = field(default_factory=_no_rows)
     context: FloatArray = field(default_factory=_no_context)
@@ -72,6 +72,7 @@ class IntakeState:
     segment: int = 0
     jerks: tuple[tuple[int, float, float], ...] = ()
     jerky: bool = False
+    jerk: float = 0.0
     scan: int = -1
     tick: int = 0
 
@@ -131,11 +132,12 @@ def next_leaf(
         return s, at, None
     while end <= rows.shape[0]:
         part = rows[at:end]
-        judged = _judge(s, part, final)
+        view = _view(s, part, final)
+        judged, left_in = _judge(s, view, final)
         first_hold = min((j.hold_at for j in judged if j.hold_at is not None), default=None)
         first_step = min((j.step_at for j in judged if j.step_at is not None), default=None)
         if first_step == 0:
-            s2, step = _step(s, part, judged)
+            s2, step = _step(s, part, view, judged)
             if part[-1, SCAN] > s2.scan:  # the step was not known before this scan, however short the leaf
                 s2 = replace(s2, scan=int(part[-1, SCAN]), tick=int(part[-1, TICK]))
             s2, used, leaf = next_leaf(s2, rules, rows, clock, at, final)
@@ -145,27 +147,84 @@ def next_leaf(
         stop = min(x for x in (first_hold, first_step, part.shape[0]) if x is not None)
         if stop > 0:
             # dated by the last scan that the decision needed; a held scan may lie beyond the leaf
-            s2, rung = _close(s, rules, part[:stop], clock[at : at + stop], judged, part[-1])
+            s2, rung = _close(s, rules, part[:stop], clock[at : at + stop], judged, left_in, part[-1])
             now_h = (float(clock[at + stop - 1]) - s.origin_s) / 3600.0
             return s2, at + stop, Leaf(rung, None, s2.scan, s2.tick, now_h)
         end += 1
     return s, at, None
 
 
-def _judge(s: IntakeState, part: FloatArray, final: bool) -> tuple[clean.Judged, clean.Judged]:
-    t = np.concatenate((s.context[:, 0], (part[:, T_S] - s.origin_s) / 3600.0))
-    return _judge_side(s, t, part[:, A], 0, final), _judge_side(s, t, part[:, B], 1, final)
+class _View(NamedTuple):
+    """Context and the rows of a leaf to be, side by side: k rows of context, stamps [h], both sides and
+    specimen temperature, and what each side shows that only repeats itself."""
+
+    k: int
+    t: FloatArray
+    sides: tuple[FloatArray, FloatArray]
+    temp: FloatArray
+    still: tuple[stuck.Still | None, stuck.Still | None]
 
 
-def _judge_side(s: IntakeState, t: FloatArray, raw: FloatArray, side: int, final: bool) -> clean.Judged:
+def _view(s: IntakeState, part: FloatArray, final: bool) -> _View:
     k = s.context.shape[0]
-    v = np.concatenate((s.context[:, 1 + side], raw - s.offsets[side]))
-    noise = s.noise[side]
-    still = stuck.judge(t, v, k, noise, s.counts[side], s.stuck[side] - s.offsets[side], final)
+    t = np.concatenate((s.context[:, 0], (part[:, T_S] - s.origin_s) / 3600.0))
+    sides, still = [], []
+    for side in (0, 1):
+        v = np.concatenate((s.context[:, 1 + side], part[:, A + side] - s.offsets[side]))
+        was = s.stuck[side] - s.offsets[side]
+        same = stuck.judge(t, v, k, s.noise[side], s.counts[side], was, final)
+        if same is not None:
+            v[k:][same.mask] = np.nan
+        sides.append(v)
+        still.append(same)
+    temp = np.concatenate((s.context[:, 3], part[:, TEMP]))
+    return _View(k, t, (sides[0], sides[1]), temp, (still[0], still[1]))
+
+
+def _judge(
+    s: IntakeState, view: _View, final: bool
+) -> tuple[tuple[clean.Judged, clean.Judged], list[tuple[int, tuple[float, float]]]]:
+    """Judge both sides; return also the jumps that stay in the record because they are no slips: rows and
+    sizes. In ``view`` what lies before them is shifted by that, so that they bend no slope."""
+    cleared = 0
+    left_in: list[tuple[int, tuple[float, float]]] = []
+    while True:
+        a, b = (
+            clean.judge(view.t, v, view.k, n, final, cleared)
+            for v, n in zip(view.sides, s.noise, strict=True)
+        )
+        steps = [j.step_at for j in (a, b) if j.step_at is not None]
+        if not steps:
+            break
+        row = min(steps)
+        seen = _look(s, view, (a, b), row)
+        if not (jumps.by_heat(seen) or (s.jerky and jumps.by_creep(seen, s.jerk))):
+            break
+        cleared = max(x for x in steps if x <= row + 1) + 1
+        sizes = (
+            0.0 if math.isnan(seen.sizes[0]) else seen.sizes[0],
+            0.0 if math.isnan(seen.sizes[1]) else seen.sizes[1],
+        )
+        left_in.append((row, sizes))
+        for v, size in zip(view.sides, sizes, strict=True):
+            v[: view.k + row] += size
+    return (_with_still(a, view.still[0]), _with_still(b, view.still[1])), left_in
+
+
+def _look(s: IntakeState, view: _View, judged: tuple[clean.Judged, clean.Judged], row: int) -> jumps.Seen:
+    """Measure the jump before ``row`` of the leaf on both sides, spikes left out."""
+    sides = []
+    for side, j in zip(view.sides, judged, strict=True):
+        v = side.copy()
+        v[view.k :][j.spikes] = np.nan
+        sides.append(v)
+    noises = [clean.noise_of(j.noise, n) for j, n in zip(judged, s.noise, strict=True)]
+    return jumps.look(view.t, (sides[0], sides[1]), view.temp, view.k + row, (noises[0], noises[1]))
+
+
+def _with_still(judged: clean.Judged, still: stuck.Still | None) -> clean.Judged:
     if still is None:
-        return clean.judge(t, v, k, noise, final, s.jerky)
-    v[k:][still.mask] = np.nan
-    judged = clean.judge(t, v, k, noise, final, s.jerky)
+        return judged
     holds = [h for h in (judged.hold_at, still.hold_at) if h is not None]
     return judged._replace(
         spikes=judged.spikes | still.mask, stuck=still.mask, hold_at=min(holds) if holds else None
@@ -173,10 +232,11 @@ def _judge_side(s: IntakeState, t: FloatArray, raw: FloatArray, side: int, final
 
 
 def _step(
-    s: IntakeState, part: FloatArray, judged: tuple[clean.Judged, clean.Judged]
+    s: IntakeState, part: FloatArray, view: _View, judged: tuple[clean.Judged, clean.Judged]
 ) -> tuple[IntakeState, Step | None]:
     """Take the step before the first row of ``part`` out of what follows."""
-    sizes = [j.size if j.step_at is not None and j.step_at <= 1 else 0.0 for j in judged]
+    a, b = (j.size if j.step_at is not None and j.step_at <= 1 else 0.0 for j in judged)
+    sizes = jumps.slips(_look(s, view, judged, 0), (a, b))
     both = bool(np.isfinite(part[:, A]).any() and np.isfinite(part[:, B]).any())
     offsets = (s.offsets[0] + sizes[0], s.offsets[1] + sizes[1])
     sides = tuple(name for name, size in zip("AB", sizes, strict=True) if size != 0.0)
@@ -185,10 +245,13 @@ def _step(
         int(part[0, SCAN]), int(part[0, TICK]), float((part[0, T_S] - s.origin_s) / 3600.0),
         sides, tuple(x for x in sizes if x != 0.0), size, both,
     )  # fmt: skip
-    jerks = s.jerks
-    if not s.jerky and clean.looks_like_creep(step.sizes, both):
-        jerks = (*jerks, (s.segment + 1, sizes[0], sizes[1]))
-    return replace(s, offsets=offsets, segment=s.segment + 1, jerks=jerks), step
+    known = s.jerks
+    if clean.looks_like_creep(step.sizes, both):
+        # a habit has a size: what is far larger or smaller was something else
+        most, least = jumps.JERK_TIMES * max(sizes), max(sizes) / jumps.JERK_TIMES
+        known = tuple(k for k in known if least <= max(k[1:]) <= most)
+        known = (*known, (s.segment + 1, sizes[0], sizes[1]))
+    return replace(s, offsets=offsets, segment=s.segment + 1, jerks=known), step
 
 
 def give_back(s: IntakeState, rungs: FloatArray) -> tuple[IntakeState, FloatArray]:
@@ -196,11 +259,14 @@ def give_back(s: IntakeState, rungs: FloatArray) -> tuple[IntakeState, FloatArra
     rungs = rungs.copy()
     context = s.context.copy()
     offsets = list(s.offsets)
+    largest = s.jerk
     segments = rungs[:, ladder.SEGMENT].copy()
     for segment, size_a, size_b in s.jerks:
         sizes = [x for x in (size_a, size_b) if x != 0.0]
         later = segments >= segment
-        rungs[later, ladder.E] += sum(sizes) / len(sizes)
+        size = sum(sizes) / len(sizes)
+        largest = max(largest, size)
+        rungs[later, ladder.E] += size
         rungs[later, ladder.SEGMENT] -= 1.0
         offsets[0] -= size_a
         offsets[1] -= size_b
@@ -213,6 +279,7 @@ def give_back(s: IntakeState, rungs: FloatArray) -> tuple[IntakeState, FloatArra
         segment=s.segment - len(s.jerks),
         jerks=(),
         jerky=True,
+        jerk=largest,
     )
     return fed, rungs
 
@@ -223,6 +290,7 @@ def _close(
     part: FloatArray,
     clock: FloatArray,
     judged: tuple[clean.Judged, clean.Judged],
+    left_in: list[tuple[int, tuple[float, float]]],
     known_by: FloatArray,
 ) -> tuple[IntakeState, FloatArray | None]:
     """Reduce ``part`` to one rung and carry on; ``known_by`` is the last row that this decision needed.
@@ -317,9 +385,13 @@ def _close(
         r[ladder.S_TT], r[ladder.S_TE], r[ladder.S_EE] = (np.add.reduce(y) for y in (d * d, d * f, f * f))
         r[ladder.START], r[ladder.END] = np.minimum.reduce(g[0]), np.maximum.reduce(g[0])
         r[ladder.SEGMENT] = s.segment
-    fresh = np.empty((n, 3))
-    fresh[:, 0], fresh[:, 1], fresh[:, 2] = t, a, b
-    context = np.concatenate((s.context, fresh))[-clean.CONTEXT :]
+    fresh = np.empty((n, 4))
+    fresh[:, 0], fresh[:, 1], fresh[:, 2], fresh[:, 3] = t, a, b, part[:, TEMP]
+    context = np.concatenate((s.context, fresh))
+    for row, sizes in left_in:
+        if row < n:
+            context[: s.context.shape[0] + row, 1:3] += sizes
+    context = context[-clean.CONTEXT :]
     scan, tick = s.scan, s.tick
     if known_by[SCAN] > scan:
         scan, tick = int(known_by[SCAN]), int(known_by[TICK])
@@ -333,7 +405,7 @@ def _close(
             noise=(_faded(s.noise[0], judged[0].noise), _faded(s.noise[1], judged[1].noise)),
             half=half, absent=absent, stuck=stuck_at,
             counts=(_least(s.counts[0], judged[0].least), _least(s.counts[1], judged[1].least)),
-            segment=s.segment, jerks=s.jerks, jerky=s.jerky,
+            segment=s.segment, jerks=s.jerks, jerky=s.jerky, jerk=s.jerk,
             scan=scan, tick=tick,
         ),
         rung,

@@ -18,7 +18,7 @@ from typing import Final, NamedTuple
 
 import numpy as np
 
-from daq.core.clean import ROOT_2, median, slope_of
+from daq.core.clean import ROOT_2, SLOPE_SDS, median, slope_error, slope_of
 from daq.records import FloatArray
 
 CERTAIN: Final = math.log(1e-9)
@@ -101,9 +101,7 @@ def _chance(t_h: FloatArray, x: FloatArray, lo: int, noise: float, count: float)
     at times t whose mean moves at a rate r are alike by a factor exp(-r^2 S_tt / (2 noise^2)) less often.
     """
     t, run = t_h[: lo + 1], t_h[lo:]
-    slope, h = abs(slope_of(t, x[: lo + 1])), (lo + 1) // 2
-    error = 1.25 * ROOT_2 * noise / math.sqrt(h) / max(float(t[h] - t[0]), 1e-300)
-    rate = 0.5 * max(slope - 3.0 * error, 0.0)
+    rate = 0.5 * max(abs(slope_of(t, x[: lo + 1])) - SLOPE_SDS * slope_error(t, noise), 0.0)
     if noise < OVER_COUNT * count:
         sure = rate * float(run[-1] - run[0]) > SURE_COUNTS * count + SURE_SDS * noise
         return 0.0, CERTAIN if sure else 0.0
