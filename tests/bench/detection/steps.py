@@ -199,6 +199,8 @@ def main() -> int:
             for size, found, _ in r.slips:
                 if not found:
                     print(f"missed {r.index} {r.kind} {size:.1f}")
+            if abs(r.removed_share) > 0.01:
+                print(f"taken  {r.index} {r.kind} {100 * r.removed_share:+.1f} %, off {r.end_error:+.1f}")
             for error in r.stuck_errors:
                 print(f"stuck  {r.index} {r.kind} {error:.1f}")
     print(table(rigs))
