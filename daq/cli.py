@@ -155,7 +155,11 @@ def parser() -> argparse.ArgumentParser:
         "--curve", action="append", metavar="KIND", help="only curves of this family (again for more)"
     )
     p.add_argument(
-        "--scans", type=count, default=6000, metavar="N", help="thin rigs with more scans (default 6000)"
+        "--scans",
+        type=count,
+        default=6000,
+        metavar="N",
+        help="thin rigs with more scans (default 6000; below 500 thinning itself delays)",
     )
     workers = p.add_mutually_exclusive_group()
     workers.add_argument("--workers", type=count, metavar="N", help="processes (default: one a core)")

@@ -2,9 +2,10 @@
 
 Noise comes from a recording if one is named, else from the newest test in the journal that the lab file
 names, else from the general population. Both kinds of record go through the live engine, and what the
-follower found out for its own use is taken over: the scatter of single scans of each side, and the drift that
-the noise models make of the rest (weighted over all models that still matter; a side drifts sqrt(2) times as
-much as the mean of two). Furnace and room: standard deviation of the blocks of the record.
+follower found out for its own use is taken over: the scatter of scans about a line through each of its
+blocks, and the drift, weighted over all noise models that still matter. They are of the mean of the sides;
+one of two has sqrt(2) times as much. Furnace and room: middle deviation of the blocks, so that an excursion
+counts little. What a step of the furnace leaves behind counts as wander.
 """
 
 from __future__ import annotations
@@ -31,6 +32,8 @@ from simulator.spec import Told
 
 DEFAULT_STRESS_MPA: Final = 200.0
 MICRO: Final = 1e-6
+_NORMAL: Final = 1.4826
+"""Standard deviation over middle deviation of a normal law."""
 
 
 class ProveError(UpturnError):
@@ -163,12 +166,12 @@ def measured_of(s: FollowState) -> Measured | None:
     """Return the noise that the follower found; None where it has looked at too little to say."""
     if s.models.shape[0] == 0 or s.rungs.shape[0] < LEAST_RUNGS:
         return None
-    sides = [x for x in s.intake.noise if math.isfinite(x) and x > 0.0]
     memory_h, drift, white, weight = s.models.T
     weight = weight / weight.sum()
     both = math.sqrt(sum(math.isfinite(x) for x in s.intake.noise) or 1)
-    # coarse counts may leave no scatter between most scans; the noise models then still have some
-    white_sd = float(np.mean(sides)) if sides else both * math.sqrt(float(weight @ white))
+    # not the scatter between neighbours that cleaning uses: on a steep curve that is creep
+    white_sd = ladder.white_sd(s.rungs)
+    white_sd = both * (white_sd if math.isfinite(white_sd) else math.sqrt(float(weight @ white)))
     drift_sd = math.sqrt(float(weight @ drift)) * both
     heavy = weight * drift
     memory = math.exp(float(heavy @ np.log(memory_h)) / float(heavy.sum())) if heavy.sum() > 0.0 else 1.0
@@ -182,12 +185,22 @@ def measured_of(s: FollowState) -> Measured | None:
 
 
 def _sd(x: FloatArray, counts: FloatArray) -> float | None:
-    """Return the standard deviation of block means, None where the channel is not there or never moved."""
+    """Return the standard deviation that the middle deviation of block means stands for under a normal law.
+
+    None where the channel is not there or did not move.
+    """
     if not np.isfinite(x).all():
         return None
-    mean = float(counts @ x) / float(counts.sum())
-    sd = math.sqrt(float(counts @ (x - mean) ** 2) / float(counts.sum()))
+    off = np.abs(x - _middle(x, counts))
+    sd = _NORMAL * _middle(off, counts)
     return sd if sd > 0.0 else None
+
+
+def _middle(x: FloatArray, counts: FloatArray) -> float:
+    """Return the weighted median."""
+    order = np.argsort(x, kind="stable")
+    reached = np.cumsum(counts[order])
+    return float(x[order][int(np.searchsorted(reached, 0.5 * reached[-1]))])
 
 
 def describe(m: Measured) -> str:

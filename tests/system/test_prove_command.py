@@ -138,7 +138,7 @@ def test_without_any_record_the_noise_is_the_populations_and_the_output_says_so(
 
 
 def test_the_noise_of_a_recording_is_measured_near_the_truth(lab: Path, tmp_path: Path) -> None:
-    """Scatter within a tenth; drift, which what is creep and what is temperature take a part of, within three."""
+    """Scatter within a tenth; drift, part of which is taken for creep or temperature, within three."""
     from dataclasses import replace
 
     quiet = Alike(2, 1, 980.0, 5.0, Told(330e3, 500.0), kinds=("to_steady",), every_s=1500.0, most_scans=2000)
