@@ -77,7 +77,8 @@ def write(folder: Path, told: Mapping[str, Any], rows: Rows) -> list[Path]:
         written.append(folder / name)
     if plot.available() and told["figures"]["levels"]:
         with _whole(folder / PLOT) as part:
-            title = f"{told['test']}: {told['figures']['rigs']} simulated rigs alike, seed {told['seed']}"
+            rigs = f"{told['figures']['rigs']} simulated rigs alike, seed {told['seed']}"
+            title = f"{told['test']}: {rigs} (advises only)"
             plot.draw(told["figures"], title, told["false_share"], part)
         written.append(folder / PLOT)
     return written

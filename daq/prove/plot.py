@@ -13,6 +13,8 @@ from typing import Any, Final
 MEDIAN_COLOUR: Final = "#1f5f8b"
 HIGH_COLOUR: Final = "#c06014"
 """A blue and an orange that stay apart for every kind of colour vision, and in grey."""
+NEAR: Final = 0.012
+"""Levels closer than this share of the axis share a mark: their labels would lie over each other."""
 
 
 def available() -> bool:
@@ -34,37 +36,49 @@ def draw(figures: Mapping[str, Any], title: str, own_share: float, path: Path) -
     canvas_of(figure)
     axes = figure.add_subplot()
     axes.set_yscale("log")
-    for key, colour, marker, name in (
-        ("median", MEDIAN_COLOUR, "o", "median"),
-        ("high_90", HIGH_COLOUR, "s", "90 % of rigs within"),
+    told = [x["delay_over_best"][k] for x in figures["levels"] for k in ("median", "high_90")]
+    near = NEAR * (max((d for d in told if d is not None), default=1.0) - 0.95)
+    for key, colour, marker, name, bottom in (
+        ("median", MEDIAN_COLOUR, "o", "median", floor),
+        ("high_90", HIGH_COLOUR, "s", "90 % of rigs within", 0.75 * floor),
     ):
-        _curve(axes, figures["levels"], key, colour, marker, floor, own_share)
+        _curve(axes, figures["levels"], key, colour, marker, bottom, own_share, near)
         axes.plot([], [], marker, color=colour, label=name)
     axes.axvline(1.0, color="0.5", lw=0.8, ls="--")
-    axes.set_ylim(bottom=0.7 * floor)
+    axes.set_ylim(bottom=0.6 * floor)
     axes.set_xlim(left=min(0.95, axes.get_xlim()[0]))
     axes.margins(x=0.08)
     axes.set_xlabel("delay over the best possible one of a method false in 1 of 200 (dashed: the best)")
     axes.set_ylabel("tests with a false tertiary detection [%], 95 % exact")
     axes.set_title(title, fontsize=10)
     axes.yaxis.set_major_locator(ticker.LogLocator(subs=(1.0, 2.0, 5.0)))
-    axes.yaxis.set_major_formatter(lambda v, _: f"{v:g}")
+    axes.yaxis.set_major_formatter(lambda v, _: f"{v:g}" if v > floor else "")
     axes.yaxis.set_minor_formatter(ticker.NullFormatter())
     axes.grid(True, which="major", color="0.92")
-    heading = "numbers: false_share in the lab file\nlarge: in force; hollow: no rig false"
+    axes.annotate("0", (0.0, floor), xycoords=("axes fraction", "data"), xytext=(-14, -3),
+                  textcoords="offset points")  # fmt: skip
+    heading = "numbers: false_share in the lab file\nlarge: in force; hollow, at the bottom: none false"
     axes.legend(title=heading, fontsize=9, title_fontsize=9, loc="upper right", framealpha=1.0)
     figure.savefig(path)
 
 
 def _curve(
-    axes: Any, each: Sequence[Mapping[str, Any]], key: str, colour: str, marker: str, floor: float, own: float
+    axes: Any,
+    each: Sequence[Mapping[str, Any]],
+    key: str,
+    colour: str,
+    marker: str,
+    floor: float,
+    own: float,
+    near: float,
 ) -> None:
-    """One curve: levels at the same place share a mark and a label."""
+    """One curve: levels at nearly the same place share a mark and a label."""
     places: dict[tuple[float, float], list[Mapping[str, Any]]] = {}
     for x in each:
-        delay = x["delay_over_best"][key]
+        delay, y = x["delay_over_best"][key], max(100.0 * x["false"]["share"], floor)
         if delay is not None:
-            places.setdefault((delay, max(100.0 * x["false"]["share"], floor)), []).append(x)
+            place = next(((d, h) for d, h in places if h == y and abs(d - delay) < near), (delay, y))
+            places.setdefault(place, []).append(x)
     axes.plot([d for d, _ in places], [y for _, y in places], "-", color=colour, lw=0.8, zorder=2)
     for (delay, y), levels in places.items():
         f = levels[0]["false"]
