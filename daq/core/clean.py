@@ -154,18 +154,20 @@ def judge(
     if vg.size < 6 or not math.isfinite(noise):
         return Judged(spikes, None, 0.0, None, now, least)
     # nearly every leaf ends here: no scan differs from the one before it by more than may be
-    slope = slope_of(tg, vg)
+    # the rate of the context where there is enough of it: a jump over a gap must not pass for its own rate
+    known = fresh + 1 if fresh + 1 >= CONTEXT // 2 else tg.size
+    slope = slope_of(tg[:known], vg[:known])
     dt = tg[fresh + 1 :] - tg[fresh:-1]
-    limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg, slope, noise) * np.abs(dt)
+    limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg[:known], slope, noise) * np.abs(dt)
     if not np.logical_or.reduce(np.abs(moves[fresh:] - slope * dt) > limit):
         return Judged(spikes, None, 0.0, None, now, least)
     good = np.flatnonzero(finite)
     cleared += context
     for _ in range(16):
         tg, vg = t_h[good], v[good]
-        slope = slope_of(tg, vg)
+        slope = slope_of(tg[:known], vg[:known])
         dt = np.diff(tg)
-        limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg, slope, noise) * np.abs(dt)
+        limit = SUSPECT_SDS * ROOT_2 * noise + rate_room(tg[:known], slope, noise) * np.abs(dt)
         odd = np.flatnonzero((np.abs(np.diff(vg) - slope * dt) > limit) & (good[1:] >= cleared))
         if odd.size == 0:
             break

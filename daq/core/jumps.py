@@ -26,16 +26,20 @@ UNLIKE: Final = 0.35
 """Share by which sides of a bending specimen may differ."""
 JERK_TIMES: Final = 4.0
 """How much larger than the largest jerk seen another one may be."""
+GAP_SHARE: Final = 0.5
+"""Interval, as a share of the stretch before that is known, over which jerks are not counted."""
 LEAST_SCANS: Final = 3
 
 
 class Seen(NamedTuple):
     """Jump of each side, NaN where it is not there, their standard errors, and the apparent strain that the
-    change of temperature may have made, 0 where it did not change."""
+    change of temperature may have made, 0 where it did not change. ``over_gap``: between scans so far apart
+    that creep may have gone through many jerks."""
 
     sizes: tuple[float, float]
     errors: tuple[float, float]
     heat: float
+    over_gap: bool = False
 
     @property
     def there(self) -> list[float]:
@@ -61,7 +65,9 @@ def look(
         jump = clean.jump_at(t_h[at], v[at], j, noise)
         sizes.append(jump.size)
         errors.append(jump.error)
-    return Seen((sizes[0], sizes[1]), (errors[0], errors[1]), _heat(temp_c, row))
+    known = t_h[row - 1] - t_h[max(0, row - clean.CONTEXT)] if row > 0 else 0.0
+    over_gap = row > 0 and bool(t_h[row] - t_h[row - 1] > GAP_SHARE * known)
+    return Seen((sizes[0], sizes[1]), (errors[0], errors[1]), _heat(temp_c, row), over_gap)
 
 
 def _heat(temp_c: FloatArray, row: int) -> float:
@@ -104,7 +110,7 @@ def by_creep(s: Seen, largest: float) -> bool:
         bool(s.there)
         and alike(s)
         and min(s.there) > 0.0
-        and sum(s.there) <= JERK_TIMES * largest * len(s.there)
+        and (s.over_gap or sum(s.there) <= JERK_TIMES * largest * len(s.there))
     )
 
 

@@ -123,3 +123,21 @@ def test_a_side_too_faint_to_be_seen_jumps_with_the_other_if_it_moved_alike() ->
     assert jumps.slips(seen, (0.0, 4e-5)) == (5e-5, 4e-5)
     assert jumps.slips(jumps.Seen((5e-5, 1e-6), (3e-6, 3e-6), 0.0), (5e-5, 0.0)) == (5e-5, 0.0)
     assert jumps.slips(jumps.Seen((5e-5, math.nan), (3e-6, math.nan), 0.0), (5e-5, 0.0)) == (5e-5, 0.0)
+
+
+def test_a_rezero_in_a_gap_does_not_pass_for_the_rate_of_the_gap() -> None:
+    """Pairs of scans on both sides of the gap all show one rate, that of the jump."""
+    rng = np.random.default_rng(7)
+    t = 80.0 + 0.02 * np.arange(1000)
+    t = t + 10.0 * (t > 90.0)
+    a = 1e-4 * t + rng.normal(0.0, SD, t.size)
+    a -= 4.5e-3 * (t > 90.0)
+    _, steps = run(t, a)
+    assert [round(c.fields["size"], 4) for c in steps] == [-0.0045]
+
+
+def test_jerky_creep_goes_on_over_a_gap() -> None:
+    """Between two scans far apart there is room for more than one jerk."""
+    t, strains = jerky(2)
+    there = (t < 305.0) | (t > 395.0)
+    assert len(run(t[there], *[x[there] for x in strains])[1]) == 3
