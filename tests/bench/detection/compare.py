@@ -40,6 +40,8 @@ PARTS = (
     (STRICT, "1 false in 200, as recorded", ("as recorded",)),
 )
 """Parts of the table: share of false detections to tune to, its name, inputs to choose from."""
+BY_HAND = ("slope, ratio alone (by hand)", "slope over the last stretch", "margin", 0.0)
+"""A line of its own for the settings of a detector that have one value: the rule as people use it."""
 MISSES_WITHIN = 0.02
 USEFUL = 0.5
 """Share of turning rigs that a detector must find to be of any use."""
@@ -252,9 +254,11 @@ def table(our_rows: list[Row], tuning_rows: list[Row], rows: list[Row]) -> str:
     answers = {m: judged(truths, alarms_of(rows, m)) for m in methods}
     for share, words, inputs in PARTS:
         out.append(f"tuned to {words} on {len(tuning_rows)} other rigs:")
-        for m in methods:
-            name = "  " + m + (" *" if m in others.HINDSIGHT else "")
-            wanted = np.array([x["input"] in inputs for x in others.SETTINGS[m]])
+        for title, m, only in [(BY_HAND[0], BY_HAND[1], BY_HAND[2:]), *((m, m, None) for m in methods)]:
+            name = "  " + title + (" *" if m in others.HINDSIGHT else "")
+            wanted = np.array(
+                [x["input"] in inputs and (only is None or x[only[0]] == only[1]) for x in others.SETTINGS[m]]
+            )
             i = best_setting(trained[m], share, wanted)
             if i is None:
                 least = int(trained[m].false[wanted].min())
@@ -266,7 +270,7 @@ def table(our_rows: list[Row], tuning_rows: list[Row], rows: list[Row]) -> str:
             useful = t.missed + t.false <= (1.0 - USEFUL) * t.turning
             told = ", ".join(f"{k} {_plain(v)}" for k, v in others.SETTINGS[m][i].items())
             notes.append(
-                f"{m}, {words}: {told}; on the tuning rigs {t.false} false, {t.missed} missed, "
+                f"{title}, {words}: {told}; on the tuning rigs {t.false} false, {t.missed} missed, "
                 f"delay {t.median:.2f} / {t.ninetieth:.2f}"
                 + ("" if useful else f"; misses more than {100 * (1 - USEFUL):.0f} %: of no use there")
             )

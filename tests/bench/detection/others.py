@@ -59,19 +59,19 @@ SCATTER = 30
 RISES = (0.0, 0.1)
 """Share by which the rate must exceed the least so far."""
 
-WINDOWS = (0.05, 0.1, 0.2, 0.3)
+WINDOWS = (0.05, 0.1, 0.2, 0.3, 0.45)
 RATIOS = (1.0, 1.03, 1.05, 1.08, 1.1, 1.15, 1.2, 1.3, 1.4, 1.6, 1.8, 2.0, 2.5, 3.0, 4.0, 6.0, 10.0)
-MARGINS = (0.0, 3.0, 6.0, 12.0)
+MARGINS = (0.0, 3.0, 6.0, 12.0, 24.0)
 STOOD = (0.0, 0.15, 0.3)
 PERSIST = (0.0, 0.05, 0.1, 0.2)
 STOOD_BLOCKS = (0.0, 0.2)
-CUSUM_K = (0.25, 0.5, 1.0, 2.0)
-CUSUM_H = tuple(float(f"{3.0 * 1.35**i:.2g}") for i in range(20))
+CUSUM_K = (0.25, 0.5, 1.0, 2.0, 4.0)
+CUSUM_H = tuple(float(f"{1.5 * 1.4**i:.2g}") for i in range(20))
 EWMA_WEIGHT = (0.05, 0.1, 0.2, 0.4)
-EWMA_LIMIT = tuple(float(f"{2.5 * 1.2**i:.2g}") for i in range(20))
+EWMA_LIMIT = tuple(float(f"{1.8 * 1.22**i:.2g}") for i in range(20))
 PH_DELTA = (0.1, 0.25, 0.5, 1.0)
 PH_THRESHOLD = CUSUM_H
-ADWIN_DELTA = (0.3, 0.1, 0.03, 0.01, 2e-3, 1e-4, 1e-6, 1e-9, 1e-14)
+ADWIN_DELTA = (0.3, 0.1, 0.03, 0.01, 2e-3, 1e-4, 1e-6)
 ADWIN_SCALE = (0.1, 0.3, 1.0)
 """ADWIN's bound is for values of about unit range: standardised block rates times this."""
 KERNEL_BLOCKS = (50, 100, 200)

@@ -90,7 +90,7 @@ def test_charts_alarm_after_the_change_and_not_on_a_steady_rate(rule: Any, kind:
         hours = np.array(others._cusum(rates)).reshape(
             len(others.RISES), len(others.STOOD_BLOCKS), len(others.CUSUM_K), len(others.CUSUM_H)
         )
-        strict = hours[0, 0, others.CUSUM_K.index(1.0), 6]
+        strict = hours[0, 0, others.CUSUM_K.index(1.0), 8]
         assert 60.0 < strict < 95.0 if turns else np.isnan(strict)
 
 
