@@ -8,13 +8,14 @@ second part of the table, one in twenty), those whose misses are within 2 % of t
 these the one with the least median delay. What they are given: see ``others.py``. river and ruptures come
 with ``pip install '.[refs]'``; without one its detectors are left out with a notice.
 
-Answers are kept in DIR as JSON lines and a run that was stopped goes on where it was; ``--ours`` takes rows
-that campaign.py wrote with --out. Same seeds, same table, on any number of workers.
+Answers are kept in DIR as JSON lines and a run that was stopped goes on where it was, unless the program has
+changed since; ``--ours`` takes rows that campaign.py wrote with --out, whatever wrote them. Same seeds, same table, on any number of workers.
 """
 
 from __future__ import annotations
 
 import argparse
+import hashlib
 import json
 import os
 import sys
@@ -46,6 +47,7 @@ MISSES_WITHIN = 0.02
 USEFUL = 0.5
 """Share of turning rigs that a detector must find to be of any use."""
 Row = dict[str, Any]
+ROOT = Path(__file__).resolve().parents[3]
 
 
 def others_one(job: tuple[int, int]) -> Row:
@@ -113,6 +115,19 @@ def _spread(do: Callable[[Any], Row], todo: list[tuple[int, int]], workers: int)
         return
     with ProcessPoolExecutor(workers) as pool:
         yield from pool.map(do, todo, chunksize=4)
+
+
+def sources(*places: str) -> str:
+    """Return a few digits that change with any source line of these modules and folders of the project.
+
+    Answers are kept beside it, so that those of an earlier version of the program are never taken for new.
+    """
+    digest = hashlib.sha256()
+    for place in places:
+        path = ROOT / place
+        for file in sorted(path.rglob("*.py")) if path.is_dir() else [path]:
+            digest.update(file.read_bytes())
+    return digest.hexdigest()[:12]
 
 
 class Truths:
@@ -321,7 +336,8 @@ def main() -> int:
     told.out.mkdir(parents=True, exist_ok=True)
 
     def rows_of(seed: int, rigs: int) -> list[Row]:
-        stamp = json.dumps({"seed": seed, "settings": others.fingerprint()})
+        truth = sources("simulator", "daq/core/limit.py", "daq/prove")
+        stamp = json.dumps({"seed": seed, "settings": others.fingerprint(), "truth": truth})
         jobs = [(seed, i) for i in range(rigs)]
         return kept(told.out / f"others-{seed}.jsonl", stamp, jobs, others_one, told.workers)
 
@@ -330,7 +346,8 @@ def main() -> int:
         text = told.ours.read_text(encoding="utf-8").splitlines()
         our_rows = [r for r in map(json.loads, text) if r["index"] < told.rigs_ours]
     else:
-        stamp = json.dumps({"seed": told.seed})
+        code = sources("simulator", "daq/core", "daq/prove")
+        stamp = json.dumps({"seed": told.seed, "detector": code})
         jobs = [(told.seed, i) for i in range(told.rigs_ours)]
         our_rows = kept(told.out / f"ours-{told.seed}.jsonl", stamp, jobs, run_one, told.workers)
     text = f"seed {told.seed}, others tuned on seed {tuning_seed}\n" + table(our_rows, tuning, rows)

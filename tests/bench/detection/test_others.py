@@ -249,3 +249,16 @@ def test_a_library_that_is_not_there_is_named_and_its_detectors_left_out(
     assert "river is not installed, left out: Page-Hinkley (river), ADWIN (river)." in said
     assert "ruptures is not installed, left out: KernelCPD (ruptures), hindsight." in said
     assert said.count("CUSUM on block rates") == 2 * len(compare.PARTS)
+
+
+def test_kept_answers_know_the_program_that_gave_them(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A changed detector must not be judged by rows of the one before."""
+    (tmp_path / "core").mkdir()
+    (tmp_path / "core" / "a.py").write_text("x = 1")
+    monkeypatch.setattr(compare, "ROOT", tmp_path)
+    before = compare.sources("core")
+    assert compare.sources("core") == before == compare.sources("core/a.py")
+    (tmp_path / "core" / "a.py").write_text("x = 2")
+    assert compare.sources("core") != before
