@@ -9,7 +9,8 @@ these the one with the least median delay. What they are given: see ``others.py`
 with ``pip install '.[refs]'``; without one its detectors are left out with a notice.
 
 Answers are kept in DIR as JSON lines and a run that was stopped goes on where it was, unless the program has
-changed since; ``--ours`` takes rows that campaign.py wrote with --out, whatever wrote them. Same seeds, same table, on any number of workers.
+changed since; ``--ours`` takes rows that campaign.py wrote with --out, whatever wrote them. Same seeds, same
+table, on any number of workers.
 """
 
 from __future__ import annotations
@@ -336,7 +337,7 @@ def main() -> int:
     told.out.mkdir(parents=True, exist_ok=True)
 
     def rows_of(seed: int, rigs: int) -> list[Row]:
-        truth = sources("simulator", "daq/core/limit.py", "daq/prove")
+        truth = sources("simulator", "daq/core/limit.py", "daq/prove/score.py", "daq/prove/best.py")
         stamp = json.dumps({"seed": seed, "settings": others.fingerprint(), "truth": truth})
         jobs = [(seed, i) for i in range(rigs)]
         return kept(told.out / f"others-{seed}.jsonl", stamp, jobs, others_one, told.workers)
@@ -346,7 +347,7 @@ def main() -> int:
         text = told.ours.read_text(encoding="utf-8").splitlines()
         our_rows = [r for r in map(json.loads, text) if r["index"] < told.rigs_ours]
     else:
-        code = sources("simulator", "daq/core", "daq/prove")
+        code = sources("simulator", "daq/core", "daq/prove/score.py")
         stamp = json.dumps({"seed": told.seed, "detector": code})
         jobs = [(told.seed, i) for i in range(told.rigs_ours)]
         our_rows = kept(told.out / f"ours-{told.seed}.jsonl", stamp, jobs, run_one, told.workers)
