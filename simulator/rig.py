@@ -51,7 +51,8 @@ class Truth:
 
     The curve's events are those of the curve at the set point, dated in lab time through the equivalent
     time: a furnace wander is never an onset. ``rises``: the rate rises again after its least value, by 1 % or
-    more, inside the record. ``turns_tertiary``: by 5 % or more. A tertiary detection is false where
+    more, inside the record, or rose by 5 % over the least so far and fell lower still before the end (a peak
+    late in life). ``turns_tertiary``: by 5 % or more after its least value. A detection is false where
     ``rises`` is not so or it comes before ``first_rise_h`` (see ``onset.CurveEvents``); ``minimum_h`` is the
     later one of the two on the rare curves with several minima. Before ``incubation_h`` (zero but for inverse
     primary) a rising rate is incubation; the best possible delay is worked out on what comes after.
@@ -261,7 +262,8 @@ def _truth(spec: RigSpec, world: World, end_h: float, rupture_h: float | None) -
     final = float(spec.creep.envelope.rate(last))
     inside = world.t_h < end_h
     t_h = np.append(world.t_h[inside], end_h)
-    rises = found.rise_5_percent_h is not None or final > 1.01 * found.minimum_rate_per_h
+    over = found.first_rise_h is not None or found.rise_5_percent_h is not None
+    rises = over or final > 1.01 * found.minimum_rate_per_h
     first = found.first_rise_h if found.first_rise_h is not None else found.minimum_h
     return Truth(
         kind=spec.kind or spec.creep.family,
