@@ -12,8 +12,8 @@ is integrated over a grid (``core.noise``) in both. The evidence is the log of t
 integrated likelihoods (restricted likelihood, scale profiled), the onset averaged over its grid, so that
 it behaves as a likelihood ratio does: at most a share alpha of tests without a rise ever see it above
 log(1/alpha) (Ville 1939) where the model is right, and what the threshold must add because the model is
-fitted was found on simulated rigs. A step that nobody saw is a third explanation: evidence is counted only
-as far as a step at any one time would not do as well."""
+fitted was found on simulated rigs. A step that nobody saw is a third explanation, weighed as such: it is
+small, or it had been found (``core.clean``), it is rare, and it may have been at any time."""
 
 from __future__ import annotations
 
@@ -23,6 +23,7 @@ from typing import Final, NamedTuple
 import numpy as np
 
 from daq.core import ladder, noise
+from daq.core.rules import ZERO_C_IN_K
 from daq.records import FloatArray, IntArray
 
 FLOOR: Final = 0.2e-6
@@ -38,6 +39,24 @@ MODELS: Final = 8
 EXPONENTIALS: Final = (0.01, 0.02, 0.04, 0.08, 0.16, 0.32, 0.64, 1.28)
 RAMPS: Final = (0.03, 0.06, 0.12, 0.2, 0.3, 0.42, 0.55, 0.7, 0.85, 1.0)
 
+
+UNSEEN_SDS: Final = 2.0
+UNSEEN_LEAST: Final = 3.0
+GAP_TIMES: Final = 5.0
+"""S.d. of a step that cleaning did not find: so many s.d. of one scan, and microstrain at least. Medians of a
+few scans on both sides show anything above three or four."""
+UNSEEN_IN_GAP: Final = 300.0
+"""The same [microstrain] across a gap: people come, mains come back, and no reading shows the jump."""
+UNSEEN: Final = 0.1
+"""Share of tests with such a step (common practice, no source)."""
+PER_SPECIMEN_K: Final = 30.0
+PER_ROOM_K: Final = 30.0
+"""S.d. of apparent strain [microstrain/K]: metals expand by 9 to 24e-6/K (handbook values), and no transducer
+frame is longer than a few gauge lengths."""
+BENT: Final = 0.05
+"""Fading start of the difference of the sides, as a share of the elapsed time: settling of the arms."""
+MISSING: Final = 8
+"""Blocks without both sides beyond which their difference is not asked."""
 
 THIN: Final = (0.06, 0.005, 0.1)
 """How far blocks are merged for a look: shares of distance from now, of the test, and of the time of test."""
@@ -57,12 +76,13 @@ class Design(NamedTuple):
     departures: FloatArray
     since: FloatArray
     steps: FloatArray
-    step_at: FloatArray
+    step_sd: FloatArray
     y: FloatArray
     precision: FloatArray
     sd: float
     now: float
     knots: FloatArray
+    witness: noise.Witness | None
 
 
 class Evidence(NamedTuple):
@@ -89,10 +109,20 @@ class Evidence(NamedTuple):
     model: tuple[float, float]
 
 
-def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error: float) -> Design:
+def design(
+    rungs: FloatArray,
+    *,
+    has_temperature: bool,
+    has_room: bool,
+    q_error: float = 0.0,
+    per_kelvin: float = 0.0,
+) -> Design:
     """Build the regression from the ladder.
 
     ``q_error``: prior s.d. [1/K] of the error of the temperature sensitivity of the rate, 0 for none.
+    ``per_kelvin``: that sensitivity [1/K]; where the controller output is logged, it stands for a temperature
+    that a drifting thermocouple may hide. Output goes with T - T_room where heat is conducted and with T^4
+    where it is radiated: about 2/T a kelvin is taken, and may be wrong by as much.
     """
     sd = ladder.white_sd(rungs) * 1e6
     rungs = ladder.thinned(rungs[rungs[:, ladder.T] > 0.004 * rungs[-1, ladder.T]], *THIN)
@@ -113,25 +143,29 @@ def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error:
         t = t - np.mean(t)
         if np.std(t) > 1e-3:
             free.append(t)
-            precision.append(
-                (sd / 30.0) ** 2
-            )  # apparent strain of at most some tens of microstrain per kelvin
+            precision.append((sd / PER_SPECIMEN_K) ** 2)
             rate = float((y[-1] - y[0]) / max(now - u[0], 1e-9))
             q = rungs[:, ladder.Q] * rate  # what a relative rate error of 1 per kelvin would do [microstrain]
             if q_error > 0 and np.std(q) > 0:
                 free.append((q - np.mean(q)) * q_error)
+                precision.append(sd**2)
+            output = float(np.mean(rungs[:, ladder.OUT]))
+            hidden = rungs[:, ladder.OQ] * rate
+            if per_kelvin > 0 and output > 0 and np.std(hidden) > 0:  # NaN where it is not logged: left out
+                kelvin = (float(np.mean(rungs[:, ladder.TEMP])) + ZERO_C_IN_K) / (2.0 * output)
+                free.append((hidden - np.mean(hidden)) * kelvin * per_kelvin)
                 precision.append(sd**2)
     if has_room:
         for c in (ladder.ROOM0, ladder.ROOM1, ladder.ROOM2):
             r = rungs[:, c] - np.mean(rungs[:, c])
             if np.std(r) > 1e-3:
                 free.append(r)
-                precision.append((sd / 100.0) ** 2)
+                precision.append((sd / PER_ROOM_K) ** 2)
     elif rungs[-1, ladder.T] > 60.0:
         phase = 2.0 * np.pi * rungs[:, ladder.T] / 24.0
         fine = np.minimum(1.0, np.maximum(0.0, 2.0 - (rungs[:, ladder.END] - rungs[:, ladder.START]) / 6.0))
         free += [np.cos(phase) * fine, np.sin(phase) * fine]
-        precision += [(sd / 100.0) ** 2] * 2
+        precision += [(sd / PER_ROOM_K) ** 2] * 2
     seg = rungs[:, ladder.SEGMENT]
     for s in np.unique(seg)[1:][-6:]:
         free.append((seg >= s).astype(np.float64))
@@ -147,24 +181,33 @@ def design(rungs: FloatArray, *, has_temperature: bool, has_room: bool, q_error:
     )
     since = np.array([s for s in SINCE if np.count_nonzero(x > 1.0 - s) >= 4])
     departures = np.maximum(x[:, None] - (1.0 - since)[None, :], 0.0) ** 2 / (since**2)[None, :]
-    at = 0.5 * (x[1:] + x[:-1])
-    at = at[1:-1]
+    at = 0.5 * (x[2:] + x[1:-1])
+    gap = (rungs[1:, ladder.START] - rungs[:-1, ladder.END])[1:]
+    usual = ((rungs[:, ladder.END] - rungs[:, ladder.START]) / np.maximum(n - 1.0, 1.0))[1:]
+    in_gap = gap > GAP_TIMES * np.maximum(usual[1:], usual[:-1])
+    step_sd = np.hypot(UNSEEN_LEAST, np.where(in_gap, UNSEEN_IN_GAP, UNSEEN_SDS * sd))
     steps = (x[:, None] > at[None, :]).astype(np.float64)
+    columns, penalty = np.stack(free, axis=1), np.array(precision)
+    witness = _witness(rungs[:, ladder.H] * 1e6, x, y, columns, penalty)
     return Design(
-        x,
-        variance,
-        np.stack(free, axis=1),
-        concave,
-        departures,
-        since,
-        steps,
-        at,
-        y,
-        np.array(precision),
-        sd,
-        now,
-        knots,
+        x, variance, columns, concave, departures, since, steps, step_sd, y, penalty, sd, now, knots, witness
     )
+
+
+def _witness(
+    half: FloatArray, x: FloatArray, y: FloatArray, free: FloatArray, precision: FloatArray
+) -> noise.Witness | None:
+    """Return half the difference of the sides with what it may follow; None where there is none to speak of.
+
+    While a side is away its last value is carried: such blocks get a column of their own each."""
+    carried = np.flatnonzero(np.diff(half) == 0.0) + 1
+    if carried.size > MISSING or half.size < 2 * (free.shape[1] + carried.size) + MISSING:
+        return None
+    bending = np.stack((1.0 - np.exp(-x / BENT), y), axis=1)
+    alone = (np.arange(half.size)[:, None] == carried[None, :]).astype(np.float64)
+    columns = np.concatenate((free, bending, alone), axis=1)
+    own = np.concatenate((precision, np.zeros(2 + carried.size)))
+    return noise.Witness(half - half[0], columns, own)
 
 
 def _ramps(x: FloatArray) -> FloatArray:
@@ -269,7 +312,7 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
     def like(const: float, rss: FloatArray | float) -> FloatArray:
         return np.asarray(const - 0.5 * dof * np.log(np.maximum(rss, 0.0) + floor))
 
-    grid = noise.Grid(d.x, d.variance, columns)
+    grid = noise.Grid(d.x, d.variance, columns, d.witness)
     cells: dict[tuple[int, int], _Cell] = {}
     todo = [(0, 0), grid.nearest(start)]
     best = -np.inf
@@ -357,7 +400,7 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
     table[:, 3] /= np.sum(table[:, 3])
     first = cells[order[0]]
     return Evidence(
-        against - max(0.0, step), against, 1.0 - onset, fall_gain,
+        against - step, against, 1.0 - onset, fall_gain,
         float(np.mean(rates[mid < max(0.1 * onset, mid[2])])) / safe, float(rates[-1]) / safe,
         float(shape[-1] - tangent) * 1e-6, float(mid[least]), table, mid, rates * (1e-6 / d.now),
         (first.memory, first.ratio),
@@ -365,10 +408,14 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
 
 
 def _step_gain(d: Design, cells: list[_Cell], like: Callable[[float, FloatArray], FloatArray]) -> float:
-    """Return how much better [log] a falling rate fits with one step at the best place, place averaged
-    over."""
+    """Return how much better [log] a falling rate fits where one test in ten has a step that nobody saw, of a
+    size and at a place averaged over; never below log(1 - UNSEEN), as good as zero."""
     f = d.free.shape[1]
     per_cell = []
+    precision = (d.sd / d.step_sd) ** 2
+    width = np.diff(d.x)[1:]
+    place = width[:-1] + width[1:]
+    place = np.log(place / np.sum(place))
     for cell in cells:
         idx = np.concatenate((np.arange(f), f + np.flatnonzero(cell.passive)))
         a = cell.gram[idx[:, None], idx].copy()
@@ -383,14 +430,16 @@ def _step_gain(d: Design, cells: list[_Cell], like: Callable[[float, FloatArray]
         size = own - np.sum(cross * t[:, :-1], axis=0)
         beside = np.sum(turned[:, :-1] * weighted[:, 1:], axis=0) - np.sum(cross[:, :-1] * t[:, 1:-1], axis=0)
         # a step inside a block leaves its mean anywhere between: two steps, before and after it
-        det = size[:-1] * size[1:] - beside**2
+        size = size + precision
+        product = size[:-1] * size[1:]
+        det = np.maximum(product - beside**2, 1e-9 * product)
         both = grad[:-1] ** 2 * size[1:] + grad[1:] ** 2 * size[:-1] - 2.0 * grad[:-1] * grad[1:] * beside
-        drop = both / np.maximum(det, 1e-9 * size[:-1] * size[1:] + 1e-300)
-        per_cell.append(like(cell.const, cell.rss - drop))
+        occam = -0.5 * np.log(det / (precision[:-1] * precision[1:]))
+        per_cell.append(like(cell.const, cell.rss - both / det) + occam)
     table = np.array(per_cell)
     total0 = noise.log_mean(np.array([cell.log_like for cell in cells]))
-    best = max(noise.log_mean(table[:, j]) for j in range(table.shape[1]))
-    return float(best - np.log(table.shape[1]) - total0)
+    each = np.array([noise.log_mean(table[:, j]) for j in range(table.shape[1])])
+    return float(np.logaddexp(0.0, np.log(UNSEEN) + noise.log_mean(each + place) - total0))
 
 
 def slopes(d: Design, x: FloatArray) -> FloatArray:

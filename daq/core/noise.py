@@ -4,7 +4,12 @@ The covariance of block means is s^2 (diag(1/n) + r K(tau)): white noise of sing
 stationary Ornstein-Uhlenbeck drift of memory tau, whose limit for long tau is a random walk. Neither tau
 nor the ratio r can be pinned down while a test runs (a memory near the length of the record cannot be told
 from creep), so every likelihood is averaged over a weighted grid of both. For each tau one eigenvalue
-decomposition serves all ratios."""
+decomposition serves all ratios.
+
+Two sides tell more than one. Half their difference holds the same noise as their mean (that of two
+independent transducers) and no creep but bending, which follows the strain: a *witness* to the noise that
+neither primary nor tertiary creep can be mistaken for. What drifts both sides alike it cannot see, so its
+word counts for less than it would if the two were independent."""
 
 from __future__ import annotations
 
@@ -28,6 +33,21 @@ DRIFT_SPREAD: Final = 1.0
 one: in the first hours no record can tell a drift of hours from creep."""
 
 
+WITNESS: Final = 0.7
+"""Weight of the witness' log likelihood: sides share room, electronics and frame (common practice, no
+source)."""
+
+
+class Witness(NamedTuple):
+    """Half the difference of the sides (n,) [microstrain] beside each block mean, and the columns (n, c) that
+    it may follow: what bends the mean, the mean itself (bending), a fading start; ``precision`` (c,) as in
+    ``evidence.Design``."""
+
+    half: FloatArray
+    columns: FloatArray
+    precision: FloatArray
+
+
 def log_prior(drift_microstrain: float, ratio: float) -> float:
     """Return the log prior weight of a drift of this s.d.; none at all counts as 0.2 microstrain."""
     drift = max(drift_microstrain, 0.2) if ratio > 0.0 else 0.2
@@ -35,8 +55,9 @@ def log_prior(drift_microstrain: float, ratio: float) -> float:
 
 
 class Model(NamedTuple):
-    """One noise model: memory as a share of the elapsed time, ratio, log weight of the grid, eigenvectors
-    (n, n), columns in that basis (n, c), inverse variances (n,), log determinant."""
+    """One noise model: memory as a share of the elapsed time, ratio, log weight (of the grid, and what the
+    witness says), eigenvectors (n, n), columns in that basis (n, c), inverse variances (n,), log
+    determinant."""
 
     memory: float
     ratio: float
@@ -54,11 +75,16 @@ class Grid:
         x: Times as shares of the elapsed time (n,), rising.
         variance: White variance of each block mean in units of one scan's (n,).
         columns: Regressors and data, one a column.
+        witness: Half the difference of the sides, None where there is one side or none.
 
     Cells are (memory index, ratio index); ratio index 0 is white noise alone, the same for all memories.
     """
 
-    def __init__(self, x: FloatArray, variance: FloatArray, columns: FloatArray) -> None:
+    def __init__(
+        self, x: FloatArray, variance: FloatArray, columns: FloatArray, witness: Witness | None = None
+    ) -> None:
+        self._x = x
+        self._witness = witness
         self._root = 1.0 / np.sqrt(variance)
         self._gap = np.abs(x[:, None] - x[None, :])
         self._scaled = columns * self._root[:, None]
@@ -69,7 +95,8 @@ class Grid:
     def model(self, i: int, j: int) -> Model:
         if j == 0:
             n = self._root.size
-            return Model(MEMORY_SHARES[0], 0.0, 0.0, np.eye(n), self._scaled, np.ones(n), self._base)
+            heard = self._heard(np.eye(n), np.ones(n))
+            return Model(MEMORY_SHARES[0], 0.0, heard, np.eye(n), self._scaled, np.ones(n), self._base)
         if i not in self._known:
             k = np.exp(-self._gap / MEMORY_SHARES[i]) * (
                 self.typical * self._root[:, None] * self._root[None, :]
@@ -78,9 +105,24 @@ class Grid:
             self._known[i] = (np.maximum(value, 0.0), vector, vector.T @ self._scaled)
         value, vector, turned = self._known[i]
         spread = 1.0 + RATIOS[j - 1] * value
-        share = -float(np.log(len(MEMORY_SHARES) * len(RATIOS)))
+        weight = self._heard(vector, 1.0 / spread) - float(np.log(len(MEMORY_SHARES) * len(RATIOS)))
         logdet = self._base + float(np.sum(np.log(spread)))
-        return Model(MEMORY_SHARES[i], RATIOS[j - 1], share, vector, turned, 1.0 / spread, logdet)
+        return Model(MEMORY_SHARES[i], RATIOS[j - 1], weight, vector, turned, 1.0 / spread, logdet)
+
+    def _heard(self, vectors: FloatArray, weights: FloatArray) -> float:
+        """Return the weighted log likelihood (restricted, scale profiled) of the witness; 0 without one."""
+        w = self._witness
+        if w is None:
+            return 0.0
+        n, c = w.columns.shape
+        table = np.concatenate((w.columns, w.half[:, None]), axis=1) * self._root[:, None]
+        turned = vectors.T @ table
+        gram = turned.T @ (weights[:, None] * turned)
+        own = gram[:c, :c] + np.diag(w.precision + 1e-10 * np.diag(gram)[:c] + 1e-12)
+        rest = float(gram[-1, -1] - gram[:c, -1] @ np.linalg.solve(own, gram[:c, -1]))
+        determinant = -float(np.sum(np.log(weights))) + float(np.linalg.slogdet(own)[1])
+        scale = float(np.log(max(rest, 0.0) + 1e-6 * n))
+        return float(-0.5 * WITNESS * (determinant + (n - c) * scale))
 
     def nearest(self, model: tuple[float, float] | None) -> tuple[int, int]:
         """Return the cell nearest to (memory share, ratio); the middle of the grid for None."""

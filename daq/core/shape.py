@@ -40,7 +40,7 @@ def unimodal(rungs: FloatArray, models: FloatArray) -> tuple[FloatArray, FloatAr
     r[:, ladder.U] = r[:, ladder.T]
     room = bool(np.isfinite(r[:, ladder.ROOM0]).all())
     temp = bool(np.isfinite(r[:, ladder.TEMP]).all())
-    d = evidence.design(r, has_temperature=temp, has_room=room, q_error=0.0)
+    d = evidence.design(r, has_temperature=temp, has_room=room)
     memory, drift, white, _ = models[int(np.argmax(models[:, 3]))]
     hours = d.x * d.now
     v = drift * np.exp(-np.abs(hours[:, None] - hours[None, :]) / max(memory, 1e-9)) * 1e12
