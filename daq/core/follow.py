@@ -14,7 +14,7 @@ from typing import Any, Final
 import numpy as np
 
 from daq.codec import state
-from daq.core import clean, estimate, evidence, intake, ladder, shape, verdict
+from daq.core import clean, estimate, evidence, intake, ladder, shape, trend, verdict
 from daq.core.block import Block, Conclusion
 from daq.core.estimate import Minimum
 from daq.core.intake import IntakeState
@@ -36,9 +36,9 @@ confidence on each side. Cube-root creep changes by 37 % over any such half, log
 neither is steady."""
 FIT_THIN: Final = (0.04, 0.004, 0.05)
 """How far blocks are merged for fits (``ladder.thinned``)."""
-BRIEF: Final = 0.08
+BRIEF: Final = 0.1
 LASTING: Final = 0.03
-"""A rise within the last 8 % of the time must last for 3 % of it under the eyes of the follower: what
+"""A rise within the last tenth of the time must last for 3 % of it under the eyes of the follower: what
 drift of a few hours does in so short a stretch goes back in the next, while damage goes on."""
 TAKEN_BACK: Final = -1.0
 BACK_LOOKS: Final = 3
@@ -46,6 +46,9 @@ BACK_LOOKS: Final = 3
 e."""
 SPARE: Final = 15
 """Blocks needed beyond the free columns: with fewer, room and specimen temperature are left out."""
+STEADY_LEAST: Final = 0.02
+"""Share of the expected life before which nothing is called steady: no engineering alloy is through its
+primary creep by then (common practice, no source)."""
 CALM: Final = 1.0
 """Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25
@@ -77,6 +80,7 @@ class FollowState:
     log_ratio: float = 0.0
     falling_looks: int = 0
     rising_h: float | None = None
+    rising_since_h: float = 0.0
     rise_ratio: float = 1.0
     model: tuple[float, float] = (0.1, 1.0)
     minimum: Minimum | None = None
@@ -204,55 +208,20 @@ def _windowed(s: FollowState) -> FloatArray:
 def _weigh(s: FollowState, rules: TestRules, r: FloatArray) -> evidence.Evidence:
     temp = r[:, ladder.TEMP]
     has_temp = bool(np.isfinite(temp).all())
-    q_error = 0.0
+    q_error = per_kelvin = 0.0
     if has_temp:
         q = rules.activation_energy_j_per_mol
         kelvin = float(temp[-1]) + ZERO_C_IN_K
-        q_error = (Q_ERROR * q if q is not None else Q_UNKNOWN) / (GAS_CONSTANT_J_PER_MOL_K * kelvin**2)
+        per_q = 1.0 / (GAS_CONSTANT_J_PER_MOL_K * kelvin**2)
+        q_error = (Q_ERROR * q if q is not None else Q_UNKNOWN) * per_q
+        per_kelvin = (q if q is not None else Q_UNKNOWN) * per_q
     has_room = bool(np.isfinite(r[:, ladder.ROOM0]).all())
-    d = evidence.design(r, has_temperature=has_temp, has_room=has_room, q_error=q_error)
+    d = evidence.design(
+        r, has_temperature=has_temp, has_room=has_room, q_error=q_error, per_kelvin=per_kelvin
+    )
     if d.x.size < d.free.shape[1] + SPARE:
-        d = evidence.design(r, has_temperature=False, has_room=False, q_error=0.0)
+        d = evidence.design(r, has_temperature=False, has_room=False)
     return evidence.weigh(d, s.model)
-
-
-def _rising(r: FloatArray) -> bool:
-    """Cheap screen: is the rate of any late stretch above that of the one before it by more than white noise
-    alone would do? Drift only adds to that noise, and evidence enough for a verdict needs four of these
-    standard errors: nothing is lost below two."""
-    white = ladder.white_sd(r)
-    if not np.isfinite(white):
-        return True
-    now = float(r[-1, ladder.T])
-    t = r[:, ladder.T]
-    for share in (0.05, 0.1, 0.2, 0.35):
-        late = r[t > now * (1.0 - share)]
-        early = r[(t <= now * (1.0 - share)) & (t > now * (1.0 - 2.0 * share))]
-        if late.shape[0] >= 3 and early.shape[0] >= 3:
-            (b1, s1), (b0, s0) = _slope(late), _slope(early)
-            if b1 - b0 > 2.0 * white * np.sqrt(1.0 / s1 + 1.0 / s0):
-                return True
-    return False
-
-
-def _accelerates(r: FloatArray) -> bool:
-    """Say whether the rate rose about as much from the middle to the last third as from the first to the
-    middle."""
-    t, now = r[:, ladder.T], float(r[-1, ladder.T])
-    thirds = [r[(t > now * a) & (t <= now * b)] for a, b in ((0.0, 0.33), (0.33, 0.67), (0.67, 1.0))]
-    if min(x.shape[0] for x in thirds) < 3:
-        return False
-    (r1, _), (r2, _), (r3, _) = (_slope(x) for x in thirds)
-    return r3 - r2 >= 0.7 * (r2 - r1) and r3 > r2
-
-
-def _slope(r: FloatArray) -> tuple[float, float]:
-    """Return the slope of all scans in ``r`` and the sum of squares of their times."""
-    w, x, y = r[:, ladder.N], r[:, ladder.T], r[:, ladder.E]
-    n = float(np.sum(w))
-    dx, dy = x - float(np.sum(w * x)) / n, y - float(np.sum(w * y)) / n
-    sxx = float(np.sum(w * dx * dx) + np.sum(r[:, ladder.S_TT]))
-    return float(np.sum(w * dx * dy) + np.sum(r[:, ladder.S_TE])) / sxx, sxx
 
 
 def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
@@ -264,18 +233,22 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
     if (
         r.shape[0] >= LEAST_RUNGS
         and r[-1, ladder.T] > r[0, ladder.T]
-        and (_rising(r) or s.models.shape[0] == 0)
+        and (trend.rising(r) or s.models.shape[0] == 0)
     ):
         e = _weigh(s, rules, r)
-        threshold = float(np.log(1.0 / rules.false_share)) + verdict.BEYOND_VILLE
+        levels = verdict.levels(rules.false_share)
         s = replace(s, models=e.noise, model=e.model, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio)
-        cue = verdict.judge(e, s.stage, now, threshold, rules.expected_rupture_h, _accelerates(r))
-        if cue is Cue.RATE_ROSE and e.since < BRIEF:
-            s = replace(s, rising_h=now if s.rising_h is None else s.rising_h)
-            if s.rising_h is not None and now < s.rising_h * (1.0 + LASTING):
-                cue = None
-        else:
+        cue = verdict.judge(e, s.stage, now, levels, rules.expected_rupture_h, trend.accelerates(r))
+        if cue is not Cue.RATE_ROSE:
             s = replace(s, rising_h=None)
+        else:
+            since_h = e.since * float(r[-1, ladder.T])
+            if s.rising_h is None:
+                s = replace(s, rising_h=now, rising_since_h=since_h)
+            began = now if s.rising_h is None else s.rising_h
+            brief = e.since < BRIEF and now < began * (1.0 + LASTING)
+            if brief or not verdict.has_lasted(e.log_ratio, now - began, s.rising_since_h, levels):
+                cue = None
         if cue is Cue.RATE_ROSE:
             return _turn(s, rules, e, scan, tick, out)
         if cue is Cue.RATE_ROSE_EARLY:
@@ -287,7 +260,9 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
     if s.stage is Stage.INVERSE_PRIMARY:
         s = _after_inverse(s, scan, tick, out)
     if s.stage in (Stage.PRIMARY, Stage.INVERSE_PRIMARY) and s.models.shape[0] and s.log_ratio < CALM:
-        s = _steady(s, scan, tick, out)
+        s = _steady(s, rules, scan, tick, out)
+    elif s.stage is Stage.SECONDARY and s.models.shape[0] and s.log_ratio < CALM:
+        s = _fell_on(s, scan, tick, out)
     spacing = next(share for least, share in LOOKS if s.log_ratio >= least)
     return replace(s, next_look_h=now * (1.0 + spacing))
 
@@ -304,29 +279,37 @@ def _after_inverse(s: FollowState, scan: int, tick: int, out: list[Conclusion]) 
     return s
 
 
-def _steady(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+def _change(s: FollowState) -> tuple[float, float] | None:
     r = _windowed(s)
-    if r.shape[0] < LEAST_RUNGS:
+    return trend.change_of_rate(r, s.models) if r.shape[0] >= LEAST_RUNGS else None
+
+
+def _steady(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    expected = rules.expected_rupture_h
+    if expected is not None and s.now_h < STEADY_LEAST * expected:
         return s
-    now = float(r[-1, ladder.T])
-    fit = estimate.polynomial(r, s.models, 0.5 * now, now, 2)
-    if fit is None:
-        return s
-    c = fit.weights @ fit.coefs
-    if c[1] <= 0:
-        return s
-    each = 4.0 * fit.coefs[:, 2] / fit.coefs[:, 1]  # relative change of the rate over the stretch
-    change = float(fit.weights @ each)
-    own = 16.0 * fit.covariances[:, 2, 2] / fit.coefs[:, 1] ** 2
-    sd = float(np.sqrt(fit.weights @ (own + (each - change) ** 2)))
-    if abs(change) + estimate.Z90 * sd >= STEADY_CHANGE:
+    known = _change(s)
+    if known is None or abs(known[0]) + estimate.Z90 * known[1] >= STEADY_CHANGE:
         return s
     why = (
-        f"over the last half of the time the rate changed by {100 * change:+.0f} % "
-        f"+- {100 * estimate.Z90 * sd:.0f} %, within {100 * STEADY_CHANGE:.0f} %"
+        f"over the last half of the time the rate changed by {100 * known[0]:+.0f} % "
+        f"+- {100 * estimate.Z90 * known[1]:.0f} %, within {100 * STEADY_CHANGE:.0f} %"
     )
-    begin_h = s.window_h + 0.5 * now
+    begin_h = s.window_h + 0.5 * (float(s.rungs[-1, ladder.T]) - s.window_h)
     return _move(s, Cue.RATE_STEADY, scan, tick, begin_h, None, why, out)
+
+
+def _fell_on(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
+    """Take secondary back where the rate has surely fallen on since: any smooth curve looks steady while a
+    test is young."""
+    known = _change(s)
+    if known is None or known[0] + estimate.Z90 * known[1] > -STEADY_CHANGE:
+        return s
+    why = (
+        f"over the last half of the time the rate fell by {-100 * known[0]:.0f} % "
+        f"+- {100 * estimate.Z90 * known[1]:.0f} %: it was not steady yet"
+    )
+    return _move(s, Cue.RATE_FELL_ON, scan, tick, 0.0, None, why, out)
 
 
 def _fit_least(s: FollowState, rules: TestRules) -> tuple[Minimum, float | None] | None:
@@ -455,6 +438,8 @@ def _move(
     withdraws = None
     if cue is Cue.RISE_TAKEN_BACK:
         withdraws = f"{Stage.TERTIARY.value}|{counts.get(Stage.TERTIARY.value, 1)}"
+    elif cue is Cue.RATE_FELL_ON:
+        withdraws = f"{Stage.SECONDARY.value}|{counts.get(Stage.SECONDARY.value, 1)}"
     counts[after.value] = counts.get(after.value, 0) + 1
     fields: dict[str, Any] = {
         "stage": after.value,

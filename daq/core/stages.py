@@ -33,6 +33,7 @@ class Cue(Enum):
     LOAD_BEGUN = "load_begun"
     FULL_LOAD = "full_load"
     RATE_STEADY = "rate_steady"
+    RATE_FELL_ON = "rate_fell_on"
     RATE_ROSE_EARLY = "rate_rose_early"
     RATE_ROSE = "rate_rose"
     RISE_TAKEN_BACK = "rise_taken_back"
@@ -58,6 +59,7 @@ TABLE: Final[dict[tuple[Stage, Cue], Stage]] = {
     (Stage.PRIMARY, Cue.RATE_STEADY): Stage.SECONDARY,
     (Stage.PRIMARY, Cue.RATE_ROSE): Stage.TERTIARY,
     (Stage.PRIMARY, Cue.RATE_ROSE_EARLY): Stage.INVERSE_PRIMARY,
+    (Stage.SECONDARY, Cue.RATE_FELL_ON): Stage.PRIMARY,
     (Stage.SECONDARY, Cue.RATE_ROSE): Stage.TERTIARY,
     (Stage.SECONDARY, Cue.RATE_ROSE_EARLY): Stage.INVERSE_PRIMARY,
     (Stage.INVERSE_PRIMARY, Cue.RATE_FALLS): Stage.PRIMARY,

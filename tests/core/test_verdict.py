@@ -24,7 +24,7 @@ def evidence(**changed: float) -> Evidence:
 def judge(e: Evidence, now_h: float = 500.0, expected_h: float | None = None, **more: object) -> Cue | None:
     stage = more.get("stage", Stage.SECONDARY)
     assert isinstance(stage, Stage)
-    return verdict.judge(e, stage, now_h, 10.3, expected_h, bool(more.get("accelerates", True)))
+    return verdict.judge(e, stage, now_h, (7.3, 10.3), expected_h, bool(more.get("accelerates", True)))
 
 
 def test_a_rise_after_a_fall_is_tertiary() -> None:
@@ -32,7 +32,7 @@ def test_a_rise_after_a_fall_is_tertiary() -> None:
     assert judge(evidence()) is Cue.RATE_ROSE
 
 
-@pytest.mark.parametrize("changed", [{"log_ratio": 10.2}, {"rise_ratio": 1.01}, {"rise_ratio": 20.0}])
+@pytest.mark.parametrize("changed", [{"log_ratio": 7.2}, {"rise_ratio": 1.01}, {"rise_ratio": 20.0}])
 def test_weak_small_or_abrupt_rises_are_none(changed: dict[str, float]) -> None:
     """Noise, a kelvin, a jerk."""
     assert judge(evidence(**changed)) is None
@@ -43,6 +43,30 @@ def test_a_rise_from_the_start_is_inverse_primary() -> None:
     e = evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88)
     assert judge(e) is Cue.RATE_ROSE_EARLY
     assert judge(e, stage=Stage.INVERSE_PRIMARY) is None
+
+
+def test_incubation_is_said_on_full_evidence_only() -> None:
+    """It asks for nothing from anybody: there is no haste."""
+    assert judge(evidence(fall_gain=0.0, fall_ratio=1.0, since=0.88, log_ratio=9.0)) is None
+
+
+def test_less_evidence_must_last_longer() -> None:
+    """What drift feigns goes back within the time it took to come; damage goes on."""
+    levels = verdict.levels(0.005)
+    assert levels == pytest.approx((7.298, 10.298), abs=1e-3)
+    assert verdict.has_lasted(10.3, 0.0, 100.0, levels)
+    assert not verdict.has_lasted(7.3, 9.9, 100.0, levels)
+    assert verdict.has_lasted(7.3, 10.1, 100.0, levels)
+    assert not verdict.has_lasted(8.8, 4.9, 100.0, levels)
+    assert verdict.has_lasted(8.8, 5.1, 100.0, levels)
+
+
+@pytest.mark.parametrize(("log_ratio", "rise"), [(12.0, 1.04), (7.5, 1.2)])
+def test_small_rises_and_falling_rates_ask_for_more(log_ratio: float, rise: float) -> None:
+    """A wave of the rate by a few per cent is none; primary that was never steady is hard to model."""
+    e = evidence(log_ratio=log_ratio, rise_ratio=rise)
+    assert judge(e, stage=Stage.PRIMARY) is None
+    assert judge(evidence(log_ratio=21.0, rise_ratio=rise), stage=Stage.PRIMARY) is Cue.RATE_ROSE
 
 
 def test_a_steady_stretch_stands_for_a_fall() -> None:
