@@ -218,16 +218,45 @@ def _around(
     return low, high
 
 
-def rate_now(rungs: FloatArray, models: FloatArray, share: float = 0.1) -> tuple[float, float, float]:
-    """Return the rate at the end [1/h] with a 90 % interval, from the last tenth or so of the test."""
-    now = rungs[-1, ladder.T]
-    for part in (share, 2 * share, 4 * share, 1.0):
-        fit = polynomial(rungs, models, now * (1.0 - part), now, 1)
-        if fit is not None:
-            rate, sd = float(fit.rate(np.array([now]))[0]), fit.rate_sd(now)
-            if sd < 0.1 * abs(rate) or part >= 4 * share:
-                return rate, rate - Z90 * sd, rate + Z90 * sd
-    return float("nan"), float("nan"), float("nan")
+NOW_STRETCHES: Final = (0.03, 0.06, 0.12, 0.25, 0.5, 1.0)
+"""Stretches before now that are tried for the rate now, as shares of the test."""
+NOW_BENT: Final = 0.1
+NOW_BENT_LINE: Final = 0.6
+"""Error of the rate at the end put down to what the fit leaves out, as a share of how much the rate changed
+over the stretch: a straight line misses half of it and more where the bend grows; a parabola misses what a
+cubic would add, a tenth where the rate has doubled exponentially."""
+
+
+def rate_now(rungs: FloatArray, models: FloatArray) -> tuple[float, float, float]:
+    """Return the rate at the end [1/h] with a 90 % interval, NaN where too little is known.
+
+    Lines and parabolas over stretches that end now; the one with the least sum of variance and squared bias.
+    """
+    now = float(rungs[-1, ladder.T])
+    end = np.array([now])
+    best: tuple[float, float] | None = None
+    for part in NOW_STRETCHES:
+        low = now * (1.0 - part)
+        line = polynomial(rungs, models, low, now, 1)
+        if line is None:
+            continue
+        bend = polynomial(rungs, models, low, now, 2)
+        change = 0.0
+        if bend is not None:
+            change = float(bend.rate(end)[0] - bend.rate(np.array([bend.low_h]))[0])
+            sd = float(np.hypot(bend.rate_sd(now), NOW_BENT * change))
+            if best is None or sd < best[1]:
+                best = float(bend.rate(end)[0]), sd
+            # a change that noise alone would show is none
+            noise = 2.0 * bend.rate_sd(now)
+            change = float(np.sqrt(max(change * change - noise * noise, 0.0)))
+        sd = float(np.hypot(line.rate_sd(now), NOW_BENT_LINE * change))
+        if best is None or sd < best[1]:
+            best = float(line.rate(end)[0]), sd
+    if best is None:
+        return float("nan"), float("nan"), float("nan")
+    rate, sd = best
+    return rate, rate - Z90 * sd, rate + Z90 * sd
 
 
 def coarse_rates(rungs: FloatArray, share: float = 0.04) -> tuple[FloatArray, FloatArray, FloatArray]:
