@@ -192,14 +192,17 @@ def minimum(
         if best is not None and sd >= best[0]:
             continue
         # where the rate cannot be told from the least one: the interval of the time
-        close = fitted <= fitted[k] + 0.5 * Z90 * sd
-        lo = k - int(np.argmin(close[k::-1])) if not close[: k + 1].all() else 0
-        hi = k + int(np.argmin(close[k:])) if not close[k:].all() else 400
         rate, when = float(fitted[k]), float(grid[k])
+        wide = np.linspace(fit.low_h, fit.high_h, 401)
+        at_least = int(np.searchsorted(wide, when))
+        far = np.flatnonzero(fit.rate(wide) > rate + Z90 * sd)
+        lo = int(max((i for i in far if i < at_least), default=0))
+        hi = int(min((i for i in far if i >= at_least), default=400))
         best = (
             sd,
             Minimum(
-                rate, rate - Z90 * sd, rate + Z90 * sd, when, float(grid[lo]), float(grid[hi]),
+                rate, rate - Z90 * sd, rate + Z90 * sd,
+                when, min(when, float(wide[lo])), max(when, float(wide[hi])),
                 fit.low_h, fit.high_h, float(fit.strain(np.array([when]))[0]),
             ),
         )  # fmt: skip

@@ -14,11 +14,11 @@ from typing import Any, Final
 import numpy as np
 
 from daq.codec import state
-from daq.core import clean, estimate, evidence, intake, ladder, shape, trend, verdict
+from daq.core import clean, estimate, evidence, intake, ladder, late, shape, trend, verdict
 from daq.core.block import Block, Conclusion
 from daq.core.estimate import Minimum
 from daq.core.intake import IntakeState
-from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, Loading, TestRules
+from daq.core.rules import GAS_CONSTANT_J_PER_MOL_K, ZERO_C_IN_K, Loading, Role, TestRules
 from daq.core.stages import Cue, Stage, following
 from daq.records import FloatArray
 
@@ -49,6 +49,9 @@ SPARE: Final = 15
 STEADY_LEAST: Final = 0.02
 """Share of the expected life before which nothing is called steady: no engineering alloy is through its
 primary creep by then (common practice, no source)."""
+FAST: Final = 2.0
+"""Rate over the least from which on tertiary is beyond doubt: nothing is taken back, no small jump looked
+for."""
 CALM: Final = 1.0
 """Evidence for a rise above which nothing is called steady."""
 Q_ERROR: Final = 0.25
@@ -226,6 +229,7 @@ def _weigh(s: FollowState, rules: TestRules, r: FloatArray) -> evidence.Evidence
 
 def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
     now = s.now_h
+    s = _small_jumps(s, rules, scan, tick, out)
     if s.stage is Stage.TERTIARY:
         return _look_late(s, rules, scan, tick, out)
     r = _windowed(s)
@@ -265,6 +269,23 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
         s = _fell_on(s, scan, tick, out)
     spacing = next(share for least, share in LOOKS if s.log_ratio >= least)
     return replace(s, next_look_h=now * (1.0 + spacing))
+
+
+def _small_jumps(
+    s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conclusion]
+) -> FollowState:
+    """Take a jump out that only the means of many scans show; not where the rate climbs or creep is jerky."""
+    if s.intake.jerky or (s.stage is Stage.TERTIARY and s.rise_ratio >= FAST):
+        return s
+    count = max((c for c in s.intake.counts if np.isfinite(c)), default=0.0)
+    found = late.find(s.rungs, s.models, count)
+    if found is None:
+        return s
+    fed, rungs = late.take_out(s.intake, s.rungs, found)
+    names = [c.name for c in rules.channels if c.role in (Role.STRAIN, Role.EXTENSION)]
+    told = {"channels": names, "time_h": found.time_h, "size": found.size, "cause": late.CAUSE}
+    out.append(Conclusion(scan, tick, "step", ",".join(names), told))
+    return replace(s, intake=fed, rungs=rungs)
 
 
 def _after_inverse(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> FollowState:
@@ -396,7 +417,7 @@ def _look_late(s: FollowState, rules: TestRules, scan: int, tick: int, out: list
         if s.offset_h is None and offset is not None:
             out.append(_onset("offset_0p2_percent", offset, scan, tick))
             s = replace(s, offset_h=offset)
-    if s.rise_ratio < 2.0 and s.offset_h is None:
+    if s.rise_ratio < FAST and s.offset_h is None:
         e = _weigh(s, rules, _windowed(s))
         s = replace(s, log_ratio=e.log_ratio, rise_ratio=e.rise_ratio, models=e.noise, model=e.model)
         falling = s.falling_looks + 1 if e.against_falling < TAKEN_BACK else 0
