@@ -84,6 +84,20 @@ class FolderLock:
             self._fd = -1
 
 
+def marked(folder: Path) -> Mark | None:
+    """Return the mark in ``folder`` without taking the lock; None where there is none that can be read."""
+    try:
+        fd = os.open(folder / LOCK_FILE, os.O_RDONLY | os.O_CLOEXEC)
+    except OSError:
+        return None
+    try:
+        return _read(fd)
+    except OSError:
+        return None
+    finally:
+        os.close(fd)
+
+
 def _locked(fd: int) -> bool:
     try:
         fcntl.flock(fd, fcntl.LOCK_EX | fcntl.LOCK_NB)

@@ -17,10 +17,11 @@ from urllib.parse import quote
 
 import numpy as np
 
-from daq.codec import decode_fact
+from daq.codec import canonical_json, decode_fact
 from daq.records import Fact, IntArray, RecordError
 from daq.store.chunks import OTHER, Chunk, link, pieces_of, unpack
 from daq.store.errors import JournalBusy, JournalDamaged, JournalError, explain, guarded
+from daq.store.rows import checksum
 from daq.store.schema import (
     APPLICATION_ID,
     connect,
@@ -45,7 +46,7 @@ _TABLES: Final = (
          codec TEXT NOT NULL, content BLOB NOT NULL, chain BLOB NOT NULL, checksum BLOB NOT NULL,
          rows BLOB NOT NULL, data BLOB NOT NULL)""",
 )
-_COLUMNS: Final = (
+COLUMNS: Final = (
     "first_seq, last_seq, facts, scans, readings, first_tick, last_tick, codec, content, rows, data"
 )
 
@@ -97,7 +98,7 @@ class SealedWriter:
             with guarded(path):
                 prepare_writing(connection)
                 if version_of(connection) == 0:
-                    _begin(connection, frame, journal, site)
+                    begin(connection, frame, journal, site)
                 about = about_of(connection, path)
             if (about["frame"], about["journal"]) != (frame, journal):
                 raise JournalDamaged(f"{path}: got {about}, wanted frame {frame!r} of journal {journal}")
@@ -123,7 +124,7 @@ class SealedWriter:
             number, previous = (known[-1][0] + 1, known[-1][3]) if known else (1, self._genesis)
             chain = link(previous, number, chunk)
             self._connection.execute(
-                f"INSERT INTO chunk (number, chain, checksum, {_COLUMNS}) VALUES ({','.join('?' * 14)})",
+                f"INSERT INTO chunk (number, chain, checksum, {COLUMNS}) VALUES ({','.join('?' * 14)})",
                 (
                     number, chain, chunk.checksum(), chunk.first_seq, chunk.last_seq, chunk.facts,
                     chunk.scans, chunk.readings, chunk.first_tick, chunk.last_tick, chunk.codec,
@@ -267,7 +268,7 @@ def records_of(chunk: Chunk, path: Path, number: int) -> list[tuple[int, Fact]]:
 
 def load(connection: sqlite3.Connection, number: int, frame: str, path: Path) -> Chunk:
     """Read one chunk and compare its checksum."""
-    row = connection.execute(f"SELECT checksum, {_COLUMNS} FROM chunk WHERE number = ?", (number,)).fetchone()
+    row = connection.execute(f"SELECT checksum, {COLUMNS} FROM chunk WHERE number = ?", (number,)).fetchone()
     if row is None:
         raise JournalDamaged(f"{path} chunk {number}: got none, wanted the chunk that the journal names")
     try:
@@ -289,6 +290,32 @@ def about_of(connection: sqlite3.Connection, path: Path) -> dict[str, str]:
     if not {"frame", "journal", "site"} <= about.keys():
         raise JournalDamaged(f"{path}: got {about}, wanted frame, journal and site")
     return about
+
+
+def about_check(about: dict[str, str]) -> str:
+    """Return the checksum over what a sealed file says of itself."""
+    return checksum(canonical_json({k: v for k, v in about.items() if k != "checksum"}).encode()).hex()
+
+
+def about_is_sound(about: dict[str, str]) -> bool:
+    """Compare that checksum; the first files had none."""
+    return "checksum" not in about or about["checksum"] == about_check(about)
+
+
+def origin_of(about: dict[str, str]) -> tuple[int, bytes]:
+    """Return the number of a file's first chunk and the chain value before it.
+
+    An archive holds only the chunks of its test and says what came before them.
+
+    Raises:
+        JournalDamaged: that cannot be read.
+    """
+    try:
+        if "before" in about:
+            return int(about["first_number"]), bytes.fromhex(about["before"])
+    except (ValueError, KeyError) as error:
+        raise JournalDamaged(f"about: got {error!r}, wanted the chain value before the file") from error
+    return 1, genesis_of(about)
 
 
 def genesis_of(about: dict[str, str]) -> bytes:
@@ -329,11 +356,13 @@ def _numbers(connection: sqlite3.Connection, *, last_only: bool = False) -> list
     ).fetchall()
 
 
-def _begin(connection: sqlite3.Connection, frame: str, journal: str, site: str) -> None:
+def begin(connection: sqlite3.Connection, frame: str, journal: str, site: str, **more: str) -> None:
+    """Make the tables of a sealed file, in one transaction; ``more`` is said of it beside the usual."""
     with transaction(connection):
         for statement in _TABLES:
             connection.execute(statement)
-        about = {"frame": frame, "journal": journal, "site": site, "format": str(VERSION)}
+        about = {"frame": frame, "journal": journal, "site": site, "format": str(VERSION), **more}
+        about["checksum"] = about_check(about)
         connection.executemany("INSERT INTO about VALUES (?, ?)", about.items())
         connection.execute(f"PRAGMA application_id = {APPLICATION_ID}")
         connection.execute(f"PRAGMA user_version = {VERSION}")
