@@ -61,6 +61,7 @@ def open_host(
     """
     notices: list[str] = []
     host = folder / HOST_FILE
+    _undo_half_done(folder)
     trouble = _finish_replacing(folder, notices) or judge(folder, mark)
     if trouble is not None:
         _replace(folder, trouble, site, mark, notices, hook)
@@ -79,6 +80,24 @@ def open_host(
         connection.close()
         raise
     return connection, notices
+
+
+def _undo_half_done(folder: Path) -> None:
+    """Let SQLite undo what a power cut left half done in a file that was not in WAL mode at that moment.
+
+    That is so while a file is made, and while a sealed one becomes a plain single file. A read-only
+    connection refuses such a file, so it is done before the host file is judged and the sealed ones read.
+    """
+    host = folder / HOST_FILE
+    for path in (host, *sorted((folder / FOLDER).glob("*.sqlite"))):
+        if path.exists() and path.with_name(path.name + "-journal").exists():
+            try:
+                with closing(connect(path, "rw")) as connection:
+                    connection.execute("SELECT count(*) FROM sqlite_schema").fetchone()
+            except sqlite3.Error as error:
+                # damage is for those to tell who judge the file; a sealed one can wait for the next start
+                if path == host and not isinstance(explain(error, ""), JournalDamaged):
+                    raise
 
 
 def judge(folder: Path, mark: Mark | None) -> str | None:
@@ -201,7 +220,9 @@ def _finish_replacing(folder: Path, notices: list[str]) -> str | None:
 
 def _put_aside(folder: Path, hook: Hook) -> Path | None:
     """Rename what there is of the host file's set into a new folder of ``quarantine/``."""
-    found = [p for suffix in ("", "-wal", "-shm") if (p := folder / (HOST_FILE + suffix)).exists()]
+    found = [
+        p for suffix in ("", "-wal", "-shm", "-journal") if (p := folder / (HOST_FILE + suffix)).exists()
+    ]
     if not found:
         return None
     base = folder / QUARANTINE / time.strftime("%Y%m%dT%H%M%SZ", time.gmtime())

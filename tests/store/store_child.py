@@ -13,6 +13,7 @@ import resource
 import signal
 import sys
 import time
+from collections.abc import Callable
 from pathlib import Path
 from random import Random
 from typing import Any
@@ -47,18 +48,33 @@ def batch_of(first: int, n: int, acked: tuple[int, ...] = ()) -> Batch:
     )
 
 
-def write(folder: Path, acked: int, seed: int, commits: int, hook: Any) -> None:
-    """Commit batches with seals and checkpoints between; note acknowledged numbers in ``acked``."""
+def write(
+    folder: Path,
+    seed: int,
+    commits: int,
+    hook: Callable[[str], None],
+    begun: Callable[[int], None],
+    acknowledged: Callable[[int], None],
+) -> None:
+    """Commit batches with seals and checkpoints between.
+
+    ``begun`` and ``acknowledged`` are told the last number of each batch, before and after its commit.
+    """
     random = Random(seed)
     with Journal.open(folder, site="hall-a", hook=hook) as j:
+        hook("opened")
         for _ in range(commits):
             waiting = tuple(row.seq for row in j.outbox(limit=4))[:-3]
-            done = j.commit(batch_of(j.last_seq + 1, random.choice((1, 1, 2, 5, 9)), waiting))
-            os.write(acked, f"{done.stop - 1}\n".encode())
+            batch = batch_of(j.last_seq + 1, random.choice((1, 1, 2, 5, 9)), waiting)
+            begun(j.last_seq + len(batch.facts))
+            acknowledged(j.commit(batch).stop - 1)
             if random.random() < 0.15:
                 j.seal(whole=random.random() < 0.7)
             if random.random() < 0.1:
                 j.checkpoint()
+            if random.random() < 0.03:
+                j.seal("H1", whole=False, finish=True)
+        hook("closing")
 
 
 def child(order: dict[str, Any]) -> None:
@@ -78,7 +94,11 @@ def child(order: dict[str, Any]) -> None:
         resource.setrlimit(resource.RLIMIT_FSIZE, (order["file_limit"],) * 2)
     acked = os.open(order["acked"], os.O_WRONLY | os.O_CREAT | os.O_APPEND)
     try:
-        write(Path(order["folder"]), acked, order["seed"], order.get("commits", 200), hook)
+        write(
+            Path(order["folder"]), order["seed"], order.get("commits", 200), hook,
+            begun=lambda last: None,
+            acknowledged=lambda last: os.write(acked, f"{last}\n".encode()),
+        )  # fmt: skip
     except JournalError as error:
         os.write(acked, f"{type(error).__name__}: {error}\n".encode())
 

@@ -1,129 +1,27 @@
-"""Killed anywhere, the journal holds everything it acknowledged, in order, and nothing half done."""
+"""Killed while it recovers, or met by a broken or full disk, the journal keeps what it acknowledged."""
 
 from __future__ import annotations
 
 import json
-import os
 import shutil
 import sqlite3
 import subprocess
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from pathlib import Path
-from random import Random
-from typing import Any
 
 import pytest
+from kill_cases import Order, acknowledged, check, fork_server, pieces
 from store_cases import open_journal, quick_folder
 from store_child import fact_of
 
-from daq.codec import encode_fact
-from daq.records import Fact, ScansTaken
-from daq.store.journal import Journal
 from daq.store.verify import NOTE, verify
-
-Order = Callable[..., bool]
-KILLS = int(os.environ.get("UPTURN_KILLS", "60"))
-"""Kills at random moments; a long run sets the environment variable."""
 
 
 @pytest.fixture(scope="module")
 def order() -> Iterator[Order]:
-    """Have a child write in a folder; returns whether it was killed."""
-    command = [sys.executable, str(Path(__file__).with_name("store_child.py"))]
-    with subprocess.Popen(command, stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True) as server:
-        assert server.stdin
-        assert server.stdout
-
-        def send(folder: Path, **how: Any) -> bool:
-            how |= {"folder": str(folder / "j"), "acked": str(folder / "acked")}
-            server.stdin.write(json.dumps(how) + "\n")
-            server.stdin.flush()
-            return bool(json.loads(server.stdout.readline())["killed"])
-
-        yield send
-        server.stdin.close()
-
-
-def acknowledged(folder: Path) -> int:
-    path = folder / "acked"
-    numbers = [int(line) for line in path.read_text().split()] if path.exists() else []
-    return max(numbers, default=0)
-
-
-def pieces(facts: Iterator[tuple[int, Fact]]) -> list[bytes]:
-    """Return facts with blocks of scans cut into single scans."""
-    out = []
-    for _, f in facts:
-        out += (
-            [encode_fact(f.cut(i, i + 1)) for i in range(len(f))]
-            if isinstance(f, ScansTaken)
-            else [encode_fact(f)]
-        )
-    return out
-
-
-def check(folder: Path, journal: Journal) -> int:
-    """Assert that the journal holds whole batches, all acknowledged ones among them; return its end."""
-    last = journal.last_seq
-    assert last >= acknowledged(folder)
-    for frame in ("H1", "H2"):
-        wanted = ((s, fact_of(s)) for s in range(1, last + 1) if fact_of(s).frame in (frame, ""))
-        assert pieces(journal.facts(frame=frame)) == pieces(wanted)
-    if last:
-        assert journal.status() == {"last": last}
-        assert journal.has_finding(f"H1|S-1|stage|{last}|1")
-        snapshot = journal.snapshot("H1")
-        assert snapshot is not None
-        assert (snapshot.seq, snapshot.data) == (last, str(last).encode())
-        assert journal.outbox()[-1].id == f"m{last}"
-    assert [t for t in verify(folder / "j") if t.kind != NOTE] == []
-    return last
-
-
-def test_kills_at_random_moments_lose_nothing_acknowledged(order: Order) -> None:
-    """The hand that pulls the plug does not wait for a good moment; ten kills go into each record."""
-    random = Random(20)
-    grown = 0
-    for _ in range(-(-KILLS // 10)):
-        with quick_folder() as folder:
-            before = 0
-            for _ in range(10):
-                order(folder, seed=random.randrange(1 << 30), after_s=random.random() ** 2 * 0.06)
-                with open_journal(folder / "j") as journal:
-                    last = check(folder, journal)
-                    assert not any("damaged" in notice for notice in journal.notices)
-                assert last >= before
-                grown += last - before
-                before = last
-    assert grown > KILLS, "the children must have come to write something"
-
-
-POINTS = [
-    (point, count)
-    for point, counts in {
-        "commit.before": (1, 2, 9), "commit.after": (1, 2, 9), "checkpoint.before": (1, 3),
-        "checkpoint.after": (1, 3), "seal.packed": (1, 2, 5),
-        "seal.written": (1, 2, 5), "seal.moved": (1, 2, 5),
-        "migrate.before": (1, 2), "migrate.inside": (1, 2), "migrate.after": (1, 2),
-    }.items()
-    for count in counts
-]  # fmt: skip
-
-
-@pytest.mark.parametrize(("point", "count"), POINTS)
-def test_a_kill_at_a_named_point_loses_nothing_acknowledged(order: Order, point: str, count: int) -> None:
-    """The moments that matter are few and short; random kills seldom hit them."""
-    with quick_folder() as folder:
-        assert order(folder, seed=count, point=point, count=count), "the child must get there"
-        with open_journal(folder / "j") as journal:
-            last = check(folder, journal)
-        assert not order(folder, seed=count, commits=5)
-        with open_journal(folder / "j") as journal:
-            assert check(folder, journal) > last
-            while journal.seal(whole=False):
-                pass
-            check(folder, journal)
+    with fork_server() as order:
+        yield order
 
 
 @pytest.mark.parametrize("count", [1, 2, 3])
@@ -157,7 +55,7 @@ def test_an_io_error_is_final_and_what_was_acknowledged_stands(order: Order) -> 
         assert text[-1].startswith("JournalBroken: ")
         (folder / "acked").write_text("\n".join(text[:-1]))
         with open_journal(folder / "j") as journal:
-            assert check(folder, journal) == int(text[-2])
+            assert check(journal, acknowledged(folder)) == int(text[-2])
 
 
 def test_a_full_disk_refuses_a_batch_and_goes_on_when_there_is_room() -> None:

@@ -1,0 +1,199 @@
+"""After a power cut every acknowledged scan is there unaltered, and at most the open batch is lost."""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
+from pathlib import Path
+from random import Random
+from typing import Any
+from unittest.mock import patch
+
+import pytest
+from cut_disk import Disk, Recorder, after_cut, as_written, recorded
+from kill_cases import check
+from sqlite_tap import tap
+from store_cases import open_journal, quick_folder
+from store_child import batch_of, write
+
+from daq.store import chunks, journal
+from daq.store.errors import JournalError
+from daq.store.rows import encoded
+from daq.store.schema import (
+    HOST_FILE,
+    MIGRATIONS,
+    connect,
+    create_private,
+    make_folder,
+    migrate,
+    prepare_writing,
+    transaction,
+)
+from daq.store.verify import NOTE, verify
+
+LIVES = 5
+"""Power cuts that go into one record."""
+FIRST, MIGRATION, REPLACED = "first start", "migration", "replacement of a damaged file"
+
+pytestmark = pytest.mark.skipif(
+    tap() is None, reason="Python's SQLite is linked in; its calls cannot be heard"
+)
+
+
+@pytest.fixture(autouse=True)
+def _small() -> Iterator[None]:
+    """Make chunks whole and checkpoints due soon, so that short lives meet them."""
+    with patch.object(chunks, "CHUNK_SCANS", 20), patch.object(journal, "CHECKPOINT_BYTES", 100_000):
+        yield
+
+
+def live(folder: Path, seed: int, commits: int) -> Recorder:
+    """Let the store work in ``folder`` for some commits; return the record of what reached its files."""
+    random = Random(seed)
+    with recorded(folder, random) as recorder:
+        write(
+            folder / "j", seed, commits, recorder.say,
+            begun=lambda last: recorder.say("begun", last),
+            acknowledged=lambda last: recorder.say("acknowledged", last),
+        )  # fmt: skip
+    return recorder
+
+
+@contextmanager
+def laid_out(disk: Disk) -> Iterator[Path]:
+    """A folder in memory that holds ``disk``."""
+    with quick_folder() as folder:
+        disk.write_to(folder / "disk")
+        yield folder / "disk"
+
+
+def first_disk(how: str, random: Random) -> tuple[Disk, int]:
+    """Return the disk that a series begins with, and the last number acknowledged there."""
+    if how == FIRST:
+        return Disk(), 0
+    with quick_folder() as folder:
+        if how == MIGRATION:
+            return of_the_version_before(folder, random)
+        last = live(folder, random.randrange(1 << 30), 12).said("acknowledged")[-1]
+        with closing(sqlite3.connect(folder / "j" / HOST_FILE)) as connection:
+            connection.execute("PRAGMA user_version = 7")  # no longer what the table inside says
+        return Disk.read_from(folder), last
+
+
+def of_the_version_before(folder: Path, random: Random) -> tuple[Disk, int]:
+    """Return a disk with a host file as the program before the newest migration left it."""
+    host = folder / "j" / HOST_FILE
+    make_folder(host.parent)
+    create_private(host)
+    with closing(connect(host, "rw")) as connection:
+        prepare_writing(connection)
+        migrate(connection, lambda point: None, MIGRATIONS[:-1])
+        last = 0
+        with transaction(connection):
+            connection.execute("INSERT INTO meta VALUES ('journal', 'abcd'), ('site', 'hall-a')")
+        for _ in range(random.randint(1, 8)):
+            batch = batch_of(last + 1, random.choice((1, 2, 9)))
+            seqs = range(last + 1, last + 1 + len(batch.facts))
+            last = seqs.stop - 1
+            with transaction(connection):
+                journal._put_facts(connection, seqs, [encoded(fact) for fact in batch.facts])
+                journal._put_findings(connection, [(f, journal.encode_finding(f)) for f in batch.findings])
+                journal._put_outbox(connection, batch)
+                journal._put_rest(connection, seqs, batch)
+                connection.execute("INSERT OR REPLACE INTO status VALUES ('last', ?)", (str(last),))
+        if random.random() < 0.5:  # ended by a kill: the write-ahead file is still there
+            return Disk.read_from(folder), last
+    return Disk.read_from(folder), last
+
+
+def cut_anywhere(recorder: Recorder, random: Random) -> tuple[int, str]:
+    """Return how many notes come before the cut, and in what it falls; half fall in the opening."""
+    notes = recorder.notes
+    opened = next(i for i, n in enumerate(notes) if n[:2] == ("said", "opened"))
+    closing = next((i for i, n in enumerate(notes) if n[:2] == ("said", "closing")), len(notes))
+    upto = random.randint(0, opened) if random.random() < 0.4 else random.randint(0, len(notes))
+    return upto, "opening" if upto <= opened else "work" if upto <= closing else "closing"
+
+
+def survives(disk: Disk, acked: int, begun: int, *, replaced: bool) -> int:
+    """Assert that nothing acknowledged is lost or altered on ``disk``; return the last number there."""
+    with laid_out(disk) as root, open_journal(root / "j") as j:
+        last = check(j, acked, replaced=replaced)
+        assert last in (acked, begun), "at most the open batch is lost"
+        assert replaced or not any("damaged" in notice for notice in j.notices)
+    return last
+
+
+def series(seed: int, lives: int, faults: Any) -> None:
+    """Cut the power of one record again and again, each life beginning where the cut before left it."""
+    random = Random(seed)
+    how = random.choice((FIRST, FIRST, MIGRATION, REPLACED))
+    disk, last = first_disk(how, random)
+    for number in range(lives):
+        with laid_out(disk) as root:
+            recorder = live(root, random.randrange(1 << 30), random.choice((0, 1, 3, 10, 30)))
+        upto, where = cut_anywhere(recorder, random)
+        acked = max([last, *recorder.said("acknowledged", upto)])
+        begun = max([last, *recorder.said("begun", upto)])
+        disk = after_cut(recorder, upto, random)
+        last = survives(disk, acked, begun, replaced=how == REPLACED)
+        where = how if where == "opening" and number == 0 else where
+        faults.count(
+            2,
+            f"in {where}",
+            "nothing open"
+            if acked == begun
+            else "the open batch kept"
+            if last == begun
+            else "the open batch lost",
+        )
+
+
+def test_a_power_cut_anywhere_loses_nothing_acknowledged(faults: Any) -> None:
+    """Only fsynced bytes survive, the last write torn; also in first start, migration and recovery."""
+    for i in range(0, faults.cuts, LIVES):
+        seed = faults.seed + i // LIVES
+        try:
+            series(seed, min(LIVES, faults.cuts - i), faults)
+        except (AssertionError, JournalError, sqlite3.Error) as error:
+            raise AssertionError(f"again with: --fault-seed {seed} --cuts {LIVES}") from error
+
+
+def test_a_power_cut_at_every_moment_of_a_first_start_is_got_over(faults: Any) -> None:
+    """A host file is made through a rollback journal; whoever only reads cannot undo what is half done."""
+    with quick_folder() as folder:
+        recorder = live(folder, 1, 0)
+    opened = next(i for i, n in enumerate(recorder.notes) if n[:2] == ("said", "opened"))
+    for upto in range(opened + 1):
+        survives(after_cut(recorder, upto, Random(upto)), 0, 0, replaced=False)
+        faults.count(2, "at every moment of a first start", "started")
+
+
+def test_a_power_cut_at_every_moment_of_making_an_archive_is_got_over(faults: Any) -> None:
+    """A sealed file leaves the write-ahead mode when its test is over, also through a rollback journal."""
+    with quick_folder() as root, recorded(root, Random(1)) as recorder, open_journal(root / "j") as j:
+        j.commit(batch_of(1, 9))
+        begun = len(recorder.notes)
+        while j.seal("H1", whole=False, finish=True):
+            pass
+        ended = len(recorder.notes)
+    for upto in range(begun, ended + 1):
+        for seed in range(3):
+            survives(after_cut(recorder, upto, Random(seed)), 9, 9, replaced=False)
+            faults.count(2, "at every moment of making an archive", "all there")
+
+
+def test_the_record_of_a_run_tells_all_of_it() -> None:
+    """A cut is only as true as the record: with nothing cut, it must give the very files that are there."""
+    with quick_folder() as folder:
+        for seed in (1, 2):  # a first start, then one that goes on
+            recorder = live(folder, seed, 60)
+            there = Disk.read_from(folder)
+            told = as_written(recorder)
+            assert told.files.keys() == there.files.keys()
+            assert [n for n in told.files if told.files[n] != there.files[n]] == []
+            assert told.folders == there.folders
+        kinds = {note[0] for note in recorder.notes}
+        assert kinds >= {"made", "wrote", "truncated", "synced", "removed", "folder synced"}
+        assert [t for t in verify(folder / "j") if t.kind != NOTE] == []
