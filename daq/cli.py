@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import Final
 
 from daq import __version__
-from daq.exits import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
+from daq.exits import BROKEN, BUSY, DAMAGED, INPUT, OK, TROUBLE, USAGE
 from daq.records import UpturnError
 
 EPILOG: Final = f"""\
@@ -23,6 +23,7 @@ exit codes:
   {USAGE}   wrong arguments or settings; every mistake is on stderr as file:line:col: path: message
   {INPUT}   an input cannot be read; the message names file, line and column
   {BUSY}   the journal is held by another running daemon, which the message names
+  {DAMAGED}   the record is damaged: verify names each fault
   {BROKEN}  disk or file system error: nothing more was acknowledged; the service manager restarts
 
 Upturn advises. Never wire it as the only protection of people, furnaces or specimens.
@@ -121,9 +122,10 @@ def parser() -> argparse.ArgumentParser:
         "replay",
         "run a recording or a journal through the same engine, at full speed",
         "examples:\n  upturn replay --rules LAB.yaml --frame H1 H1.csv --findings out.jsonl\n"
-        "  upturn replay var/hall-a --findings out.jsonl\n",
+        "  upturn replay var/hall-a --findings out.jsonl\n"
+        "  upturn replay H1-S-1.zip --findings out.jsonl\n",
     )
-    p.add_argument("source", type=Path, metavar="FILE.csv|JOURNAL", help="a recording, or a journal folder")
+    p.add_argument("source", type=Path, metavar="SOURCE", help="a recording, a journal folder or an archive")
     p.add_argument("--rules", type=Path, metavar="LAB.yaml", help="the lab file (for a recording)")
     p.add_argument(
         "--frame", help="the frame (for a recording: which one it is of; for a journal: only this one)"
@@ -165,7 +167,13 @@ def parser() -> argparse.ArgumentParser:
     workers.add_argument("--workers", type=count, metavar="N", help="processes (default: one a core)")
     workers.add_argument("--cluster", metavar="ADDRESS", help="scheduler of a dask cluster: tcp://HOST:PORT")
 
-    p = add("export", "write the raw record of a frame, or its findings, as plain files")
+    p = add(
+        "export",
+        "write the raw record of a frame, its findings, or the archive of one test, as plain files",
+        "examples:\n  upturn export var/hall-a --frame H1 --csv H1.csv\n"
+        "  upturn export var/hall-a --bundle H1.zip --test H1\n"
+        "  upturn export var/hall-a --bundle H1-S-1.zip --test H1@S-1\n",
+    )
     p.add_argument(
         "journal", type=Path, metavar="JOURNAL", help="the journal folder, or the lab file that names it"
     )
@@ -176,6 +184,43 @@ def parser() -> argparse.ArgumentParser:
     p.add_argument(
         "--findings", type=Path, metavar="OUT.jsonl", help="the findings as concluded live ('-' for stdout)"
     )
+
+    p.add_argument(
+        "--bundle",
+        type=Path,
+        metavar="OUT.zip",
+        help="one test in one file: what verify, replay and adopt take",
+    )
+    p.add_argument(
+        "--test",
+        metavar="TEST",
+        help="for --bundle: FRAME or FRAME/POSITION, the newest test there; @SPECIMEN or @N: another one",
+    )
+
+    p = add(
+        "verify",
+        "look for any change, gap or damage in the record; nothing is written",
+        "examples:\n  upturn verify var/hall-a\n  upturn verify H1-S-1.zip --noted 4f0c9a7733be21d0\n\n"
+        "A daemon may be running meanwhile. One line a test, one a fault. The hash chain shows any change\n"
+        "after which not every later hash was made anew; against someone who can do that, note the last\n"
+        "hash of a test elsewhere and give it with --noted later.\n",
+    )
+    p.add_argument(
+        "places", type=Path, nargs="+", metavar="PLACE", help="a journal folder, a sealed file or an archive"
+    )
+    p.add_argument("--json", action="store_true", help="one JSON object a line instead")
+    p.add_argument(
+        "--noted", action="append", metavar="HASH", help="a hash noted earlier, which must be there still"
+    )
+
+    p = add(
+        "adopt",
+        "begin a new journal with the test in an archive, so that this host goes on with it",
+        "Give the lab file a journal folder without a record and the frame with the same specimen; then\n"
+        "'upturn run' goes on with the test. Two hosts must not go on with one specimen.\n",
+    )
+    p.add_argument("bundle", type=Path, metavar="ARCHIVE.zip", help="what export --bundle wrote")
+    p.add_argument("lab", type=Path, metavar="LAB.yaml", help="the settings of this host")
 
     p = add(
         "listen", "print the alarms that arrive at a broker, with their ids (a subscriber to try things with)"

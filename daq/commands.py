@@ -6,6 +6,7 @@ import sys
 import time
 from argparse import Namespace
 from collections.abc import Callable, Iterator
+from contextlib import ExitStack
 from pathlib import Path
 from typing import TYPE_CHECKING, Final, TypeVar
 
@@ -13,6 +14,7 @@ from daq.exits import BROKEN, BUSY, INPUT, OK, TROUBLE, USAGE
 from daq.records import Fact, Finding, UpturnError
 
 if TYPE_CHECKING:  # a command imports what it needs when it runs, so that --help costs nothing
+    from daq.bundle import Archive
     from daq.lines import HowAt
     from daq.recording import Recording
     from daq.settings import Frame, Lab
@@ -88,17 +90,29 @@ def tell(args: Namespace) -> int:
 
 
 def replay(args: Namespace) -> int:
-    """Run a recording or a journal through the engine."""
-    from daq import export, replay
+    """Run a recording, a journal or an archive through the engine."""
+    with ExitStack() as unpacked:
+        return _replay(args, unpacked)
+
+
+def _replay(args: Namespace, unpacked: ExitStack) -> int:
+    from daq import bundle, export, replay
     from daq.engine import Engine
+    from daq.joining import joined
     from daq.lines import iso_utc, json_line, plain_line
 
     tally, engine = replay.Tally(), Engine()
+    archive: Archive | None = None
     how_at: HowAt = iso_utc
     plain_at: HowAt | None = None
     total: Callable[[], float] | None = None
     if args.source.is_dir():
         facts, whole = _journal_to_replay(args), True
+    elif bundle.is_bundle(args.source):
+        if args.rules is not None or args.frame is not None:
+            raise CommandError("got --rules or --frame with an archive, wanted neither: it has its own")
+        archive = unpacked.enter_context(bundle.opened(args.source))
+        facts, whole = joined(fact for _, fact in archive.facts()), True
     else:
         frame, recording = _recording_to_replay(args)
         for note in recording.notes:
@@ -109,6 +123,8 @@ def replay(args: Namespace) -> int:
     if args.cut is not None:
         facts = replay.cut_at_random(facts, args.cut)
     found = replay.run(facts, tally, engine)
+    if archive is not None:
+        found = (f for f in found if archive.is_of(f))
     shown = _with_progress(found, total)
     if args.findings is None:
         for finding in shown:
@@ -172,8 +188,10 @@ def export_(args: Namespace) -> int:
     from daq import export
     from daq.store.journal import JournalReader
 
-    if args.csv is None and args.findings is None:
-        raise CommandError("export: wanted --csv OUT.csv or --findings OUT.jsonl")
+    if args.csv is None and args.findings is None and args.bundle is None:
+        raise CommandError("export: wanted --csv OUT.csv, --findings OUT.jsonl or --bundle OUT.zip")
+    if (args.bundle is None) != (args.test is None):
+        raise CommandError("export --bundle: wanted --bundle OUT.zip and --test FRAME[/POSITION] together")
     if args.csv is not None and args.frame is None:
         raise CommandError("export --csv: wanted --frame NAME, a recording is of one frame")
     folder = journal_of(args.journal)
@@ -193,6 +211,43 @@ def export_(args: Namespace) -> int:
             with export.open_out(args.findings, keep=folder) as out:
                 count = export.write_findings(mine, out)
             print(f"upturn export: {count} findings to {args.findings}", file=sys.stderr)
+    return OK if args.bundle is None else _export_bundle(folder, args.test, args.bundle)
+
+
+def _export_bundle(folder: Path, test: str, path: Path) -> int:
+    from daq import bundle, export
+
+    export.keep_apart(path, folder)
+    manifest, notices = bundle.write_bundle(folder, test, path)
+    for notice in notices:
+        print(f"upturn export: damaged in the journal: {notice}", file=sys.stderr)
+    print(
+        f"upturn export: {manifest['test']} {manifest['specimen']}: {manifest['scans']} scans, "
+        f"{len(manifest['chunks'])} chunks, {manifest['findings']} findings to {path}; "
+        f"last hash {bundle.last_hash(manifest)}",
+        file=sys.stderr,
+    )
+    return TROUBLE if notices else OK
+
+
+def verify(args: Namespace) -> int:
+    """Look for any change, gap or damage in the record."""
+    from daq import checking
+
+    return checking.command(args)
+
+
+def adopt(args: Namespace) -> int:
+    """Begin a new journal with the test in an archive."""
+    from daq import bundle, settings
+    from daq.adopt import adopt
+
+    lab = settings.load(args.lab)
+    if not bundle.is_bundle(args.bundle):
+        raise CommandError(f"{args.bundle}: got no archive, wanted what export --bundle wrote")
+    with bundle.opened(args.bundle) as archive:
+        facts, findings = adopt(archive, lab, lambda text: print(f"upturn adopt: {text}", file=sys.stderr))
+    print(f"{archive.test} {archive.specimen}: {facts} facts and {findings} findings in {lab.journal}")
     return OK
 
 
@@ -262,6 +317,9 @@ def _with_progress(items: Iterator[T], share: Callable[[], float] | None) -> Ite
 
 def exit_code(error: UpturnError) -> int:
     """Return the exit code that an error stands for."""
+    from daq.adopt import AdoptError
+    from daq.bundle import BundleError
+    from daq.checking import CheckError
     from daq.export import ExportError
     from daq.recording import RecordingError
     from daq.settings import SettingsError
@@ -270,6 +328,9 @@ def exit_code(error: UpturnError) -> int:
     table: tuple[tuple[type[UpturnError], int], ...] = (
         (SettingsError, USAGE),
         (CommandError, USAGE),
+        (CheckError, INPUT),
+        (BundleError, INPUT),
+        (AdoptError, INPUT),
         (JournalBusy, BUSY),
         (JournalBroken, BROKEN),
         (JournalFull, BROKEN),
@@ -288,4 +349,6 @@ RUN: Final[dict[str, Callable[[Namespace], int]]] = {
     "export": export_,
     "listen": listen,
     "prove": prove,
+    "verify": verify,
+    "adopt": adopt,
 }

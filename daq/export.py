@@ -6,7 +6,7 @@ import sys
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TextIO
+from typing import Protocol, TextIO
 
 import numpy as np
 
@@ -18,20 +18,34 @@ from daq.records import (
     TICKS_PER_S,
     BurstTaken,
     ClockStepped,
+    Fact,
     Finding,
     IntArray,
     RulesAdopted,
     ScansTaken,
     UpturnError,
 )
-from daq.store.journal import JournalReader
 
 
 class ExportError(UpturnError):
     """What was asked for is not in the record, or cannot be written."""
 
 
-def columns_of(reader: JournalReader, frame: str) -> list[str]:
+class Source(Protocol):
+    """What gives the facts of a frame: a journal, or an archive."""
+
+    @property
+    def folder(self) -> Path:
+        """Return where it is, for messages."""
+
+    def frames(self) -> list[str]:
+        """Return the frames that are there."""
+
+    def facts(self, *, frame: str | None = None) -> Iterator[tuple[int, Fact]]:
+        """Yield (seq, fact) in order."""
+
+
+def columns_of(reader: Source, frame: str) -> list[str]:
     """Return the names of all channels that scans of ``frame`` ever had.
 
     Raises:
@@ -48,7 +62,7 @@ def columns_of(reader: JournalReader, frame: str) -> list[str]:
     return columns
 
 
-def write_recording(reader: JournalReader, frame: str, columns: list[str], out: TextIO) -> int:
+def write_recording(reader: Source, frame: str, columns: list[str], out: TextIO) -> int:
     """Write the raw readings of ``frame`` in the recording format; return the number of scans.
 
     A bad reading is an empty cell. Numbers are written so that reading them gives the same
@@ -105,6 +119,17 @@ def write_findings(findings: Iterable[Finding], out: TextIO) -> int:
     return count
 
 
+def keep_apart(path: Path, keep: Path) -> None:
+    """Check that ``path`` is no part of the source ``keep``, a file or a journal folder.
+
+    Raises:
+        ExportError: it is; writing there would destroy what is read.
+    """
+    real, source = path.resolve(), keep.resolve()
+    if real == source or (source.is_dir() and source in real.parents):
+        raise ExportError(f"{path}: got a place in the source {keep}, wanted another file to write")
+
+
 @contextmanager
 def open_out(path: Path, *, keep: Path | None = None) -> Iterator[TextIO]:
     """Open ``path`` for writing text, '-' for stdout, which stays open.
@@ -120,9 +145,7 @@ def open_out(path: Path, *, keep: Path | None = None) -> Iterator[TextIO]:
         return
     try:
         if keep is not None:
-            real, source = path.resolve(), keep.resolve()
-            if real == source or (source.is_dir() and source in real.parents):
-                raise ExportError(f"{path}: got a place in the source {keep}, wanted another file to write")
+            keep_apart(path, keep)
         with path.open("w", encoding="utf-8", newline="\n") as out:
             yield out
     except BrokenPipeError:

@@ -10,7 +10,7 @@ from __future__ import annotations
 import sqlite3
 from collections import OrderedDict
 from collections.abc import Iterator
-from contextlib import suppress
+from contextlib import nullcontext, suppress
 from pathlib import Path
 from typing import Final
 from urllib.parse import quote
@@ -358,7 +358,7 @@ def _numbers(connection: sqlite3.Connection, *, last_only: bool = False) -> list
 
 def begin(connection: sqlite3.Connection, frame: str, journal: str, site: str, **more: str) -> None:
     """Make the tables of a sealed file, in one transaction; ``more`` is said of it beside the usual."""
-    with transaction(connection):
+    with nullcontext() if connection.in_transaction else transaction(connection):
         for statement in _TABLES:
             connection.execute(statement)
         about = {"frame": frame, "journal": journal, "site": site, "format": str(VERSION), **more}
