@@ -138,7 +138,7 @@ class House:
         )
         self._lines = self._make_lines(bench.instruments, lambda name: standing(engine, name))
         self._writer.take_now(first_facts(lab, engine, clock, ended))
-        self._backlog = lambda after, limit: journal.outbox(after=after, limit=limit)
+        self._backlog = self._writer.backlog
 
     # --- buses ---------------------------------------------------------------------------
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 import threading
 from collections import deque
 from collections.abc import Iterable
+from dataclasses import dataclass
 
 from daq.records import Fact, ScansTaken
 from daq.store.committer import Gather
@@ -20,12 +21,23 @@ class Acked(tuple[int, ...]):
     __slots__ = ()
 
 
+@dataclass(frozen=True, slots=True)
+class Aside:
+    """An outbox row that is not what was committed: to be set aside, so that those behind it get through."""
+
+    seq: int
+    why: str
+
+
+Item = Fact | Acked | Aside
+
+
 class Inlet:
     """A queue for many putting threads and one taking thread. ``lost`` counts scans without room."""
 
     def __init__(self, most: int) -> None:
-        self._queue: Gather[Fact | Acked] = Gather(most)
-        self._behind: deque[Fact | Acked] = deque()
+        self._queue: Gather[Item] = Gather(most)
+        self._behind: deque[Item] = deque()
         self._lock = threading.Lock()
         self.lost = 0
 
@@ -35,13 +47,13 @@ class Inlet:
             with self._lock:
                 self.lost += 1
 
-    def news(self, item: Fact | Acked) -> None:
+    def news(self, item: Item) -> None:
         """Put anything that is not a scan. Never waits; it cannot come ahead of the scans before it."""
         with self._lock:
             if self._behind or not self._queue.put(item, 0.0):
                 self._behind.append(item)
 
-    def take(self, most: int, timeout_s: float) -> list[Fact | Acked]:
+    def take(self, most: int, timeout_s: float) -> list[Item]:
         """Return what waits, in order, about ``most`` at a time; an empty list where nothing came."""
         items = self._queue.take(most, timeout_s)
         if len(items) < most:
@@ -50,6 +62,6 @@ class Inlet:
                 self._behind.clear()
         return items
 
-    def news_all(self, items: Iterable[Fact | Acked]) -> None:
+    def news_all(self, items: Iterable[Item]) -> None:
         for item in items:
             self.news(item)

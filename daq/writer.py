@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import threading
 import time
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Sequence
 from typing import Any, Final
 
 from daq import __version__
@@ -20,7 +20,7 @@ from daq.clock import Clock
 from daq.codec import decode_fact
 from daq.door import Door
 from daq.engine import HOST, Engine
-from daq.inlet import Acked, Inlet
+from daq.inlet import Acked, Aside, Inlet, Item
 from daq.publish import Publisher, rows_for
 from daq.records import TICKS_PER_S, ConditionChanged, Fact, Finding, ScansTaken, Stamp, Ticked
 from daq.store.errors import JournalBroken, JournalBusy, JournalDamaged, JournalError, JournalFull
@@ -36,6 +36,8 @@ STATUS_EVERY_S: Final = 1.0
 CURVE_EVERY: Final = 5
 """A curve goes with every fifth status: it changes slowly and is the bulk of the bytes."""
 SEAL_FROM_ROWS: Final = 4096
+OFFER_MOST: Final = 1000
+"""Rows handed on after a commit; the publisher reads the outbox for itself where there are more."""
 WAL_MOST: Final = 64 << 20
 """Bytes of the write-ahead file from which it counts as growing."""
 TICK_SLACK_S: Final = 1.0
@@ -76,6 +78,7 @@ class Writer:
         self._curves: dict[str, Any] = {}
         self._ticked: dict[str, int] = {}
         self._unsealed: set[str] = set()
+        self._aside: set[int] = set()
         self._wal_grows = False
         self.beat = 0
         self.broken: str | None = None
@@ -103,15 +106,27 @@ class Writer:
         """Take facts before the thread runs (rules, the start itself), in one commit."""
         self._write(list(facts), [], threading.Event())
 
-    def _turn(self, items: list[Fact | Acked], stop: threading.Event, *, last: bool = False) -> None:
+    def _turn(self, items: list[Item], stop: threading.Event, *, last: bool = False) -> None:
         acked = tuple(row for item in items if isinstance(item, Acked) for row in item)
-        facts: list[Fact] = [item for item in items if not isinstance(item, Acked)]
+        facts: list[Fact] = [item for item in items if not isinstance(item, Acked | Aside)]
+        aside = [item for item in items if isinstance(item, Aside) and self._new_aside(item)]
+        facts += [self._told_aside(item) for item in aside]
         entered, files = self._door.look(tuple(self._engine.tests))
         facts += entered
         facts += self._ticks(facts)
         if facts or acked or last or time.monotonic() >= self._status_at:
-            self._write(facts, files, stop, acked, last=last)
+            self._write(facts, files, stop, acked, [(item.seq, item.why) for item in aside], last=last)
         self.beat += 1
+
+    def _new_aside(self, item: Aside) -> bool:
+        """Whoever reads the outbox before the commit meets the same row again: it is told once."""
+        new = item.seq not in self._aside
+        self._aside.add(item.seq)
+        return new
+
+    def _told_aside(self, item: Aside) -> Fact:
+        message = f"set aside: {item.why}"
+        return ConditionChanged(self._clock.stamp(), HOST, "outbox", "message_damaged", True, message)
 
     def _ticks(self, facts: list[Fact]) -> list[Fact]:
         """A tick for every frame that has a deadline behind it and that no fact here brings the time to.
@@ -140,6 +155,7 @@ class Writer:
         files: list[str],
         stop: threading.Event,
         acked: tuple[int, ...] = (),
+        aside: Sequence[tuple[int, str]] = (),
         *,
         last: bool = False,
     ) -> None:
@@ -162,7 +178,16 @@ class Writer:
             self._keep_curves(status)
             self._watch_log()
         self._commit(
-            Batch(tuple(coded), tuple(findings), tuple(rows), acked, tuple(snapshots), status, tuple(files)),
+            Batch(
+                tuple(coded),
+                tuple(findings),
+                tuple(rows),
+                acked,
+                tuple(snapshots),
+                status,
+                tuple(files),
+                tuple(aside),
+            ),
             stop,
         )
         self.committed_facts += len(facts)
@@ -220,7 +245,9 @@ class Writer:
             raise
         except JournalError as error:
             self._alarm_from_memory("journal_trouble", f"written without the newest status: {error}")
-            without = Batch(batch.facts, batch.findings, batch.outbox, batch.acked, inbox=batch.inbox)
+            without = Batch(
+                batch.facts, batch.findings, batch.outbox, batch.acked, inbox=batch.inbox, aside=batch.aside
+            )
             self._journal.commit(without)
 
     def _seal(self) -> None:
@@ -248,7 +275,7 @@ class Writer:
             return
         if rows:
             try:
-                news: list[OutboxRow] = self._journal.outbox(after=self._offered)
+                news = self.backlog(self._offered, OFFER_MOST)
             except JournalDamaged as error:  # the rows are committed: a start in better times sends them
                 self._line(f"journal_trouble: {error}")
                 news = []
@@ -257,6 +284,12 @@ class Writer:
                 self._publisher.offer(news)
         for name, told in status.items():
             self._publisher.status(name, {k: v for k, v in told.items() if k != "curve"})
+
+    def backlog(self, after: int, most: int) -> list[OutboxRow]:
+        """Return what waits for the broker, in order; a damaged row is set aside. From any thread."""
+        return self._journal.outbox(
+            after=after, limit=most, on_damage=lambda seq, why: self._inlet.news(Aside(seq, why))
+        )
 
     def _watch_log(self) -> None:
         """A reader that holds an old state open keeps the write-ahead file from being folded in."""

@@ -187,6 +187,10 @@ _TABLE: Final = (
         off_delay_s=5.0, escalate_s=4 * _HOUR,
     ),
     AlarmKind(
+        "message_damaged", _L, "a message for the broker was damaged in the outbox and set aside",
+        "What it said is in the record: look there; have `upturn verify` look at the disk.", momentary=True,
+    ),
+    AlarmKind(
         "quarantined", _H, "a fault of this program has stopped the evaluation of a test",
         "Readings are still recorded. Report the fault; judge the test by eye until it is mended.",
         escalate_s=1 * _HOUR,

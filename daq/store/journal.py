@@ -315,6 +315,8 @@ def _put_outbox(connection: sqlite3.Connection, batch: Batch) -> tuple[str, ...]
 def _put_rest(connection: sqlite3.Connection, seqs: range, batch: Batch) -> None:
     last = seqs.stop - 1
     connection.executemany("UPDATE outbox SET acked = 1 WHERE seq = ?", ((seq,) for seq in batch.acked))
+    connection.executemany("INSERT OR IGNORE INTO aside VALUES (?, ?)", batch.aside)
+    connection.executemany("UPDATE outbox SET acked = 2 WHERE seq = ?", ((seq,) for seq, _ in batch.aside))
     for s in batch.snapshots:
         seq = last if s.seq is None else s.seq
         connection.execute(

@@ -211,15 +211,47 @@ class JournalReading(ABC):
         with self._reading() as connection:
             return connection.execute("SELECT 1 FROM finding WHERE id = ?", (id,)).fetchone() is not None
 
-    def outbox(self, *, after: int = 0, limit: int = 1000) -> list[OutboxRow]:
-        """Return the messages that nobody acknowledged yet, in the order of commit."""
+    def outbox(
+        self,
+        *,
+        after: int = 0,
+        limit: int = 1000,
+        on_damage: Callable[[int, str], None] | None = None,
+    ) -> list[OutboxRow]:
+        """Return the messages that wait (not acknowledged, not set aside), in the order of commit.
+
+        Fewer than ``limit`` mean that there are no more.
+
+        Args:
+            on_damage: Told about each damaged row (its number, what is wrong), which is then left out.
+
+        Raises:
+            JournalDamaged: a row is not what was written, and ``on_damage`` is None.
+        """
+        good: list[OutboxRow] = []
+        while (room := limit - len(good)) > 0:
+            with self._reading() as connection:
+                rows = connection.execute(
+                    "SELECT seq, id, topic, payload, retain, expires_s, checksum FROM outbox "
+                    "WHERE acked = 0 AND seq > ? ORDER BY seq LIMIT ?",
+                    (after, room),
+                ).fetchall()
+            for row in rows:
+                try:
+                    good.append(_message(f"{self._host} outbox row {row[0]}", row))
+                except JournalDamaged as damage:
+                    if on_damage is None:
+                        raise
+                    on_damage(row[0], f"{damage} (id {row[1]!r}, topic {row[2]!r})")
+            if len(rows) < room:
+                break
+            after = rows[-1][0]
+        return good
+
+    def aside(self) -> list[tuple[int, str]]:
+        """Return (number, why) of the messages that cannot be sent; they are still in the outbox."""
         with self._reading() as connection:
-            rows = connection.execute(
-                "SELECT seq, id, topic, payload, retain, expires_s, checksum FROM outbox "
-                "WHERE acked = 0 AND seq > ? ORDER BY seq LIMIT ?",
-                (after, limit),
-            ).fetchall()
-        return [_message(f"{self._host} outbox row {row[0]}", row) for row in rows]
+            return connection.execute("SELECT seq, why FROM aside ORDER BY seq").fetchall()
 
     def status(self) -> dict[str, Any]:
         """Return the newest status of every test, by its key."""

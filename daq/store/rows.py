@@ -73,7 +73,8 @@ class Snapshot:
 class Batch:
     """Everything that one transaction brings.
 
-    ``acked`` are outbox sequence numbers whose delivery was acknowledged. ``status`` replaces one
+    ``acked`` are outbox sequence numbers whose delivery was acknowledged, ``aside`` those (with the reason)
+    that cannot be delivered: they stay, and are offered no more. ``status`` replaces one
     JSON row per key (a test). ``inbox`` names the spool files whose entries are among ``facts``: a
     name is taken once, and a batch with a name taken before is refused as a whole.
     """
@@ -85,11 +86,12 @@ class Batch:
     snapshots: tuple[Snapshot, ...] = ()
     status: Mapping[str, Any] = field(default_factory=dict)
     inbox: tuple[str, ...] = ()
+    aside: tuple[tuple[int, str], ...] = ()
 
     def __bool__(self) -> bool:
         return bool(
             self.facts or self.findings or self.outbox or self.acked
-            or self.snapshots or self.status or self.inbox
+            or self.snapshots or self.status or self.inbox or self.aside
         )  # fmt: skip
 
 

@@ -50,6 +50,9 @@ MIGRATIONS: Final[tuple[tuple[str, ...], ...]] = (
         """CREATE TABLE gap (first_seq INTEGER PRIMARY KEY, last_seq INTEGER NOT NULL,
              why TEXT NOT NULL)""",
     ),
+    (  # 3: messages that are not what was committed: they stay in the outbox, with 2 under ``acked``
+        "CREATE TABLE aside (seq INTEGER PRIMARY KEY, why TEXT NOT NULL)",
+    ),
 )
 VERSION: Final = len(MIGRATIONS)
 

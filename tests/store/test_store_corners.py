@@ -19,7 +19,7 @@ from daq.store.errors import JournalBroken, JournalDamaged, JournalError, Journa
 from daq.store.journal import Journal, JournalReader
 from daq.store.lock import FolderLock
 from daq.store.rows import Batch, OutboxNew, checksum
-from daq.store.schema import connect
+from daq.store.schema import VERSION, connect
 from daq.store.seal import Sealer
 from daq.store.segments import SealedWriter, load, sealed_facts
 from daq.store.verify import DAMAGE, NOTE, verify, verify_sealed
@@ -311,7 +311,7 @@ def test_verify_names_pages_that_do_not_hold_together_and_a_wrong_header(folder:
     host = folder / "journal.sqlite"
     execute(host, "PRAGMA user_version = 1")
     assert any("format 1" in t for t in damages(folder))
-    execute(host, "PRAGMA user_version = 2")
+    execute(host, f"PRAGMA user_version = {VERSION}")
     data = bytearray(host.read_bytes())
     data[(root - 1) * 4096 : root * 4096] = bytes(4096)
     host.write_bytes(data)
