@@ -38,7 +38,7 @@ VERSION: Final = 1
 HOST_NAME: Final = "@host"
 """File of the facts that concern the whole host; no frame's file can have this name."""
 
-_TABLES: Final = (
+TABLES: Final = (
     "CREATE TABLE about (key TEXT PRIMARY KEY, value TEXT NOT NULL) WITHOUT ROWID",
     """CREATE TABLE chunk (number INTEGER PRIMARY KEY, first_seq INTEGER NOT NULL UNIQUE,
          last_seq INTEGER NOT NULL UNIQUE, facts INTEGER NOT NULL, scans INTEGER NOT NULL,
@@ -359,7 +359,7 @@ def _numbers(connection: sqlite3.Connection, *, last_only: bool = False) -> list
 def begin(connection: sqlite3.Connection, frame: str, journal: str, site: str, **more: str) -> None:
     """Make the tables of a sealed file, in one transaction; ``more`` is said of it beside the usual."""
     with nullcontext() if connection.in_transaction else transaction(connection):
-        for statement in _TABLES:
+        for statement in TABLES:
             connection.execute(statement)
         about = {"frame": frame, "journal": journal, "site": site, "format": str(VERSION), **more}
         about["checksum"] = about_check(about)

@@ -14,7 +14,7 @@ house's records) tells that. And what is rebuilt anyway has no check of its own:
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from contextlib import closing
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -34,6 +34,7 @@ from daq.store.rows import checksum
 from daq.store.schema import APPLICATION_ID, HOST_FILE, MIGRATIONS, transaction, version_of
 from daq.store.segments import (
     FOLDER,
+    TABLES,
     UnfinishedError,
     about_is_sound,
     about_of,
@@ -146,6 +147,9 @@ def _guarded(path: Path, troubles: Iterator[Trouble]) -> Iterator[Trouble]:
         yield from troubles
     except JournalDamaged as error:
         yield Trouble(DAMAGE, str(path), str(error), "an undamaged file", path.name)
+    except (TypeError, ValueError, KeyError, AttributeError, IndexError, OverflowError) as error:
+        # a value of another kind than was written there: the text of a table's form was changed, say
+        yield Trouble(DAMAGE, str(path), repr(error), "values of the kind that was written", path.name)
     except (sqlite3.Error, OSError) as error:
         wanted = "a file that can be read to its end"
         yield Trouble(DAMAGE, str(path), str(explain(error, "reading")), wanted, path.name)
@@ -171,6 +175,7 @@ def _verify_host(host: Path, seen: _Seen) -> Iterator[Trouble]:
                     DAMAGE, f"{host} header", f"program {program:#x}, format {version}",
                     f"{APPLICATION_ID:#x}, {meta.get('schema')}", host.name,
                 )  # fmt: skip
+            yield from _forms(connection, host, (s for made in MIGRATIONS[:version] for s in made))
             (seen.last,) = connection.execute("SELECT last_seq FROM head").fetchone()
             seen.survey.last_seq = seen.last
             if mark is not None and mark.journal == seen.journal and mark.last_seq > (seen.last or 0):
@@ -202,6 +207,16 @@ def _integrity(connection: sqlite3.Connection, path: Path) -> Iterator[Trouble]:
     if complaints != ["ok"]:
         for complaint in complaints:
             yield Trouble(DAMAGE, str(path), complaint, "pages that hold together", path.name)
+
+
+def _forms(connection: sqlite3.Connection, path: Path, statements: Iterable[str]) -> Iterator[Trouble]:
+    """Compare the tables' own description, which SQLite takes as it stands, with that of this format."""
+    rows = connection.execute("SELECT sql FROM sqlite_schema WHERE sql NOT NULL AND name NOT LIKE 'sqlite_%'")
+    there = {" ".join(str(sql).split()) for (sql,) in rows}
+    wanted = {" ".join(s.split()) for s in statements if s.startswith("CREATE")}
+    if there != wanted:
+        got, meant = sorted(there - wanted), sorted(wanted - there)
+        yield Trouble(DAMAGE, f"{path} form of the tables", f"{got}", f"{meant}", path.name)
 
 
 def _verify_tail(connection: sqlite3.Connection, host: Path, seen: _Seen) -> Iterator[Trouble]:
@@ -279,6 +294,11 @@ def _walk_file(path: Path, named: dict[int, _Named], seen: _Seen, *, alone: bool
         about = about_of(connection, path)
         frame = about["frame"]
         seen.survey.files.append(path.name)
+        (program,) = connection.execute("PRAGMA application_id").fetchone()
+        if program != APPLICATION_ID:
+            got, wanted = f"program {program:#x}", f"{APPLICATION_ID:#x}"
+            yield Trouble(DAMAGE, f"{path} header", got, wanted, path.name, frame)
+        yield from _forms(connection, path, TABLES)
         if not about_is_sound(about):
             yield Trouble(DAMAGE, f"{path} about", "other text", "what was written", path.name, frame)
         if seen.journal is not None and about["journal"] != seen.journal:
@@ -293,7 +313,13 @@ def _walk_file(path: Path, named: dict[int, _Named], seen: _Seen, *, alone: bool
         begin, origin = origin_of(about)
         previous: bytes | None = origin
         last = 0
-        for number in range(min([begin, *ends]), max([begin - 1, *ends, *named]) + 1):
+        expected = begin
+        for number in sorted({*ends, *named}):
+            if number != expected:
+                got, wanted = f"none, next is {number}", "every number once"
+                yield Trouble(DAMAGE, f"{path} chunk {expected}", got, wanted, path.name, frame)
+                previous = None
+            expected = number + 1
             place = f"{path} chunk {number}"
             entry = named.get(number)
             first, end = (entry.first, entry.last) if entry else ends.get(number, (None, None))
@@ -367,8 +393,8 @@ def _compare(
     holds = (chunk.frame, chunk.first_seq, chunk.last_seq, chunk.facts, chunk.scans, chain)
     if told != holds:
         yield (
-            f"{holds[:5]}, chain {chain.hex()[:12]}",
-            f"{told[:5]}, chain {entry.chain.hex()[:12]} as in the host file",
+            f"{holds[:5]}, chain {chain.hex()}",
+            f"{told[:5]}, chain {entry.chain.hex()} as in {HOST_FILE}",
         )
 
 

@@ -98,6 +98,10 @@ def scans(frame: str, number: int, n: int, since: int = 0) -> ScansTaken:
     return ScansTaken(frame, ("left", "right", "mid"), "boot-1", tick, tick - EPOCH + 77, values, quality)
 
 
+def started(number: int) -> EngineStarted:
+    return EngineStarted(stamp(number), "0.1.0", stamp(number).utc_tick - 1)
+
+
 def facts(folder: Path) -> Iterator[Fact]:
     """Yield 20 hours of H1 with S-1, then 10 with S-2, beside H2; facts of the host between them."""
     yield EngineStarted(stamp(0), "0.0.9", None)
