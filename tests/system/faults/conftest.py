@@ -120,6 +120,15 @@ class _Report:
                 terminalreporter.write_line(f"     {kind}: {text}")
 
 
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """Let a run that was asked to be long take its time."""
+    asked = [config.getoption(f"--{name}", default=None) for name in SHORT]
+    if config.getoption("--faults", default="short") == "long" or any(asked):
+        for item in items:
+            if Path(__file__).parent in item.path.parents:
+                item.add_marker(pytest.mark.timeout(0))
+
+
 def pytest_configure(config: pytest.Config) -> None:
     if not hasattr(config, "workerinput"):
         config.pluginmanager.register(_Report(config), "fault-report")

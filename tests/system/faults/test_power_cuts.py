@@ -14,12 +14,13 @@ import pytest
 from cut_disk import Disk, Recorder, after_cut, as_written, recorded
 from kill_cases import check
 from sqlite_tap import tap
-from store_cases import open_journal, quick_folder
-from store_child import batch_of, write
+from store_cases import finding, open_journal, quick_folder
+from store_child import batch_of, fact_of, write
 
+from daq.codec import encode_finding
 from daq.store import chunks, journal
 from daq.store.errors import JournalError
-from daq.store.rows import encoded
+from daq.store.rows import checksum, encoded
 from daq.store.schema import (
     HOST_FILE,
     MIGRATIONS,
@@ -74,37 +75,56 @@ def first_disk(how: str, random: Random) -> tuple[Disk, int]:
         return Disk(), 0
     with quick_folder() as folder:
         if how == MIGRATION:
-            return of_the_version_before(folder, random)
-        last = live(folder, random.randrange(1 << 30), 12).said("acknowledged")[-1]
+            return of_an_older_version(folder, random)
+        last = live(folder, random.randrange(1 << 30), 6).said("acknowledged")[-1]
         with closing(sqlite3.connect(folder / "j" / HOST_FILE)) as connection:
             connection.execute("PRAGMA user_version = 7")  # no longer what the table inside says
         return Disk.read_from(folder), last
 
 
-def of_the_version_before(folder: Path, random: Random) -> tuple[Disk, int]:
-    """Return a disk with a host file as the program before the newest migration left it."""
+def of_an_older_version(folder: Path, random: Random) -> tuple[Disk, int]:
+    """Return a disk with a host file as an older program left it: what it wrote is said here in full."""
     host = folder / "j" / HOST_FILE
     make_folder(host.parent)
     create_private(host)
     with closing(connect(host, "rw")) as connection:
         prepare_writing(connection)
-        migrate(connection, lambda point: None, MIGRATIONS[:-1])
-        last = 0
+        migrate(connection, lambda point: None, MIGRATIONS[: random.randrange(1, len(MIGRATIONS))])
         with transaction(connection):
             connection.execute("INSERT INTO meta VALUES ('journal', 'abcd'), ('site', 'hall-a')")
+        last = 0
         for _ in range(random.randint(1, 8)):
-            batch = batch_of(last + 1, random.choice((1, 2, 9)))
-            seqs = range(last + 1, last + 1 + len(batch.facts))
-            last = seqs.stop - 1
+            first, last = last + 1, last + random.choice((1, 2, 9))
             with transaction(connection):
-                journal._put_facts(connection, seqs, [encoded(fact) for fact in batch.facts])
-                journal._put_findings(connection, [(f, journal.encode_finding(f)) for f in batch.findings])
-                journal._put_outbox(connection, batch)
-                journal._put_rest(connection, seqs, batch)
-                connection.execute("INSERT OR REPLACE INTO status VALUES ('last', ?)", (str(last),))
+                commit_of_old(connection, first, last)
         if random.random() < 0.5:  # ended by a kill: the write-ahead file is still there
             return Disk.read_from(folder), last
     return Disk.read_from(folder), last
+
+
+def commit_of_old(connection: sqlite3.Connection, first: int, last: int) -> None:
+    """Write the facts ``first`` to ``last`` and what goes with them, as format 1 had it."""
+    for seq in range(first, last + 1):
+        e = encoded(fact_of(seq))
+        row = (seq, e.frame, e.kind, checksum(e.data, seq, e.frame, e.kind), e.data)
+        connection.execute("INSERT INTO tail (seq, frame, kind, checksum, data) VALUES (?, ?, ?, ?, ?)", row)
+    connection.execute("UPDATE head SET last_seq = ?", (last,))
+    f, state = finding(last), str(last).encode()
+    body = encode_finding(f)
+    connection.execute(
+        "INSERT INTO finding (id, test, kind, checksum, body) VALUES (?, ?, ?, ?, ?)",
+        (f.id, f.frame, f.kind, checksum(body.encode(), f.id), body),
+    )
+    about = (f"m{last}", "t", 0, None)
+    connection.execute(
+        "INSERT INTO outbox (id, topic, retain, expires_s, checksum, payload) VALUES (?, ?, ?, ?, ?, ?)",
+        (*about, checksum(state, *about), state),
+    )
+    connection.execute(
+        "INSERT INTO snapshot VALUES ('H1', ?, '0.1.0', ?, ?)",
+        (last, checksum(state, "H1", last, "0.1.0"), state),
+    )
+    connection.execute("INSERT OR REPLACE INTO status VALUES ('last', ?)", (str(last),))
 
 
 def cut_anywhere(recorder: Recorder, random: Random) -> tuple[int, str]:
@@ -160,14 +180,23 @@ def test_a_power_cut_anywhere_loses_nothing_acknowledged(faults: Any) -> None:
             raise AssertionError(f"again with: --fault-seed {seed} --cuts {LIVES}") from error
 
 
-def test_a_power_cut_at_every_moment_of_a_first_start_is_got_over(faults: Any) -> None:
-    """A host file is made through a rollback journal; whoever only reads cannot undo what is half done."""
-    with quick_folder() as folder:
-        recorder = live(folder, 1, 0)
+@pytest.mark.parametrize("how", [FIRST, MIGRATION, REPLACED])
+def test_a_power_cut_at_every_moment_of_an_opening_is_got_over(faults: Any, how: str) -> None:
+    """Files are made, renamed and changed in place there, in steps of which each relies on the one before.
+
+    A host file is made through a rollback journal; whoever only reads cannot undo what is half done.
+    """
+    disk, last = first_disk(how, Random(3))
+    with laid_out(disk) as root:
+        recorder = live(root, 1, 0)
     opened = next(i for i, n in enumerate(recorder.notes) if n[:2] == ("said", "opened"))
-    for upto in range(opened + 1):
-        survives(after_cut(recorder, upto, Random(upto)), 0, 0, replaced=False)
-        faults.count(2, "at every moment of a first start", "started")
+    for seed in range(faults.seed, faults.seed + each_moment(faults)):
+        for upto in range(opened + 1):
+            end = survives(
+                after_cut(recorder, upto, Random(seed << 20 | upto)), last, last, replaced=how == REPLACED
+            )
+            assert end == last, f"again with: --fault-seed {seed} --cuts 50"
+            faults.count(2, f"at every moment of: {how}", "nothing lost")
 
 
 def test_a_power_cut_at_every_moment_of_making_an_archive_is_got_over(faults: Any) -> None:
@@ -178,10 +207,15 @@ def test_a_power_cut_at_every_moment_of_making_an_archive_is_got_over(faults: An
         while j.seal("H1", whole=False, finish=True):
             pass
         ended = len(recorder.notes)
-    for upto in range(begun, ended + 1):
-        for seed in range(3):
-            survives(after_cut(recorder, upto, Random(seed)), 9, 9, replaced=False)
-            faults.count(2, "at every moment of making an archive", "all there")
+    for seed in range(faults.seed, faults.seed + each_moment(faults)):
+        for upto in range(begun, ended + 1):
+            survives(after_cut(recorder, upto, Random(seed << 20 | upto)), 9, 9, replaced=False)
+            faults.count(2, "at every moment of: making an archive", "nothing lost")
+
+
+def each_moment(faults: Any) -> int:
+    """Return how many disks are tried for each moment of a short work: one in the short run."""
+    return max(1, int(faults.cuts) // 50)
 
 
 def test_the_record_of_a_run_tells_all_of_it() -> None:
