@@ -89,7 +89,7 @@ def scans(frame: str, number: int, n: int, since: int = 0) -> ScansTaken:
     hours = (k - since) / 20.0
     noise = np.random.default_rng(number + len(frame)).normal(0.0, 2e-6, (n, 2))
     strain = 0.003 * (1.0 - np.exp(-hours / 3.0)) + 2e-4 * hours
-    mid = 980.0 + 9.0 * ((hours > 4.0) & (hours < 5.0))
+    mid = 980.0 + 9.0 * ((hours > 2.0) & (hours < 3.0))
     values = np.round(np.column_stack([strain + noise[:, 0], strain + noise[:, 1], mid]), 7)
     quality = np.zeros((n, 3), np.uint8)
     if number == 40:
@@ -103,22 +103,23 @@ def started(number: int) -> EngineStarted:
 
 
 def facts(folder: Path) -> Iterator[Fact]:
-    """Yield 20 hours of H1 with S-1, then 10 with S-2, beside H2; facts of the host between them."""
+    """Yield 10 hours of H1 with S-1, then 5 with S-2, 5 of H2 beside it; facts of the host between them."""
     yield EngineStarted(stamp(0), "0.0.9", None)
     yield rules(folder, "S-1", "H1")
     yield rules(folder, "S-1", "H2")
-    for number in range(0, 600, 40):
-        if number == 120:
+    for number in range(0, 300, 20):
+        if number == 60:
             yield ConditionChanged(stamp(number), "", "gauge", "link_lost", True, "no answer")
             yield ConditionChanged(stamp(number), "", "gauge", "link_lost", False, "")
-        if number == 200:
+        if number == 100:
             yield ClockStepped(stamp(number), -30 * TICKS_PER_S)
             yield EntryMade(stamp(number), "H1", "note", "mk", {}, "looked at it")
-        if number == 400:
+        if number == 200:
             yield RulesAdopted(stamp(number), "H1", "H1", rules(folder, "S-2", "H1").rules)
-        yield scans("H1", number, 40, 400 if number >= 400 else 0)
-        yield scans("H2", number, 40)
-    yield EngineStarted(stamp(600), "0.1.0", stamp(599).utc_tick)
+        yield scans("H1", number, 20, 200 if number >= 200 else 0)
+        if number < 100:
+            yield scans("H2", number, 20)
+    yield EngineStarted(stamp(300), "0.1.0", stamp(299).utc_tick)
 
 
 def write_journal(folder: Path, lab: Path, seal_until: int = 32) -> Engine:

@@ -36,10 +36,10 @@ house_engine: dict[str, Engine] = {}
 
 @pytest.fixture(scope="module")
 def house() -> Iterator[Path]:
-    """A folder with the journal ``j`` (chunks of 80 scans) and nothing else that matters."""
+    """A folder with the journal ``j`` (chunks of 40 scans) and nothing else that matters."""
     with quick_folder() as folder:
         with pytest.MonkeyPatch.context() as patch:
-            patch.setattr("daq.store.chunks.CHUNK_SCANS", 80)
+            patch.setattr("daq.store.chunks.CHUNK_SCANS", 40)
             house_engine["first"] = write_journal(folder / "j", folder)
         assert main(["replay", str(folder / "j"), "--findings", str(folder / "whole.jsonl")]) == OK
         yield folder
@@ -96,11 +96,11 @@ def test_standard_tools_open_it(house: Path, tmp_path: Path) -> None:
     text = gzip.decompress((tmp_path / "readings.csv.gz").read_bytes()).decode()
     rows = [r for r in text.splitlines() if not r.startswith("#")]
     assert rows[0] == "time,left,right,mid"
-    assert len(rows) == 1 + 400
-    want = scans("H1", 40, 40)
+    assert len(rows) == 1 + 200
+    want = scans("H1", 40, 20)
     assert rows[1 + 40].split(",")[1:] == ["", repr(float(want.values[0, 1])), repr(float(want.values[0, 2]))]
     with sqlite3.connect(tmp_path / "record" / "H1.sqlite") as db:
-        assert db.execute("SELECT sum(scans) FROM chunk").fetchone()[0] >= 400
+        assert db.execute("SELECT sum(scans) FROM chunk").fetchone()[0] >= 200
     db.close()
     manifest = json.loads((tmp_path / "manifest.json").read_text())
     assert [v["version"] for v in manifest["versions"]] == ["0.0.9"] or manifest["first_seq"] > 1
@@ -157,7 +157,7 @@ def test_the_layout_in_the_readme_is_enough_to_read_the_record(house: Path, tmp_
                 value += int.from_bytes(step, "little", signed=True)
                 numbers.append(value / 10**scale)
     db.close()
-    assert numbers[:120] == [float(v) for m in range(0, 120, 40) for v in scans("H1", m, 40).values[:, 2]]
+    assert numbers[:120] == [float(v) for m in range(0, 120, 20) for v in scans("H1", m, 20).values[:, 2]]
 
 
 def test_the_manifest_is_as_its_schema_says(house: Path, tmp_path: Path) -> None:
@@ -244,7 +244,7 @@ def test_another_host_goes_on_with_the_test(house: Path, tmp_path: Path) -> None
         assert ended is not None
         assert encode_state(second.tests["H1"]) == encode_state(first.tests["H1"])
         for engine in (first, second):
-            engine.take(scans("H1", 630, 20, 400))
+            engine.take(scans("H1", 320, 20, 200))
         assert encode_state(second.tests["H1"]) == encode_state(first.tests["H1"])
 
         class Later:
