@@ -33,7 +33,7 @@ from daq.records import TICKS_PER_S, ClockStepped, ConditionChanged, Finding, St
 from daq.settings import Instrument, Lab
 from daq.startup import first_facts, recover, standing
 from daq.store.journal import Journal
-from daq.supervise import Signals, Supervisor, notify
+from daq.supervise import Rebuilding, Signals, Supervisor, notify
 from daq.writer import Writer
 from drivers import registry
 
@@ -117,7 +117,7 @@ class House:
         self._stop, self._drain = threading.Event(), threading.Event()
         self._bus_threads: list[threading.Thread] = []
         self.stuck = False
-        engine, ended = recover(journal, log.line)
+        engine, ended = recover(journal, log.line, Rebuilding(journal.last_seq).reached)
 
         def trouble(condition: str, active: bool, message: str) -> None:
             inlet.news(ConditionChanged(clock.stamp(), HOST, "broker", condition, active, message))

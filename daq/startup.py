@@ -17,9 +17,12 @@ from daq.store.rows import Batch
 LINKS = ("link_lost", "identity_wrong")
 
 
-def recover(journal: Journal, say: Callable[[str], None]) -> tuple[Engine, int | None]:
+def recover(
+    journal: Journal, say: Callable[[str], None], reached: Callable[[int], None] = lambda seq: None
+) -> tuple[Engine, int | None]:
     """Rebuild the engine from the newest valid snapshot and the facts after it.
 
+    ``reached`` is told how far the record is read, each time something of it was replayed.
     Returns the engine and the UTC tick at which the record ended (None in a new journal). With
     another version's snapshots, or a damaged one, everything is rebuilt from the facts.
     """
@@ -40,8 +43,17 @@ def recover(journal: Journal, say: Callable[[str], None]) -> tuple[Engine, int |
             engine, after = Engine(), 0
     new: list[Finding] = []
     stored = journal.facts(after=after, on_damage=lambda trouble: say(f"left out: {trouble}"))
-    for fact in joined(fact for _, fact in stored):
+    read = after
+
+    def facts() -> Iterator[Fact]:
+        nonlocal read
+        for seq, fact in stored:
+            read = seq
+            yield fact
+
+    for fact in joined(facts()):
         new += [f for f in engine.take(fact) if not journal.has_finding(f.id)]
+        reached(read)
     if new:
         # a later version may conclude more from the same facts: kept as findings, never published again
         journal.commit(Batch(findings=tuple(new)))

@@ -15,7 +15,10 @@ import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from types import FrameType, TracebackType
-from typing import Any, Self
+from typing import Any, Final, Self
+
+NOTIFY_S: Final = 1.0
+"""A manager that does not read must not hold up whoever tells it: its queue holds about ten messages."""
 
 
 def notify(text: str) -> bool:
@@ -26,12 +29,45 @@ def notify(text: str) -> bool:
     if address.startswith("@"):
         address = "\0" + address[1:]  # a socket of the abstract name space
     with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_CLOEXEC) as s:
+        s.settimeout(NOTIFY_S)
         try:
             s.connect(address)
             s.sendall(text.encode())
         except OSError:
             return False
     return True
+
+
+EXTEND_S: Final = 120.0
+"""How long the next step of a rebuild may take before the service manager may call the start failed [s]:
+a block of 4096 scans takes a second or two, on a slow machine twenty."""
+TOLD_EVERY_S: Final = 2.0
+
+
+class Rebuilding:
+    """Asks the service manager for more time while a start replays the record, and only while it moves.
+
+    ``reached`` is called with each fact replayed, and never otherwise: a rebuild that hangs is ended by
+    the service manager as any start that hangs.
+    """
+
+    def __init__(self, last_seq: int, clock: Callable[[], float] = time.monotonic) -> None:
+        self._last_seq = last_seq
+        self._clock = clock
+        self._seq = 0
+        self._told_at = clock()
+
+    def reached(self, seq: int) -> None:
+        """Say that facts up to number ``seq`` are replayed."""
+        now = self._clock()
+        if seq <= self._seq or now - self._told_at < TOLD_EVERY_S:
+            return
+        self._seq, self._told_at = seq, now
+        share = 100.0 * seq / max(seq, self._last_seq)
+        notify(
+            f"EXTEND_TIMEOUT_USEC={EXTEND_S * 1e6:.0f}\n"
+            f"STATUS=rebuilding from the record: fact {seq} of {self._last_seq} ({share:.0f} %)"
+        )
 
 
 @dataclass

@@ -3,16 +3,22 @@
 from __future__ import annotations
 
 import os
+import socket
 import time
+from contextlib import suppress
 from pathlib import Path
 
 import pytest
 
 from daq import settings
 from daq.clock import BenchClock, Origin
+from daq.core.rules import rules_to_json
 from daq.engine import Engine
-from daq.records import TICKS_PER_S, ConditionChanged, RulesAdopted, Stamp
-from daq.startup import first_facts, standing
+from daq.records import TICKS_PER_S, ConditionChanged, Fact, Finding, RulesAdopted, Stamp, Ticked
+from daq.startup import first_facts, recover, standing
+from daq.store.journal import Journal
+from daq.store.rows import Batch
+from daq.supervise import Rebuilding
 
 LAB = """\
 site: test
@@ -82,6 +88,72 @@ def test_rules_are_adopted_when_they_are_new_and_not_again(lab: settings.Lab) ->
     again = list(first_facts(lab, engine, Still(), None))  # type: ignore[arg-type]
     assert sum(isinstance(f, RulesAdopted) for f in first) == 1
     assert not any(isinstance(f, RulesAdopted) for f in again)
+
+
+def _record(folder: Path, rules: str, facts: int) -> Journal:
+    """A journal with ``facts`` facts of H1 and no snapshot, as after an upgrade."""
+    journal = Journal.open(folder, site="test")
+    journal.commit(Batch((RulesAdopted(Stamp(17 * 10**12, 0, "boot"), "H1", "H1", rules),)))
+    for k in range(1, facts):
+        tick = k * 600_000
+        journal.commit(Batch((Ticked(Stamp(17 * 10**12 + tick, tick, "boot"), "H1"),)))
+    return journal
+
+
+def _heard(s: socket.socket) -> list[str]:
+    heard = []
+    with suppress(BlockingIOError):
+        while True:
+            heard.append(s.recv(500).decode())
+    return heard
+
+
+def test_a_long_rebuild_asks_for_time_while_it_moves_and_not_when_it_hangs(
+    lab: settings.Lab, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A start cut off by its service manager would begin the same rebuild again, for ever."""
+    now = [0.0]
+    take = Engine.take
+
+    def slow(self: Engine, fact: Fact) -> list[Finding]:
+        now[0] += 45.0  # seconds
+        return take(self, fact)
+
+    monkeypatch.setattr(Engine, "take", slow)
+    rules = rules_to_json(lab.frames[0].tests[0])
+    with (
+        socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK) as manager,
+        _record(tmp_path / "record", rules, 9) as journal,
+    ):
+        manager.bind(str(tmp_path / "n"))
+        monkeypatch.setenv("NOTIFY_SOCKET", str(tmp_path / "n"))
+        progress = Rebuilding(journal.last_seq, lambda: now[0])
+        recover(journal, print, progress.reached)
+        heard = _heard(manager)
+        assert now[0] > 300.0  # longer than a start may take
+        assert len(heard) == 9
+        assert heard[5] == (
+            "EXTEND_TIMEOUT_USEC=120000000\nSTATUS=rebuilding from the record: fact 6 of 9 (67 %)"
+        )
+        for _ in range(5):  # nothing new is replayed
+            now[0] += 45.0
+            progress.reached(9)
+        assert _heard(manager) == []
+
+
+def test_a_quick_rebuild_says_nothing(
+    lab: settings.Lab, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A message for every fact would be a million of them."""
+    rules = rules_to_json(lab.frames[0].tests[0])
+    with (
+        socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK) as manager,
+        _record(tmp_path / "record", rules, 9) as journal,
+    ):
+        manager.bind(str(tmp_path / "n"))
+        monkeypatch.setenv("NOTIFY_SOCKET", str(tmp_path / "n"))
+        recover(journal, print, Rebuilding(journal.last_seq, lambda: 0.0).reached)
+        assert _heard(manager) == []
 
 
 def test_a_bench_that_begins_anew_is_another_boot(tmp_path: Path) -> None:

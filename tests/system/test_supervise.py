@@ -49,6 +49,14 @@ def test_a_socket_of_the_abstract_name_space_works_too(monkeypatch: pytest.Monke
         assert _heard(s) == b"READY=1"
 
 
+def test_a_manager_that_does_not_read_holds_nothing_up(manager: socket.socket) -> None:
+    """Its queue is full after some ten messages; who waits for it looks after nothing any more."""
+    began = time.monotonic()
+    while notify("WATCHDOG=1"):
+        assert time.monotonic() - began < 20.0
+    assert time.monotonic() - began < 5.0
+
+
 def test_without_a_manager_nothing_is_sent_and_nothing_fails(monkeypatch: pytest.MonkeyPatch) -> None:
     """A run at a desk has no service manager."""
     monkeypatch.delenv("NOTIFY_SOCKET", raising=False)
