@@ -230,10 +230,16 @@ over the stretch: a straight line misses half of it and more where the bend grow
 cubic would add, a tenth where the rate has doubled exponentially."""
 
 
+CHOSEN: Final = 1.8
+"""The surest of several is surer of itself than it should be: found on simulated rigs (seed 77)."""
+
+
 def rate_now(rungs: FloatArray, models: FloatArray) -> tuple[float, float, float]:
     """Return the rate at the end [1/h] with a 90 % interval, NaN where too little is known.
 
-    Lines and parabolas over stretches that end now; the one with the least sum of variance and squared bias.
+    Lines and parabolas over stretches that end now, from short to long; the one with the least sum of
+    variance and squared bias, as long as the longer ones agree with what the shorter ones left possible
+    (Lepski 1991): the whole of a test may look straight where its beginning and its end are equally steep.
     """
     now = float(rungs[-1, ladder.T])
     end = np.array([now])
@@ -245,20 +251,26 @@ def rate_now(rungs: FloatArray, models: FloatArray) -> tuple[float, float, float
             continue
         bend = polynomial(rungs, models, low, now, 2)
         change = 0.0
+        tried = []
         if bend is not None:
             change = float(bend.rate(end)[0] - bend.rate(np.array([bend.low_h]))[0])
             sd = float(np.hypot(bend.rate_sd(now), NOW_BENT * change))
-            if best is None or sd < best[1]:
-                best = float(bend.rate(end)[0]), sd
+            tried.append((float(bend.rate(end)[0]), sd))
             # a change that noise alone would show is none
             noise = 2.0 * bend.rate_sd(now)
             change = float(np.sqrt(max(change * change - noise * noise, 0.0)))
         sd = float(np.hypot(line.rate_sd(now), NOW_BENT_LINE * change))
-        if best is None or sd < best[1]:
-            best = float(line.rate(end)[0]), sd
+        tried.append((float(line.rate(end)[0]), sd))
+        known = best
+        fits = [c for c in tried if known is None or abs(c[0] - known[0]) <= Z90 * known[1]]
+        if not fits:  # longer stretches only blur more
+            break
+        for candidate in fits:
+            if best is None or candidate[1] < best[1]:
+                best = candidate
     if best is None:
         return float("nan"), float("nan"), float("nan")
-    rate, sd = best
+    rate, sd = best[0], CHOSEN * best[1]
     return rate, rate - Z90 * sd, rate + Z90 * sd
 
 
