@@ -128,9 +128,8 @@ def _pass_over(damage: JournalDamaged) -> None:
 
 
 def last_hash(manifest: dict[str, Any]) -> str | None:
-    """Return the newest chain value of the test's frame, if possible one that the journal itself sealed."""
-    own = [c for c in manifest["chunks"] if c["file"] != HOST_PART]
-    sealed = [c for c in own if c["sealed"]] or own
+    """Return the newest chain value of the test's frame that the journal itself sealed; None if none."""
+    sealed = [c for c in manifest["chunks"] if c["file"] != HOST_PART and c["sealed"]]
     return str(max(sealed, key=lambda c: c["last_seq"])["chain"]) if sealed else None
 
 

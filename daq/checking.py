@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
 
-from daq.bundle import is_bundle, verify_bundle
+from daq.bundle import is_bundle, sha256_of, verify_bundle
 from daq.codec import canonical_json
 from daq.exits import DAMAGED, OK
 from daq.lines import iso_utc
@@ -40,6 +40,7 @@ class Checked:
     place: Path
     survey: Survey
     troubles: list[Trouble]
+    sha256: str | None = None
 
 
 def command(args: Namespace) -> int:
@@ -84,7 +85,7 @@ def check(place: Path) -> Checked:
         )
     else:
         troubles = verify_bundle(place, survey) if is_bundle(place) else verify_sealed(place, survey)
-    return Checked(place, survey, list(troubles))
+    return Checked(place, survey, list(troubles), sha256_of(place) if is_bundle(place) else None)
 
 
 # --- what is said ---------------------------------------------------------------------------
@@ -98,6 +99,7 @@ def tests(checked: Checked) -> Iterator[dict[str, Any]]:
     for run in [*runs, *(TestRun(frame, frame, "", 0, None) for frame in bare)]:
         blocks, parts = survey.of(run)
         chunks = [p for p in parts if p.file]
+        hashes = [p.chain.hex() for p in chunks if p.chain]
         ticks = [(b.from_tick, b.to_tick) for b in blocks]
         seqs = [s for b in blocks for s in (b.first, b.last)] + [p.first for p in parts if not p.file]
         bad = [t for t in checked.troubles if t.kind != NOTE and _concerns(t, run)]
@@ -114,8 +116,9 @@ def tests(checked: Checked) -> Iterator[dict[str, Any]]:
             "last_seq": max(seqs, default=None),
             "from": iso_utc(min(t[0] for t in ticks)) if ticks else None,
             "to": iso_utc(max(t[1] for t in ticks)) if ticks else None,
-            "first_hash": chunks[0].chain.hex() if chunks else None,
-            "last_hash": chunks[-1].chain.hex() if chunks else None,
+            "first_hash": hashes[0] if hashes else None,
+            "last_hash": hashes[-1] if hashes else None,
+            "sha256": checked.sha256,
             "faults": len(bad),
         }
 
@@ -180,7 +183,8 @@ def as_text(done: list[Checked], missing: list[str]) -> Iterator[str]:
             yield _fault_line(f)
         bad = sum(t.kind != NOTE for t in checked.troubles)
         files = _many(len(checked.survey.files), "file")
-        yield f"{checked.place}: {files} read to the end: {_many(bad, 'fault') if bad else 'sound'}"
+        sums = f"; SHA-256 of the archive {checked.sha256}" if checked.sha256 else ""
+        yield f"{checked.place}: {files} read to the end: {_many(bad, 'fault') if bad else 'sound'}{sums}"
     for text in missing:
         yield f"noted hash {text}: there is no such hash now, wanted one that begins so"
 

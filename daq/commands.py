@@ -224,7 +224,7 @@ def _export_bundle(folder: Path, test: str, path: Path) -> int:
     print(
         f"upturn export: {manifest['test']} {manifest['specimen']}: {manifest['scans']} scans, "
         f"{len(manifest['chunks'])} chunks, {manifest['findings']} findings to {path}; "
-        f"last hash {bundle.last_hash(manifest)}",
+        f"last hash {bundle.last_hash(manifest) or '(none sealed yet)'}; SHA-256 {bundle.sha256_of(path)}",
         file=sys.stderr,
     )
     return TROUBLE if notices else OK

@@ -38,6 +38,7 @@ from daq.store.segments import (
     load,
     open_to_read,
     part_of,
+    sealed_to_of,
 )
 from daq.store.survey import TestRun, tests_of
 
@@ -125,7 +126,7 @@ def chunks_of(path: Path) -> list[dict[str, Any]]:
     """Return number, numbers of facts, counts, chain and content of every chunk of a sealed file."""
     with guarded(path), closing(open_to_read(path)) as connection:
         about = about_of(connection, path)
-        sealed_to = int(about.get("sealed_to", 1 << 62))
+        sealed_to = sealed_to_of(about)
         return [
             {
                 "file": path.name, "number": n, "first_seq": a, "last_seq": b, "facts": facts, "scans": scans,

@@ -28,6 +28,7 @@ from daq.store.schema import (
     create_private,
     make_folder,
     prepare_writing,
+    settle,
     sync_folder,
     transaction,
     version_of,
@@ -132,6 +133,17 @@ class SealedWriter:
                 ),
             )  # fmt: skip
         return number, chain
+
+    def settle(self) -> None:
+        """Make sure that the chunks an ended process left are on the disk, not in memory alone.
+
+        Raises:
+            JournalBusy: a reader is in the way; try again.
+        """
+        with guarded(self._path):
+            done = settle(self._connection)
+        if not done:
+            raise JournalBusy(f"{self._path}: got a reader of an old state, wanted to fold in what is there")
 
     def finish(self) -> bool:
         """Make it a plain single file; say whether it went (a reader may be in the way)."""
@@ -316,6 +328,11 @@ def origin_of(about: dict[str, str]) -> tuple[int, bytes]:
     except (ValueError, KeyError) as error:
         raise JournalDamaged(f"about: got {error!r}, wanted the chain value before the file") from error
     return 1, genesis_of(about)
+
+
+def sealed_to_of(about: dict[str, str]) -> int:
+    """Return the number of the newest chunk that the journal itself sealed; later ones an archive packed."""
+    return int(about.get("sealed_to", 1 << 62))
 
 
 def genesis_of(about: dict[str, str]) -> bytes:

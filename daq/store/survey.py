@@ -21,7 +21,7 @@ Ranges = list[tuple[int, int]]
 class Part:
     """One chunk (or, with an empty ``file``, one row of the host file) that was read.
 
-    ``chain`` is empty for rows: they are chained when they are sealed.
+    ``chain`` is empty where the journal has sealed nothing yet: for rows, and for what an archive packed.
     """
 
     frame: str

@@ -41,6 +41,7 @@ from daq.store.segments import (
     load,
     open_to_read,
     origin_of,
+    sealed_to_of,
 )
 from daq.store.survey import Part, Survey
 
@@ -353,7 +354,9 @@ def _walk_file(path: Path, named: dict[int, _Named], seen: _Seen, *, alone: bool
                 Trouble(DAMAGE, place, got, wanted, path.name, frame, first, end) for got, wanted in troubles
             )
             if entry is not None or alone:
-                part = Part(frame, path.name, number, chunk.first_seq, chunk.last_seq, chain, not troubles)
+                # of a chunk that was packed for an archive only, the journal will never have that hash
+                kept = chain if number <= sealed_to_of(about) else b""
+                part = Part(frame, path.name, number, chunk.first_seq, chunk.last_seq, kept, not troubles)
                 seen.survey.parts.append(part)
                 seen.survey.take(frame, records)
             previous, last = chain, chunk.last_seq
