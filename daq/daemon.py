@@ -30,6 +30,7 @@ from daq.inlet import Acked, Inlet
 from daq.lines import plain_line
 from daq.publish import Publisher
 from daq.records import TICKS_PER_S, ClockStepped, ConditionChanged, Finding, Stamp, UpturnError
+from daq.reload import Reloader
 from daq.settings import Instrument, Lab
 from daq.startup import first_facts, recover, standing
 from daq.store.journal import Journal
@@ -139,6 +140,7 @@ class House:
         self._lines = self._make_lines(bench.instruments, lambda name: standing(engine, name))
         self._writer.take_now(first_facts(lab, engine, clock, ended))
         self._backlog = self._writer.backlog
+        self._reloader = Reloader(lab, clock, inlet.news, log.line)
 
     # --- buses ---------------------------------------------------------------------------
 
@@ -193,7 +195,7 @@ class House:
                 self._writer_thread.start()
                 for line in self._lines.values():
                     self._start_bus(line.bus)
-                notify(f"READY=1\nSTATUS=watching {len(self._lab.frames)} frames")
+                notify(f"READY=1\nSTATUS={self._watching}")
                 child = _start_view(self._lab) if view else None
                 self._supervise(signals, seconds, child)
             finally:
@@ -222,6 +224,16 @@ class House:
                 child.kill()
                 child.wait()
 
+    @property
+    def _watching(self) -> str:
+        return f"watching {len(self._lab.frames)} frames"
+
+    def _reload(self) -> None:
+        notify(f"RELOADING=1\nMONOTONIC_USEC={time.monotonic_ns() // 1000}")
+        good = self._reloader.again()
+        refused = "" if good else "; the lab file was refused, the old settings stay in force"
+        notify(f"READY=1\nSTATUS={self._watching}{refused}")
+
     def _supervise(self, signals: Signals, seconds: float | None, child: Any) -> None:
         """Look after everything about twice a second until it is time to stop."""
         supervisor = Supervisor()
@@ -240,6 +252,8 @@ class House:
         while self._writer.broken is None:
             if signals.wait(min(LOOK_EVERY_S, max(0.05, period / clock.speed / 2))):
                 return
+            if signals.take_reload():
+                self._reload()
             self._bench.mark()
             now = clock.stamp()
             step = _lead(now) - lead

@@ -112,7 +112,7 @@ class Supervisor:
 
 
 class Signals:
-    """SIGTERM and SIGINT as a flag that can be waited for; SIGHUP is ignored. For the main thread.
+    """SIGTERM and SIGINT as a flag that can be waited for; SIGHUP asks for a reload. For the main thread.
 
     The handler takes no lock: one that sets an event would block for ever when it interrupts the
     wait for that event, or itself, as happens when signals come in a storm.
@@ -120,6 +120,7 @@ class Signals:
 
     def __init__(self) -> None:
         self.came = False
+        self._reload = False
 
     def __enter__(self) -> Self:
         self._read, self._write = os.pipe()
@@ -129,15 +130,23 @@ class Signals:
         self._before: dict[int, Any] = {}
         for number in (signal.SIGTERM, signal.SIGINT):
             self._before[number] = signal.signal(number, self._on)
-        # a closed terminal must not end a six-month test
-        self._before[signal.SIGHUP] = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+        # a closed terminal sends it too: it must not end a six-month test
+        self._before[signal.SIGHUP] = signal.signal(signal.SIGHUP, self._on_reload)
         return self
 
     def _on(self, number: int, frame: FrameType | None) -> None:
         self.came = True
 
+    def _on_reload(self, number: int, frame: FrameType | None) -> None:
+        self._reload = True
+
+    def take_reload(self) -> bool:
+        """Return whether a reload was asked for since the last call; however often is once."""
+        asked, self._reload = self._reload, False
+        return asked
+
     def wait(self, timeout_s: float) -> bool:
-        """Wait for a signal for at most ``timeout_s``; return whether one ever came."""
+        """Wait for a signal for at most ``timeout_s``; return whether the end was ever asked for."""
         if not self.came:
             select.select([self._read], [], [], timeout_s)
             with contextlib.suppress(BlockingIOError):

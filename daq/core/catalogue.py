@@ -204,6 +204,10 @@ _TABLE: Final = (
         "Read why, and enter it again.", momentary=True,
     ),
     AlarmKind(
+        "settings_refused", _L, "the lab file was read again and refused; the old settings stay in force",
+        "Mend the file and reload it: with it as it is, no restart would succeed.",
+    ),
+    AlarmKind(
         "flood", _M, "many alarms at once: suspect one cause",
         "Look for the common cause first: mains, room, scanner, neighbour.", off_delay_s=600.0,
     ),
@@ -218,6 +222,8 @@ _TABLE: Final = (
     AlarmKind("correction", _N, "a step in the record was neutralised", "Check the named cause if in doubt.",
               momentary=True),
     AlarmKind("clock_stepped", _N, "the host's clock was set", "Check the time service; intervals are kept.",
+              momentary=True),
+    AlarmKind("settings_adopted", _N, "the lab file was read again", "Read what was adopted and what waits.",
               momentary=True),
     AlarmKind("calibration_due", _N, "a calibration is due", "Plan it for the next free day."),
     AlarmKind("test_started", _N, "the test runs: full load is on", "Nothing to do."),

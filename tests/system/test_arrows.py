@@ -27,6 +27,7 @@ EDGES: dict[str, set[str]] = {
     "daq.engine": {"daq.core", "daq.records", "daq.codec", "daq"},
     "daq.yamlmarks": {"daq.records"},
     "daq.instants": {"daq.records"},
+    "daq.reload": {"daq.settings", "daq.core", "daq.records", "daq.clock", "daq"},
     "daq.recording": {"daq.instants", "daq.records", "drivers"},
     "daq.settings": {"daq.core", "daq.records", "daq.yamlmarks", "daq.settings", "drivers", "daq.publish"},
     "daq.publish": {"daq.core", "daq.store", "daq.records", "daq.codec", "daq.publish", "daq.lines"},

@@ -49,6 +49,19 @@ def test_a_socket_of_the_abstract_name_space_works_too(monkeypatch: pytest.Monke
         assert _heard(s) == b"READY=1"
 
 
+def test_a_reload_is_asked_for_by_a_signal_and_ends_nothing() -> None:
+    """A closed terminal sends the same signal; ten of them are one reload."""
+    with Signals() as signals:
+        assert not signals.take_reload()
+        for _ in range(10):
+            os.kill(os.getpid(), signal.SIGHUP)
+        began = time.monotonic()
+        assert not signals.wait(5.0)
+        assert time.monotonic() - began < 4.0  # it is not left waiting
+        assert signals.take_reload()
+        assert not signals.take_reload()
+
+
 def test_a_manager_that_does_not_read_holds_nothing_up(manager: socket.socket) -> None:
     """Its queue is full after some ten messages; who waits for it looks after nothing any more."""
     began = time.monotonic()
