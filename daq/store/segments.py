@@ -310,8 +310,9 @@ def about_check(about: dict[str, str]) -> str:
 
 
 def about_is_sound(about: dict[str, str]) -> bool:
-    """Compare that checksum; the first files had none."""
-    return "checksum" not in about or about["checksum"] == about_check(about)
+    """Compare that checksum, and whether all keys are known; the first files had none."""
+    known = {"frame", "journal", "site", "format", "checksum", "first_number", "before", "sealed_to"}
+    return about.keys() <= known and about.get("checksum", about_check(about)) == about_check(about)
 
 
 def origin_of(about: dict[str, str]) -> tuple[int, bytes]:

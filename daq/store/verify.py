@@ -8,7 +8,8 @@ number from 1 to the last one there, once. A writer may be at work meanwhile.
 What the checks cannot show: whoever can write here can make every one of them anew, from the changed
 fact to the last chain value. Only a chain value that was noted elsewhere (on paper, in another
 house's records) tells that. And what is rebuilt anyway has no check of its own: the rows ``status`` and
-``inbox``, the marks of delivery of ``outbox``, the site's name in ``meta``.
+``inbox``, the marks of delivery of ``outbox``, the numbers that findings and messages get next, the
+site's name in ``meta``.
 """
 
 from __future__ import annotations
@@ -176,6 +177,8 @@ def _verify_host(host: Path, seen: _Seen) -> Iterator[Trouble]:
                     DAMAGE, f"{host} header", f"program {program:#x}, format {version}",
                     f"{APPLICATION_ID:#x}, {meta.get('schema')}", host.name,
                 )  # fmt: skip
+            if missing := sorted({"journal", "site", "schema"} - meta.keys()):
+                yield Trouble(DAMAGE, f"{host} meta", f"no {', '.join(missing)}", "all of them", host.name)
             yield from _forms(connection, host, (s for made in MIGRATIONS[:version] for s in made))
             (seen.last,) = connection.execute("SELECT last_seq FROM head").fetchone()
             seen.survey.last_seq = seen.last
@@ -212,9 +215,13 @@ def _integrity(connection: sqlite3.Connection, path: Path) -> Iterator[Trouble]:
 
 def _forms(connection: sqlite3.Connection, path: Path, statements: Iterable[str]) -> Iterator[Trouble]:
     """Compare the tables' own description, which SQLite takes as it stands, with that of this format."""
-    rows = connection.execute("SELECT sql FROM sqlite_schema WHERE sql NOT NULL AND name NOT LIKE 'sqlite_%'")
+    rows = connection.execute(
+        "SELECT sql FROM sqlite_schema WHERE sql NOT NULL AND name NOT LIKE 'sqlite_stat%'"
+    )
     there = {" ".join(str(sql).split()) for (sql,) in rows}
     wanted = {" ".join(s.split()) for s in statements if s.startswith("CREATE")}
+    if any("AUTOINCREMENT" in s for s in wanted):
+        wanted.add("CREATE TABLE sqlite_sequence(name,seq)")  # SQLite's own, for the numbers given last
     if there != wanted:
         got, meant = sorted(there - wanted), sorted(wanted - there)
         yield Trouble(DAMAGE, f"{path} form of the tables", f"{got}", f"{meant}", path.name)

@@ -87,7 +87,12 @@ def meaning(path: Path) -> list[str]:
     """Return everything that an SQLite file says, but for what is made anew at each start."""
     with closing(sqlite3.connect(f"file:{path}?mode=ro&immutable=1", uri=True)) as db:
         text = list(db.iterdump())
-    working = ('INSERT INTO "status"', 'INSERT INTO "inbox"', "INSERT INTO \"meta\" VALUES('site'")
+    working = (
+        'INSERT INTO "status"',
+        'INSERT INTO "inbox"',
+        'INSERT INTO "sqlite_sequence"',
+        "INSERT INTO \"meta\" VALUES('site'",
+    )
     return [t for t in text if not t.startswith(working)]
 
 
