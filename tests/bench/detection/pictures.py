@@ -287,7 +287,7 @@ def _marks(ax: Axes, known: Known, told: Told) -> None:
     for c in told.said:
         if c.kind == "stage" and c.key == "tertiary":
             ax.axvline(told.hours[c.scan], color=WARM, lw=2.0)
-        elif c.kind == "stage" and c.fields["withdraws"]:
+        elif c.kind == "stage" and c.fields["withdraws"] and c.fields["from"] == "tertiary":
             ax.axvline(told.hours[c.scan], color=WARM, lw=2.0, ls=(0, (4, 2)))
 
 
@@ -318,7 +318,7 @@ def _legend(known: Known, told: Told) -> list[Line2D | Patch]:
     names = {FIRST: "first rise", OFFSET: "0.2 % offset", BEST: "best possible detection"}
     for when, style in _truths(known):
         out.append(Line2D([], [], color=DARK, ls=style, label=f"{names[style]} {by}, {when:.4g} h"))
-    if any(c.kind == "stage" and c.fields["withdraws"] for c in told.said):
+    if any(c.kind == "stage" and c.fields["withdraws"] and c.fields["from"] == "tertiary" for c in told.said):
         out.append(Line2D([], [], color=WARM, lw=2, ls=(0, (4, 2)), label="tertiary withdrawn"))
     return out
 
