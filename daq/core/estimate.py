@@ -230,6 +230,8 @@ over the stretch: a straight line misses half of it and more where the bend grow
 cubic would add, a tenth where the rate has doubled exponentially."""
 
 
+AGREE: Final = 3.0
+"""S.d. by which a longer stretch may differ from a shorter one: less throws long ones away on chance."""
 CHOSEN: Final = 1.8
 """The surest of several is surer of itself than it should be: found on simulated rigs (seed 77)."""
 
@@ -262,7 +264,7 @@ def rate_now(rungs: FloatArray, models: FloatArray) -> tuple[float, float, float
         sd = float(np.hypot(line.rate_sd(now), NOW_BENT_LINE * change))
         tried.append((float(line.rate(end)[0]), sd))
         known = best
-        fits = [c for c in tried if known is None or abs(c[0] - known[0]) <= Z90 * known[1]]
+        fits = [c for c in tried if known is None or abs(c[0] - known[0]) <= AGREE * known[1]]
         if not fits:  # longer stretches only blur more
             break
         for candidate in fits:
