@@ -179,9 +179,15 @@ class Journal(JournalReading):
 
     def checkpoint(self) -> bool:
         """Fold the write-ahead file into the host file; say whether all of it went (no reader in the way)."""
-        with self._lock, guarded(self._host):
+        with self._lock:
             self._hook("checkpoint.before")
-            busy, log, done = self._connection().execute("PRAGMA wal_checkpoint(PASSIVE)").fetchone()
+            try:
+                with guarded(self._host):
+                    found = self._connection().execute("PRAGMA wal_checkpoint(PASSIVE)").fetchone()
+            except (JournalBroken, JournalDamaged) as error:
+                self._broken = error  # a failed fsync is final, whoever asked for it
+                raise
+            busy, log, done = found
             self._hook("checkpoint.after")
             self._unfolded = 0
         return not busy and log == done

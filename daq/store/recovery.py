@@ -33,6 +33,7 @@ from daq.store.schema import (
     make_folder,
     migrate,
     prepare_writing,
+    settle,
     sync_folder,
     transaction,
     version_of,
@@ -71,6 +72,7 @@ def open_host(
     connection = connect(host, "rw")
     try:
         prepare_writing(connection)
+        settle(connection)
         before = version_of(connection)
         made = migrate(connection, hook)
         if made and before:

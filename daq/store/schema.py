@@ -21,6 +21,7 @@ APPLICATION_ID: Final = 0x5570_746E
 """``Uptn``, in the header of every file that the store writes."""
 HOST_FILE: Final = "journal.sqlite"
 BUSY_MS: Final = 2000
+SETTLE_MS: Final = 500
 
 MIGRATIONS: Final[tuple[tuple[str, ...], ...]] = (
     (  # 1: facts, findings, messages, snapshots, status
@@ -105,6 +106,22 @@ def prepare_writing(connection: sqlite3.Connection, *, wal: bool = True) -> None
     connection.execute("PRAGMA journal_size_limit = 16777216")
     connection.execute("PRAGMA secure_delete = OFF")
     connection.execute("PRAGMA foreign_keys = OFF")
+
+
+def settle(connection: sqlite3.Connection) -> bool:
+    """Write anew, into the file itself, what an ended process left in the write-ahead file.
+
+    That may be in memory alone: where its fsync failed, the pages count as clean, and a later fsync
+    of the same file would succeed without them. Nothing is built on them before this. The next commit
+    then begins the write-ahead file from its start.
+
+    Returns:
+        Whether all of it went; not where somebody read an old state for half a second.
+    """
+    connection.execute(f"PRAGMA busy_timeout = {SETTLE_MS}")
+    _, log, done = connection.execute("PRAGMA wal_checkpoint(RESTART)").fetchone()
+    connection.execute(f"PRAGMA busy_timeout = {BUSY_MS}")
+    return bool(log == done)
 
 
 @contextmanager

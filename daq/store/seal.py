@@ -154,6 +154,7 @@ class Sealer:
             if number not in there:
                 return None
             chunk = writer.chunk(number)
+            writer.settle()  # its rows go next
             seqs = [int(seq) for record in unpack(chunk) for seq in record.seqs]
         except (JournalDamaged, RecordError) as damage:
             raise _UnusableError(f"{path}: {damage}") from damage
