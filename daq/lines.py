@@ -115,5 +115,6 @@ _TELL: dict[str, Callable[[Any], str]] = {
     "forecast": _forecast,
     "alarm": _alarm,
     "entry": lambda f: f"entry {f['entry']} by {f['initials']} {f['note']}".rstrip(),
+    "outage": lambda f: f"outage: {f['words']}",
     "summary": lambda f: f"summary {canonical_json(f)}",
 }

@@ -20,7 +20,7 @@ from typing import Any, Final
 
 import numpy as np
 
-from daq.core import alarms, causes, entered, follow, forecast, results, timebase, watch
+from daq.core import alarms, causes, entered, follow, forecast, milestones, outage, results, timebase, watch
 from daq.core.adopt import adopt
 from daq.core.block import Block, Conclusion, Cue
 from daq.core.convert import Plan, convert, prepare
@@ -29,6 +29,7 @@ from daq.core.rules import Role, TestRules
 from daq.core.shown import deadline, open_alarm, status, summary
 from daq.core.teststate import Out, TestState, begin, out_of, rules_of, start_of
 from daq.records import (
+    TICKS_PER_S,
     BurstTaken,
     ClockStepped,
     ConditionChanged,
@@ -143,6 +144,10 @@ def _take_block(
             break
         block = block.cut(0, last - block.first + 1)
     concluded = _with_doubt(concluded, watch.doubt(seen))
+    if s.outage is not None:
+        _, mean = milestones.mean_strain(s.results.mean, block.strain_a, block.strain_b)
+        waits, told = outage.take(s.outage, rules, block, mean, s.start)
+        s, concluded = replace(s, outage=waits), (*concluded, *told)
     s = replace(s, watch=seen, follow=followed, results=results.observe(s.results, rules, block))
     s = _conclude(s, (*watched, *concluded), block, out, utc, utc_tick)
     if broken is not None:
@@ -234,6 +239,22 @@ def _take_stamped(s: TestState, fact: Any) -> tuple[TestState, list[Finding]]:
     return replace(s, counts=out.counts), out.findings
 
 
+def _take_started(s: TestState, fact: EngineStarted) -> tuple[TestState, list[Finding]]:
+    """Note what stood before a start; what came after the start before is judged with what there is."""
+    s, out, tick, utc_tick = stamped(s, fact)
+    known, last = s.outage, s.watch.cadence.latest
+    if fact.previous_tick is None or s.over or last is None or (known is not None and known.to_tick is None):
+        return replace(s, counts=out.counts), out.findings
+    if known is not None:
+        for c in outage.conclude(known, out.rules, s.scans, tick, s.start):
+            out.put(c, utc_tick)
+    now = follow.status(s.follow, out.rules)
+    rate = (now["rate_per_h"], now["rate_low_per_h"], now["rate_high_per_h"])
+    usual = max(s.watch.cadence.usual, (out.rules.scan_every_s or 0.0) * TICKS_PER_S)
+    before = outage.begin(last, usual, s.specimen_c, s.results.recent, rate)
+    return replace(s, outage=before, counts=out.counts), out.findings
+
+
 def _take_rules(s: TestState, fact: RulesAdopted) -> tuple[TestState, list[Finding]]:
     """Adopt rules; those that began the test are in force already, and in a recording they have no time."""
     if fact.test != s.test or (fact.rules == s.rules and not fact.stamp.boot_id):
@@ -259,7 +280,7 @@ _HANDLERS: Final[dict[type, Callable[[TestState, Any], tuple[TestState, list[Fin
     ScansTaken: _take_scans,
     EntryMade: entered.take,
     RulesAdopted: _take_rules,
-    EngineStarted: _take_stamped,
+    EngineStarted: _take_started,
     ConditionChanged: _take_stamped,
     ClockStepped: _take_stamped,
     Ticked: _take_stamped,

@@ -15,6 +15,7 @@ from daq.core.block import Conclusion
 from daq.core.causes import CausesState
 from daq.core.follow import FollowState
 from daq.core.forecast import ForecastState
+from daq.core.outage import OutageState
 from daq.core.results import ResultsState
 from daq.core.rules import TestRules, rules_from_json
 from daq.core.timebase import TimeState
@@ -46,6 +47,7 @@ class TestState:
     counts: Mapping[str, int] | None = None
     specimen_c: float | None = None
     causes: CausesState = field(default_factory=CausesState)
+    outage: OutageState | None = None
 
 
 @lru_cache(maxsize=1024)
