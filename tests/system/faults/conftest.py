@@ -16,10 +16,10 @@ from typing import Any
 import pytest
 
 sys.path.insert(0, str(Path(__file__).parents[2] / "store"))  # its cases and its child are used here too
-pytest.register_assert_rewrite("kill_cases")
+pytest.register_assert_rewrite("kill_cases", "power_cases")
 
-SHORT = {"kills": 200, "cuts": 50}
-LONG = {"kills": 10_000, "cuts": 2_000}
+SHORT = {"kills": 200, "cuts": 50, "errors": 20}
+LONG = {"kills": 10_000, "cuts": 2_000, "errors": 1_000}
 GROUPS = (
     "killed at random and at named points", "power cut", "disk full, then freed",
     "read-only, or an error on write or fsync", "damaged journal", "reader held open",
@@ -46,12 +46,20 @@ class Faults:
 
     kills: int
     cuts: int
+    errors: int
     seed: int
     tally: dict[int, dict[str, Counter[str]]] = field(default_factory=dict)
 
     def count(self, group: int, injected: str, outcome: str) -> None:
         """Count one fault of ``group`` and what came out."""
         self.tally.setdefault(group, {}).setdefault(injected, Counter())[outcome] += 1
+
+
+@pytest.fixture
+def small_journal(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Make chunks whole and checkpoints due soon, so that short lives meet them."""
+    monkeypatch.setattr("daq.store.chunks.CHUNK_SCANS", 20)
+    monkeypatch.setattr("daq.store.journal.CHECKPOINT_BYTES", 100_000)
 
 
 @pytest.fixture
@@ -64,7 +72,7 @@ def faults(request: pytest.FixtureRequest) -> Any:
         return int((LONG if long else SHORT)[name] if given is None else given)
 
     seed = int(request.config.getoption("--fault-seed", default=1))
-    faults = Faults(wanted("kills"), wanted("cuts"), seed)
+    faults = Faults(wanted("kills"), wanted("cuts"), wanted("errors"), seed)
     yield faults
     plain = {n: {kind: dict(c) for kind, c in kinds.items()} for n, kinds in faults.tally.items()}
     request.node.user_properties.append(("faults", {"seed": seed, "tally": plain}))  # goes between processes

@@ -6,6 +6,8 @@ power gone after any of the notes:
 
 - of a file, what was there at its last fsync, and of the writes since then nothing, everything, a
   beginning with the last write torn at any byte, or any of its sectors in any order;
+- where an fsync failed, what it should have brought to the disk is lost with the power, though it is still
+  read until then, and a later fsync of the same file succeeds (so does Linux: the pages are marked clean);
 - of a folder, the names as of its last fsync, and of the changes since then (made, renamed, removed)
   nothing, everything, a beginning, or any of them.
 
@@ -16,8 +18,10 @@ the same, https://www.sqlite.org/psow.html); a rename is one change; an fsync th
 
 from __future__ import annotations
 
+import errno
 import os
 import secrets
+import sqlite3
 from collections.abc import Callable, Iterator
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
@@ -60,12 +64,22 @@ class Disk:
 class Recorder:
     """Notes of everything that happens under ``root``; use it with :func:`recorded`."""
 
-    def __init__(self, root: Path) -> None:
+    def __init__(self, root: Path, before: Recorder | None = None) -> None:
         self.root = str(root)
-        self.start = Disk.read_from(root)
-        self.notes: list[Note] = []
-        self._at = {name: i for i, name in enumerate(self.start.files)}
-        self._made = len(self._at)
+        self.start = before.start if before else Disk.read_from(root)
+        self.notes: list[Note] = list(before.notes) if before else []
+        self._at = dict(before._at) if before else {name: i for i, name in enumerate(self.start.files)}
+        self._made = before._made if before else len(self._at)
+        self._sizes = {file: (root / name).stat().st_size for name, file in self._at.items()}
+        self.room: int | None = None
+        """Bytes by which files may still grow; None: as many as they like."""
+        self.failing: dict[str, int] = {}
+        """After so many more of these (``write``, ``sync``) each one fails, until the entry is taken out."""
+        self.refusals = 0
+
+    def so_far(self) -> Recorder:
+        """Return the record up to now, to go on from."""
+        return Recorder(Path(self.root), self)
 
     def say(self, what: str, value: int = 0) -> None:
         """Note something of the run itself (begun, acknowledged, opened)."""
@@ -80,6 +94,31 @@ class Recorder:
         if path == self.root:
             return ""
         return path.removeprefix(self.root + "/") if path.startswith(self.root + "/") else None
+
+    def refused(self, what: str, file: int, end: int) -> int:
+        if file < 0:
+            return 0
+        if what in self.failing:
+            self.failing[what] -= 1
+            if self.failing[what] < 0:
+                self.refusals += 1
+                if what == "sync":
+                    self.notes.append(("sync failed", file))
+                return sqlite3.SQLITE_IOERR_FSYNC if what == "sync" else sqlite3.SQLITE_IOERR_WRITE
+        growth = end - self._sizes.get(file, 0)
+        if self.room is not None and growth > 0:
+            if growth > self.room:
+                self.refusals += 1
+                return sqlite3.SQLITE_FULL
+            self.room -= growth
+        return 0
+
+    def _meet(self, what: str, file: int, end: int) -> None:
+        """Raise what a plain call is to meet."""
+        code = self.refused(what, file, end)
+        if code:
+            number = errno.ENOSPC if code == sqlite3.SQLITE_FULL else errno.EIO
+            raise OSError(number, os.strerror(number))
 
     # --- told by SQLite and by the plain calls ------------------------------------------------
 
@@ -96,10 +135,12 @@ class Recorder:
     def wrote(self, file: int, offset: int, data: bytes) -> None:
         if file >= 0:
             self.notes.append(("wrote", file, offset, data))
+            self._sizes[file] = max(self._sizes.get(file, 0), offset + len(data))
 
     def truncated(self, file: int, size: int) -> None:
         if file >= 0:
             self.notes.append(("truncated", file, size))
+            self._sizes[file] = size
 
     def synced(self, file: int) -> None:
         if file >= 0:
@@ -144,13 +185,17 @@ class Recorder:
             return fd
 
         def pwrites(fd: int, data: bytes, offset: int) -> int:
+            file = self.opened(where(fd))
+            self._meet("write", file, offset + len(data))
             n = int(usual["pwrite"](fd, data, offset))
-            self.wrote(self.opened(where(fd)), offset, bytes(data[:n]))
+            self.wrote(file, offset, bytes(data[:n]))
             return n
 
         def fsyncs(fd: int) -> None:
-            usual["fsync"](fd)
             path = where(fd)
+            if not os.path.isdir(path):
+                self._meet("sync", self.opened(path), 0)
+            usual["fsync"](fd)
             if os.path.isdir(path):
                 self.folder_synced(path + "/.")
             else:
@@ -172,11 +217,15 @@ class Recorder:
 
 
 @contextmanager
-def recorded(root: Path, random: Random) -> Iterator[Recorder]:
-    """Record what happens under ``root`` meanwhile. Names and salts that are drawn come from ``random``."""
+def recorded(root: Path, random: Random, before: Recorder | None = None) -> Iterator[Recorder]:
+    """Record what happens under ``root`` meanwhile. Names and salts that are drawn come from ``random``.
+
+    The record goes on from ``before`` where ``root`` holds a copy of that one's files: the process ended
+    there and another one began, but the power stayed on.
+    """
     listening = tap()
     assert listening is not None, "the caller skips where there is none"
-    recorder = Recorder(root)
+    recorder = Recorder(root, before)
     with ExitStack() as stack:
         stack.enter_context(listening.used(recorder, random))
         stack.enter_context(patch.object(secrets, "token_hex", lambda n: random.randbytes(n).hex()))
@@ -233,6 +282,8 @@ def _state(
             unsynced.setdefault(note[1], []).append(note)
         elif note[0] == "synced":
             content[note[1]] = _applied(content.get(note[1], b""), unsynced.pop(note[1], []))
+        elif note[0] == "sync failed":
+            unsynced.pop(note[1], None)
         elif note[0] in ("made", "folder", "removed"):
             changes.append(({os.path.dirname(note[1])}, note))
         elif note[0] == "renamed":

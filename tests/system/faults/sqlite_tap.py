@@ -34,6 +34,9 @@ class Listener(Protocol):
     def opened(self, path: str) -> int:
         """Return a number for the file at ``path``, which was perhaps just made."""
 
+    def refused(self, what: str, file: int, end: int) -> int:
+        """Return SQLite's code for the error that a ``write`` up to byte ``end``, or a ``sync``, meets."""
+
     def wrote(self, file: int, offset: int, data: bytes) -> None: ...
     def truncated(self, file: int, size: int) -> None: ...
     def synced(self, file: int) -> None: ...
@@ -134,8 +137,10 @@ class _Tap:
                 return int(close(file))
 
             def wrote(file: int, data: int, n: int, offset: int) -> int:
-                code = int(write(file, data, n, offset))
-                if code == 0 and self.listener is not None:
+                code = self.listener.refused("write", self._files[file], offset + n) if self.listener else 0
+                n = n if code == 0 else n // 2  # a write that fails may have begun
+                code = int(write(file, data, n, offset)) or code
+                if self.listener is not None:
                     self.listener.wrote(self._files[file], offset, ctypes.string_at(data, n))
                 return code
 
@@ -146,7 +151,8 @@ class _Tap:
                 return code
 
             def synced(file: int, flags: int) -> int:
-                code = int(sync(file, flags))
+                code = self.listener.refused("sync", self._files[file], 0) if self.listener else 0
+                code = code or int(sync(file, flags))
                 if code == 0 and self.listener is not None:
                     self.listener.synced(self._files[file])
                 return code

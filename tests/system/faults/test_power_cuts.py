@@ -3,22 +3,18 @@
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterator
-from contextlib import closing, contextmanager
+from contextlib import closing
 from pathlib import Path
 from random import Random
 from typing import Any
-from unittest.mock import patch
 
 import pytest
 from cut_disk import Disk, Recorder, after_cut, as_written, recorded
-from kill_cases import check
-from sqlite_tap import tap
+from power_cases import SKIP_DEAF, laid_out, survives
 from store_cases import finding, open_journal, quick_folder
 from store_child import batch_of, fact_of, write
 
 from daq.codec import encode_finding
-from daq.store import chunks, journal
 from daq.store.errors import JournalError
 from daq.store.rows import checksum, encoded
 from daq.store.schema import (
@@ -37,16 +33,7 @@ LIVES = 5
 """Power cuts that go into one record."""
 FIRST, MIGRATION, REPLACED = "first start", "migration", "replacement of a damaged file"
 
-pytestmark = pytest.mark.skipif(
-    tap() is None, reason="Python's SQLite is linked in; its calls cannot be heard"
-)
-
-
-@pytest.fixture(autouse=True)
-def _small() -> Iterator[None]:
-    """Make chunks whole and checkpoints due soon, so that short lives meet them."""
-    with patch.object(chunks, "CHUNK_SCANS", 20), patch.object(journal, "CHECKPOINT_BYTES", 100_000):
-        yield
+pytestmark = [SKIP_DEAF, pytest.mark.usefixtures("small_journal")]
 
 
 def live(folder: Path, seed: int, commits: int) -> Recorder:
@@ -59,14 +46,6 @@ def live(folder: Path, seed: int, commits: int) -> Recorder:
             acknowledged=lambda last: recorder.say("acknowledged", last),
         )  # fmt: skip
     return recorder
-
-
-@contextmanager
-def laid_out(disk: Disk) -> Iterator[Path]:
-    """A folder in memory that holds ``disk``."""
-    with quick_folder() as folder:
-        disk.write_to(folder / "disk")
-        yield folder / "disk"
 
 
 def first_disk(how: str, random: Random) -> tuple[Disk, int]:
@@ -134,15 +113,6 @@ def cut_anywhere(recorder: Recorder, random: Random) -> tuple[int, str]:
     closing = next((i for i, n in enumerate(notes) if n[:2] == ("said", "closing")), len(notes))
     upto = random.randint(0, opened) if random.random() < 0.4 else random.randint(0, len(notes))
     return upto, "opening" if upto <= opened else "work" if upto <= closing else "closing"
-
-
-def survives(disk: Disk, acked: int, begun: int, *, replaced: bool) -> int:
-    """Assert that nothing acknowledged is lost or altered on ``disk``; return the last number there."""
-    with laid_out(disk) as root, open_journal(root / "j") as j:
-        last = check(j, acked, replaced=replaced)
-        assert last in (acked, begun), "at most the open batch is lost"
-        assert replaced or not any("damaged" in notice for notice in j.notices)
-    return last
 
 
 def series(seed: int, lives: int, faults: Any) -> None:
