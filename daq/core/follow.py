@@ -40,9 +40,11 @@ BRIEF: Final = 0.1
 LASTING: Final = 0.03
 """A rise within the last tenth of the time must last for 3 % of it under the eyes of the follower: what
 drift of a few hours does in so short a stretch goes back in the next, while damage goes on."""
+LEAP: Final = 0.25
 ABRUPT_LASTS: Final = 0.5
-"""Share of the time since its onset for which a rise that came in one leap must last: stairs of jerky creep
-and a side that was stuck go on as before; damage leaps higher."""
+"""A rise that came in one leap, within the last quarter of the time, must last for this share of the time
+since its onset: after stairs of jerky creep, or of a side that was stuck, the rate is as before; damage leaps
+higher."""
 TAKEN_BACK: Final = -1.0
 BACK_LOOKS: Final = 3
 """A detection is withdrawn when at this many late looks on end the falling family fits better by a factor
@@ -254,7 +256,8 @@ def _look(s: FollowState, rules: TestRules, scan: int, tick: int, out: list[Conc
                 s = replace(s, rising_h=now, rising_since_h=since_h)
             began = now if s.rising_h is None else s.rising_h
             brief = e.since < BRIEF and now < began * (1.0 + LASTING)
-            abrupt = e.rise_ratio > verdict.ABRUPT and now - began < ABRUPT_LASTS * s.rising_since_h
+            leap = e.rise_ratio > verdict.ABRUPT and e.since < LEAP
+            abrupt = leap and now - began < ABRUPT_LASTS * s.rising_since_h
             if brief or abrupt or not verdict.has_lasted(e.log_ratio, now - began, s.rising_since_h, levels):
                 cue = None
         if cue is Cue.RATE_ROSE:
