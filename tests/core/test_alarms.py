@@ -427,7 +427,10 @@ def model_log(events: list[Cue | AlarmEntry], end: int) -> dict[str, list[tuple[
             m.before(t, held(m))
         for m in models:
             m.nag(t)
-        for key in [k for k, until in holds.items() if until is not None and until <= t]:
+        over = [
+            (until, k[1], k[2], k[0], k) for k, until in holds.items() if until is not None and until <= t
+        ]
+        for *_, key in sorted(over):  # at the same tick by name, as the machine has it
             del holds[key]
             apply(t)
         for e in events:
