@@ -16,7 +16,9 @@ from typing import Any
 import pytest
 
 sys.path.insert(0, str(Path(__file__).parents[2] / "store"))  # its cases and its child are used here too
-pytest.register_assert_rewrite("kill_cases", "power_cases")
+for _cases in ("kill_cases", "power_cases"):
+    if _cases not in sys.modules:  # the tests of the store may have come first
+        pytest.register_assert_rewrite(_cases)
 
 SHORT = {"kills": 200, "cuts": 50, "errors": 20}
 LONG = {"kills": 10_000, "cuts": 2_000, "errors": 1_000}
