@@ -32,9 +32,9 @@ def draw(figures: Mapping[str, Any], title: str, own_share: float, path: Path) -
     canvas_of: Any = importlib.import_module("matplotlib.backends.backend_agg").FigureCanvasAgg
     ticker: Any = importlib.import_module("matplotlib.ticker")
     floor = 100.0 * 0.4 / max(figures["rigs"], 1)  # zero has no place on a logarithmic axis: below one rig
-    figure = figure_of(figsize=(8.0, 5.2), dpi=150, layout="constrained")
+    figure = figure_of(figsize=(8.0, 5.2), dpi=150)
     canvas_of(figure)
-    axes = figure.add_subplot()
+    axes = figure.add_axes((0.1, 0.11, 0.86, 0.8))
     axes.set_yscale("log")
     told = [x["delay_over_best"][k] for x in figures["levels"] for k in ("median", "high_90")]
     near = NEAR * (max((d for d in told if d is not None), default=1.0) - 0.95)
