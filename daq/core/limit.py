@@ -256,9 +256,7 @@ def _pivot(matrix: FloatArray, rises: FloatArray, free: BoolArray) -> FloatArray
     raise CoreError(f"limit: got no solution for {n} blocks, wanted one; the noise covariance is degenerate")
 
 
-def block_covariance(
-    first_s: FloatArray, last_s: FloatArray, counts: FloatArray, noise: Noise
-) -> FloatArray:
+def block_covariance(first_s: FloatArray, last_s: FloatArray, counts: FloatArray, noise: Noise) -> FloatArray:
     """Return the covariance (k, k) of block means; scans count as evenly spread within their block."""
     out: FloatArray = np.diag(noise.scan_variance / counts)
     gap = np.maximum(first_s[None, :] - last_s[:, None], 0.0)
