@@ -42,11 +42,12 @@ RAMPS: Final = (0.03, 0.06, 0.12, 0.2, 0.3, 0.42, 0.55, 0.7, 0.85, 1.0)
 
 UNSEEN_SDS: Final = 2.0
 UNSEEN_LEAST: Final = 3.0
-GAP_TIMES: Final = 5.0
 """S.d. of a step that cleaning did not find: so many s.d. of one scan, and microstrain at least. Medians of a
 few scans on both sides show anything above three or four."""
 UNSEEN_IN_GAP: Final = 300.0
 """The same [microstrain] across a gap: people come, mains come back, and no reading shows the jump."""
+GAP_TIMES: Final = 5.0
+"""An interval between blocks this many times the usual one of scans is a gap (as in ``core.leaves``)."""
 UNSEEN: Final = 0.1
 """Share of tests with such a step (common practice, no source)."""
 PER_SPECIMEN_K: Final = 30.0
@@ -409,7 +410,7 @@ def weigh(d: Design, start: tuple[float, float] | None = None) -> Evidence:
 
 def _step_gain(d: Design, cells: list[_Cell], like: Callable[[float, FloatArray], FloatArray]) -> float:
     """Return how much better [log] a falling rate fits where one test in ten has a step that nobody saw, of a
-    size and at a place averaged over; never below log(1 - UNSEEN), as good as zero."""
+    size and at a place averaged over; never below zero."""
     f = d.free.shape[1]
     per_cell = []
     precision = (d.sd / d.step_sd) ** 2

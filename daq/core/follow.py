@@ -337,7 +337,7 @@ def _fell_on(s: FollowState, scan: int, tick: int, out: list[Conclusion]) -> Fol
         f"over the last half of the time the rate fell by {-100 * known[0]:.0f} % "
         f"+- {100 * estimate.Z90 * known[1]:.0f} %: it was not steady yet"
     )
-    return _move(s, Cue.RATE_FELL_ON, scan, tick, 0.0, None, why, out)
+    return _move(s, Cue.RATE_FELL_ON, scan, tick, s.window_h, None, why, out)
 
 
 def _fit_least(s: FollowState, rules: TestRules) -> tuple[Minimum, float | None] | None:

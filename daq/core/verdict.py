@@ -17,7 +17,7 @@ from daq.core.stages import Cue, Stage
 BEYOND_VILLE: Final = 5.0
 """What is asked beyond log(1/alpha) of evidence that is to be believed at once, because the noise model and
 the family of curves are fitted: from campaigns."""
-LASTING: Final = 2.0
+BEYOND_IF_LASTING: Final = 2.0
 """What is asked beyond log(1/alpha) of evidence that is to be believed if it lasts: from campaigns."""
 FALLING: Final = 1.0
 """And more of it while the rate has never been steady: unmodelled primary creep feigns most."""
@@ -71,7 +71,7 @@ def _settled(e: Evidence, high: float) -> bool:
 def levels(false_share: float) -> tuple[float, float]:
     """Return the evidence that is believed if it lasts, and the one that is believed at once."""
     ville = float(np.log(1.0 / false_share))
-    return ville + LASTING, ville + BEYOND_VILLE
+    return ville + BEYOND_IF_LASTING, ville + BEYOND_VILLE
 
 
 def has_lasted(log_ratio: float, held_h: float, since_onset_h: float, levels: tuple[float, float]) -> bool:
