@@ -83,7 +83,7 @@ def run(rules: TestRules, block: Block, cuts: list[int], stage: str) -> tuple[by
     return encode_state(state), out
 
 
-@pytest.mark.parametrize("seed", range(8))
+@pytest.mark.parametrize("seed", range(12))
 def test_neither_state_nor_findings_depend_on_cuts(seed: int) -> None:
     """A replay feeds thousands of scans, the live daemon one; both must say the same, to the last bit."""
     rules, block, stage = eventful(seed)
